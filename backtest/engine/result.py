@@ -1,0 +1,353 @@
+"""What a replay gives back: wealth at once, everything else when it is asked for."""
+
+from __future__ import annotations
+
+from collections.abc import Iterator, Sequence
+from dataclasses import dataclass
+from functools import cached_property
+from typing import TYPE_CHECKING
+
+import numpy as np
+import numpy.typing as npt
+
+from ..calendar import Schedule
+from ..market import Market
+from ..overlay import Leg, Overlay
+from ..volatility.sources import Volatility
+from .accounts import Accounts, BookRolls, FamilyState
+from .legs import LegPaths
+from .plan import BookKey, Family, Plan
+
+if TYPE_CHECKING:
+    import pandas as pd
+
+Array = npt.NDArray[np.float64]
+
+
+@dataclass(frozen=True, slots=True, kw_only=True, eq=False)
+class LegReplay:
+    """One leg of one replay.
+
+    Arrays of shape ``(roll,)`` unless said otherwise; prices are per option, ``units`` per 1 of starting
+    wealth. ``close_value`` is intrinsic where the option settled, the model's mid where it was closed early
+    or is still live.
+    """
+
+    label: str
+    leg: Leg
+    schedule: Schedule
+    opened: npt.NDArray[np.intp]  # counted from the first day of the replay
+    closed: npt.NDArray[np.intp]
+    stub: bool
+    strike: Array
+    forward: Array
+    vol: Array
+    premium: Array
+    delta: Array
+    open_cost: Array
+    close_value: Array
+    exit_cost: Array
+    units: Array
+    daily_strike: Array  # (day,)
+    daily_mark: Array  # (day,)
+    daily_delta: Array  # (day,), spot delta of one option, unsigned by position
+
+    @property
+    def signed_ratio(self) -> float:
+        """Options per unit, negative when sold."""
+        return self.leg.direction * self.leg.ratio
+
+    @property
+    def profit(self) -> Array:
+        """Profit of each option held per unit, signed, after its costs; a live one at its mark."""
+        return self.signed_ratio * (self.close_value - self.premium) - self.leg.ratio * (
+            self.open_cost + self.exit_cost
+        )
+
+    def flags(self) -> list[str]:
+        """A word for each roll that is not the ordinary case."""
+        words: list[list[str]] = [[] for _ in self.opened]
+        if self.stub:
+            words[0].append("stub")
+        if self.leg.direction < 0:
+            for roll in np.flatnonzero(self.premium < self.open_cost):
+                words[int(roll)].append("proceeds below zero")
+        words[-1].append("open")
+        return ["; ".join(w) for w in words]
+
+
+class Replay:
+    """One overlay replayed on one market.
+
+    Attributes
+    ----------
+    market, overlay, volatility
+        What was replayed.
+    wealth : ndarray, shape (day,)
+        Growth of 1 after each day's trades; exactly 1 on the first day, whose trading costs show in the
+        next day's return. NaN from the day on which nothing is left.
+    """
+
+    def __init__(
+        self, *, plan: Plan, family: Family, state: FamilyState, accounts: Accounts, member: int, overlay: Overlay,
+        volatility: Volatility, legs: list[LegPaths], book_rolls: list[BookRolls],
+    ) -> None:  # fmt: skip
+        self.market: Market = plan.market
+        self.overlay = overlay
+        self.volatility = volatility
+        self.wealth: Array = accounts.wealth[member]
+        self._plan = plan
+        self._family = family
+        self._state = state
+        self._accounts = accounts
+        self._member = member
+        self._leg_paths = legs
+        self._book_rolls = book_rolls
+
+    def __len__(self) -> int:
+        return len(self.wealth)
+
+    def __repr__(self) -> str:
+        name = self.overlay.name or "overlay"
+        return f"<Replay {name}: {self.dates[0]} to {self.dates[-1]}, growth of 1 to {self.wealth[-1]:.4f}>"
+
+    @property
+    def window(self) -> slice:
+        """The replay's days in the market's arrays."""
+        return slice(self._plan.start, self._plan.end + 1)
+
+    @property
+    def dates(self) -> npt.NDArray[np.datetime64]:
+        """Trading days from inception to the end, shape ``(day,)``."""
+        return self.market.dates[self.window]
+
+    @property
+    def spot(self) -> Array:
+        """Closing prices, shape ``(day,)``."""
+        return self._state.spot
+
+    @property
+    def hold(self) -> Array:
+        """Growth of 1 in the share alone, dividends reinvested, shape ``(day,)`` (C10)."""
+        return self._state.share_growth * (self._state.spot / self._state.spot[0])
+
+    @cached_property
+    def rate_return(self) -> Array:
+        """Return on cash of each day at the previous day's rate, shape ``(day,)``; zero on the first (C11)."""
+        growth = self._state.cash_growth
+        return np.concatenate([[0.0], growth[1:] / growth[:-1] - 1.0])
+
+    @cached_property
+    def units(self) -> Array:
+        """Units held after each day's trades, per 1 of starting wealth, shape ``(day,)``."""
+        return self._accounts.units[self._member].take(self._state.anchor_of_day)
+
+    @cached_property
+    def shares(self) -> Array:
+        """Shares held after each day's trades, shape ``(day,)``."""
+        if self.overlay.account == "resize":
+            return self.units * self._state.shares
+        return self._state.share_growth / self._state.spot[0]
+
+    @cached_property
+    def cash(self) -> Array:
+        """Cash after each day's trades, shape ``(day,)``; on the first day the trading costs have left it."""
+        total = np.zeros(len(self))
+        for leg, number in zip(self.overlay.legs, self._rows, strict=True):
+            total += leg.ratio * self._book_rolls[number].cash
+        return total * (self.units if self.overlay.account == "resize" else 1.0 / self._state.spot[0])
+
+    @cached_property
+    def option_value(self) -> Array:
+        """Value of all options at mid after each day's trades, shape ``(day,)``."""
+        return self.leg_value.sum(axis=0)
+
+    @cached_property
+    def leg_value(self) -> Array:
+        """Signed value of each leg at mid after each day's trades, shape ``(leg, day)``."""
+        return np.array([self.units * leg.signed_ratio * leg.daily_mark for leg in self.legs])
+
+    @cached_property
+    def leg_dollar_delta(self) -> Array:
+        """Signed spot delta of each leg times spot, over wealth, shape ``(leg, day)``."""
+        scale = self.units * self.spot / self.wealth
+        return np.array([scale * leg.signed_ratio * leg.daily_delta for leg in self.legs])
+
+    @cached_property
+    def delta(self) -> Array:
+        """Dollar delta of the whole package over wealth after each day's trades, shape ``(day,)``."""
+        return self.shares * self.spot / self.wealth + self.leg_dollar_delta.sum(axis=0)
+
+    @cached_property
+    def leg_profit(self) -> Array:
+        """Profit at mid of each leg over each day, before costs, shape ``(leg, day)``; zero on the first."""
+        profit = np.zeros((len(self.legs), len(self)))
+        for row, leg in enumerate(self.legs):
+            # the option held overnight is worth its mark, or what it settles or sells for on a roll day
+            ending = leg.daily_mark.copy()
+            ending[leg.opened[1:]] = leg.close_value[:-1]
+            profit[row, 1:] = self.units[:-1] * leg.signed_ratio * (ending[1:] - leg.daily_mark[:-1])
+        return profit
+
+    @cached_property
+    def stock_profit(self) -> Array:
+        """Profit of the shares over each day, dividends included, shape ``(day,)``; zero on the first."""
+        growth = self.hold
+        profit = np.zeros(len(self))
+        profit[1:] = self.shares[:-1] * self.spot[:-1] * (growth[1:] / growth[:-1] - 1.0)
+        return profit
+
+    @cached_property
+    def interest(self) -> Array:
+        """Interest on cash over each day, shape ``(day,)``."""
+        profit = np.zeros(len(self))
+        profit[1:] = self.cash[:-1] * self.rate_return[1:]
+        return profit
+
+    @cached_property
+    def trading_cost(self) -> Array:
+        """Spread, commission and stock cost paid on each day, shape ``(day,)``, positive."""
+        cost = np.zeros(len(self))
+        before = np.concatenate([self.units[:1], self.units[:-1]])
+        for leg in self.legs:
+            cost[leg.opened] += self.units[leg.opened] * leg.leg.ratio * leg.open_cost
+            cost[leg.opened[1:]] += before[leg.opened[1:]] * leg.leg.ratio * leg.exit_cost[:-1]
+        cost[self._state.anchor_day] += self._accounts.stock_cost[self._member]
+        return cost
+
+    @cached_property
+    def legs(self) -> tuple[LegReplay, ...]:
+        """The legs, in the overlay's order."""
+        return tuple(
+            self._leg(label, leg, number)
+            for label, leg, number in zip(leg_labels(self.overlay), self.overlay.legs, self._rows, strict=True)
+        )
+
+    @property
+    def _rows(self) -> tuple[int, ...]:
+        return self._family.holdings[self._member]
+
+    def _leg(self, label: str, leg: Leg, number: int) -> LegReplay:
+        key: BookKey = list(self._family.books)[number]
+        paths, rolls, row = self._leg_paths[key.group], self._book_rolls[number], key.row
+        schedule = paths.group.schedule
+        opened = schedule.opened - self._plan.start
+        return LegReplay(
+            label=label,
+            leg=leg,
+            schedule=schedule,
+            opened=opened,
+            closed=schedule.closed - self._plan.start,
+            stub=not np.isin(self._plan.start, leg.cycle.roll_positions(self.market.dates)),
+            strike=paths.strike[row],
+            forward=paths.forward_open,
+            vol=paths.vol_open[row],
+            premium=paths.premium[row],
+            delta=paths.delta_open[row],
+            open_cost=rolls.open_cost,
+            close_value=paths.close_value[row],
+            exit_cost=rolls.exit_cost,
+            units=self.units[opened],
+            daily_strike=paths.strike[row, paths.roll_of_day],
+            daily_mark=paths.mark[row],
+            daily_delta=paths.delta[row],
+        )
+
+    def to_frame(self) -> pd.DataFrame:
+        """Daily paths as a pandas frame indexed by ``date`` (C14, without the mixes).
+
+        Columns: ``overlay``, ``hold`` (growth of 1), ``delta`` (dollar delta over wealth), ``cash``,
+        ``option_value``, ``shares``, ``units`` (per 1 of starting wealth), and for each leg
+        ``<leg>_strike`` and ``<leg>_mark`` in price.
+        """
+        import pandas as pd
+
+        columns = {
+            "overlay": self.wealth,
+            "hold": self.hold,
+            "delta": self.delta,
+            "cash": self.cash,
+            "option_value": self.option_value,
+            "shares": self.shares,
+            "units": self.units,
+        }
+        for leg in self.legs:
+            columns[f"{leg.label}_strike"] = leg.daily_strike
+            columns[f"{leg.label}_mark"] = leg.daily_mark
+        return pd.DataFrame(columns, index=pd.DatetimeIndex(self.dates.astype("datetime64[ns]"), name="date"))
+
+    def rolls_frame(self) -> pd.DataFrame:
+        """A row per option opened, in order of opening then leg (C14).
+
+        ``cost`` and ``exit_cost`` are per option, ``profit`` per unit, signed and after costs. An option
+        still live has no ``closed``, ``spot_close`` or ``settled``; its mark stands in ``open_value``, and
+        its profit is at that mark.
+        """
+        import pandas as pd
+
+        frames = []
+        for order, leg in enumerate(self.legs):
+            live = leg.schedule.live
+            closed = self.dates[leg.closed].astype("datetime64[ns]")
+            closed[live] = np.datetime64("NaT")
+            frames.append(
+                pd.DataFrame(
+                    {
+                        "leg": leg.label,
+                        "right": leg.leg.right,
+                        "position": leg.leg.position,
+                        "ratio": float(leg.leg.ratio),
+                        "opened": self.dates[leg.opened].astype("datetime64[ns]"),
+                        "expiry": leg.schedule.expiry_day.astype("datetime64[D]").astype("datetime64[ns]"),
+                        "closed": closed,
+                        "spot_open": self.spot[leg.opened],
+                        "forward": leg.forward,
+                        "strike": leg.strike,
+                        "vol": leg.vol,
+                        "premium": leg.premium,
+                        "cost": leg.open_cost,
+                        "units": leg.units,
+                        "delta": leg.delta,
+                        "spot_close": np.where(live, np.nan, self.spot[leg.closed]),
+                        "settled": np.where(live, np.nan, leg.close_value),
+                        "exit_cost": np.where(live, np.nan, leg.exit_cost),
+                        "open_value": np.where(live, leg.close_value, np.nan),
+                        "profit": leg.profit,
+                        "flag": leg.flags(),
+                        "_order": order,
+                    }
+                )
+            )
+        rolls = pd.concat(frames, ignore_index=True).sort_values(["opened", "_order"], kind="stable")
+        return rolls.drop(columns="_order").reset_index(drop=True)
+
+
+class Replays(Sequence[Replay]):
+    """The replays of many overlays, in the caller's order."""
+
+    def __init__(self, replays: list[Replay]) -> None:
+        self._replays = replays
+
+    def __len__(self) -> int:
+        return len(self._replays)
+
+    def __getitem__(self, index):  # type: ignore[no-untyped-def]  # int or slice, as in any sequence
+        found = self._replays[index]
+        return Replays(found) if isinstance(index, slice) else found
+
+    def __iter__(self) -> Iterator[Replay]:
+        return iter(self._replays)
+
+    def __repr__(self) -> str:
+        return f"<Replays of {len(self)} overlays>"
+
+
+def leg_labels(overlay: Overlay) -> list[str]:
+    """``put`` and ``call``, numbered where a right occurs more than once."""
+    rights = [leg.right for leg in overlay.legs]
+    seen: dict[str, int] = {}
+    labels = []
+    for right in rights:
+        seen[right] = seen.get(right, 0) + 1
+        labels.append(right if rights.count(right) == 1 else f"{right}_{seen[right]}")
+    return labels

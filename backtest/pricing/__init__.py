@@ -1,0 +1,1 @@
+"""Option formulas: arrays in, arrays out, no dates and no markets."""

@@ -1,0 +1,18 @@
+"""Where the volatility of an option comes from (C7): source, quote conversion, smile."""
+
+from .smile import FLAT, INDEX, MILD, SMILE_LADDER, STEEP, FlatSmile, Smile, SSVISmile
+from .sources import ImpliedSeries, RealisedVolatility, Volatility
+
+__all__ = [
+    "FLAT",
+    "INDEX",
+    "MILD",
+    "SMILE_LADDER",
+    "STEEP",
+    "FlatSmile",
+    "ImpliedSeries",
+    "RealisedVolatility",
+    "SSVISmile",
+    "Smile",
+    "Volatility",
+]
