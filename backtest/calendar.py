@@ -21,6 +21,9 @@ Positions = npt.NDArray[np.intp]
 #: Months between the rolls of each named cycle (C2).
 ROLL_MONTHS = {"month": 1, "quarter": 3, "half": 6, "year": 12}
 
+#: A cycle moves by a year of trading days at most.
+LARGEST_SHIFT_DAYS = 252
+
 _EPOCH_WEEKDAY = 3  # 1970-01-01 was a Thursday; Monday is 0
 _FRIDAY = 4
 
@@ -43,18 +46,27 @@ def third_friday(month: npt.ArrayLike) -> Dates:
     return (first.astype(np.int64) + (_FRIDAY - weekday) % 7 + 14).astype("datetime64[D]")
 
 
-def listed_expiry(dates: Dates, month: npt.ArrayLike) -> tuple[Dates, Positions]:
+def listed_expiry(dates: Dates, month: npt.ArrayLike, shift_days: int = 0) -> tuple[Dates, Positions]:
     """Expiry date of the listed cycle for each month, and its position (C2).
 
     A third Friday that is not a trading day but lies inside the range of ``dates``
     moves to the last trading day before it; one after the last date is taken as it
-    falls and has the position ``len(dates)``; one before the first has -1.
+    falls and has the position ``len(dates)``; one before the first has -1. ``shift_days``
+    then moves every date by that many trading days; outside the file, weekdays stand for them.
     """
     friday = third_friday(month)
-    position = np.searchsorted(dates, friday, side="right") - 1
-    after = friday > dates[-1]
-    expiry = np.where(after | (position < 0), friday, dates[np.clip(position, 0, None)])
-    return expiry, np.where(after, len(dates), position)
+    last = len(dates) - 1
+    # a count of trading days that goes on past both ends of the file, where weekdays stand in
+    count = np.searchsorted(dates, friday, side="right").astype(np.int64) - 1
+    after, before = friday > dates[-1], friday < dates[0]
+    count[after] = last + np.busday_count(dates[-1], friday[after])
+    count[before] = -np.busday_count(friday[before], dates[0])
+    count += shift_days
+    inside = (count >= 0) & (count <= last)
+    expiry = np.where(inside, dates[np.clip(count, 0, last)], friday)
+    late = count > last
+    expiry[late] = np.busday_offset(dates[-1], count[late] - last, roll="backward")
+    return expiry, np.where(late, last + 1, np.where(inside, count, -1))
 
 
 @dataclass(frozen=True, slots=True, kw_only=True)
@@ -62,7 +74,8 @@ class ListedCycle:
     """Third Fridays of every ``months``-th month, moved by ``phase`` months (C2).
 
     ``months=3`` is March, June, September and December; with ``phase=1`` it is
-    January, April, July and October.
+    January, April, July and October. ``shift_days`` moves every date by that many
+    trading days.
 
     Raises
     ------
@@ -72,6 +85,7 @@ class ListedCycle:
 
     months: int
     phase: int = 0
+    shift_days: int = 0
 
     def __post_init__(self) -> None:
         if self.months not in ROLL_MONTHS.values():
@@ -79,6 +93,7 @@ class ListedCycle:
                 f"a listed cycle rolls every 1, 3, 6 or 12 months, not every {self.months!r}", field="roll"
             )
         whole_number("phase", self.phase, least=0, most=self.months - 1, unit=f" for a cycle of {self.months} month(s)")
+        whole_number("shift_days", self.shift_days, least=-LARGEST_SHIFT_DAYS, most=LARGEST_SHIFT_DAYS)
 
     def month_numbers(self, first: int, last: int) -> npt.NDArray[np.int64]:
         """The cycle's months from ``first`` to ``last`` inclusive, as months since January 1970."""
@@ -129,7 +144,7 @@ def leg_schedule(dates: Dates, *, cycle: ListedCycle, term_months: int, start: i
     open_month = np.concatenate([[first_month], month[inside]])
     opened = np.concatenate([[start], position[inside]])
     closed = np.concatenate([opened[1:], [end]])
-    expiry, expiry_position = listed_expiry(dates, open_month + term_months)
+    expiry, expiry_position = listed_expiry(dates, open_month + term_months, cycle.shift_days)
     live = np.zeros(len(opened), dtype=bool)
     live[-1] = True
     settles = (expiry_position <= closed) & ~live
@@ -162,9 +177,7 @@ def inception_position(dates: Dates, *, cycle: ListedCycle, earliest: int, lates
 
 def _roll_months(dates: Dates, cycle: ListedCycle) -> tuple[npt.NDArray[np.int64], Positions]:
     """Months of the cycle whose date lies in the file, with their positions."""
-    first, last = (int(d.astype("datetime64[M]").astype(np.int64)) for d in (dates[0], dates[-1]))
-    month = cycle.month_numbers(first, last)
-    _, position = listed_expiry(dates, month)
+    month, position = _months_around(dates, cycle)
     inside = (position >= 0) & (position < len(dates))
     month, position = month[inside], position[inside]
     # a hole of weeks in the price file can put two cycle dates on one day: that is one roll, of the later month
@@ -173,7 +186,15 @@ def _roll_months(dates: Dates, cycle: ListedCycle) -> tuple[npt.NDArray[np.int64
 
 
 def _first_month_after(dates: Dates, cycle: ListedCycle) -> int:
-    """The cycle's first month whose third Friday lies after the last date."""
-    last = int(dates[-1].astype("datetime64[M]").astype(np.int64))
-    month = cycle.month_numbers(last, last + cycle.months)
-    return int(month[third_friday(month) > dates[-1]][0])
+    """The cycle's first month whose date lies after the last one."""
+    month, position = _months_around(dates, cycle)
+    return int(month[position == len(dates)][0])
+
+
+def _months_around(dates: Dates, cycle: ListedCycle) -> tuple[npt.NDArray[np.int64], Positions]:
+    """The cycle's months over the file and as far beyond as its shift reaches, with their positions."""
+    first, last = (int(d.astype("datetime64[M]").astype(np.int64)) for d in (dates[0], dates[-1]))
+    # a month has at least 20 weekdays; one cycle more on each side holds the roll before and the roll after
+    reach = cycle.months + 1 + abs(cycle.shift_days) // 20
+    month = cycle.month_numbers(first - reach, last + reach)
+    return month, listed_expiry(dates, month, cycle.shift_days)[1]

@@ -51,6 +51,8 @@ class Market:
         Calendar days of each row, increasing.
     day_number : ndarray of int64, shape (day,)
         Days since 1970-01-01.
+    log_spot : ndarray, shape (day,)
+        Natural logarithm of ``spot``.
     cash_growth, share_growth : ndarray, shape (day,)
         Growth since the first day of one unit of cash, ``exp(r_{t-1} days/365)`` a day, and of the number
         of shares, ``1 + d/S`` at each ex-date close (C9, C11).
@@ -66,6 +68,7 @@ class Market:
     day_number: npt.NDArray[np.int64] = field(init=False)
     cash_growth: Array = field(init=False)
     share_growth: Array = field(init=False)
+    log_spot: Array = field(init=False)
 
     def __post_init__(self) -> None:
         _check_arrays(self)
@@ -74,6 +77,7 @@ class Market:
         # a day without a rate lies before the usable span: it must not spoil the product behind it
         earned = np.concatenate([[0.0], np.nan_to_num(self.rate[:-1])]) * days / DAYS_IN_YEAR
         object.__setattr__(self, "day_number", day_number)
+        object.__setattr__(self, "log_spot", np.log(self.spot))
         object.__setattr__(self, "cash_growth", np.cumprod(np.exp(earned)))
         object.__setattr__(self, "share_growth", np.cumprod(1.0 + self.dividend / self.spot))
         for name in ("dates", "spot", "dividend", "rate", "dividend_yield", "vol_quotes", "vol_tenor_days"):

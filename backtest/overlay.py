@@ -37,6 +37,8 @@ class Leg:
         Life of each option when opened, at least the roll; the roll itself if not given.
     phase : int
         Moves the roll months, from 0 to one less than the months of the roll.
+    shift_days : int
+        Moves every date of the cycle by that many trading days (C2).
     ratio : float
         Options per share, at least zero.
 
@@ -52,6 +54,7 @@ class Leg:
     roll: str = "quarter"
     term_months: int | None = None
     phase: int = 0
+    shift_days: int = 0
     ratio: float = 1.0
     cycle: ListedCycle = field(init=False, repr=False, compare=False)
 
@@ -63,7 +66,8 @@ class Leg:
             raise OverlayError(
                 f"strike is {self.strike!r}; give a strike rule such as PercentOfSpot(95)", field="strike"
             )
-        object.__setattr__(self, "cycle", ListedCycle(months=ROLL_MONTHS[self.roll], phase=self.phase))
+        cycle = ListedCycle(months=ROLL_MONTHS[self.roll], phase=self.phase, shift_days=self.shift_days)
+        object.__setattr__(self, "cycle", cycle)
         if self.term_months is None:
             object.__setattr__(self, "term_months", self.cycle.months)
         whole_number(

@@ -7,7 +7,7 @@ are left out of them. A figure that cannot be had (no variation, too few months)
 
 from __future__ import annotations
 
-from dataclasses import dataclass, field
+from dataclasses import dataclass
 
 import numpy as np
 import numpy.typing as npt
@@ -57,7 +57,7 @@ class Performance:
     expected_shortfall_monthly: float
     skewness: float
     excess_kurtosis: float
-    months: int = field(default=0)
+    months: int
 
 
 def performance(wealth: Array, *, dates: Dates, rate_return: Array, hold: Array) -> Performance:
@@ -76,7 +76,7 @@ def performance(wealth: Array, *, dates: Dates, rate_return: Array, hold: Array)
     deepest = deepest_drawdown(wealth)
     annual = annual_return(wealth, dates)
     beta = regression_beta(excess, hold_excess)
-    monthly = _monthly_figures(wealth, dates=dates, rate_return=rate_return, hold=hold)
+    months, monthly = _monthly_figures(wealth, dates=dates, rate_return=rate_return, hold=hold)
     return Performance(
         annual_return=annual,
         volatility=float(annual_volatility(returns)),
@@ -91,6 +91,7 @@ def performance(wealth: Array, *, dates: Dates, rate_return: Array, hold: Array)
         beta=beta,
         alpha=float(TRADING_DAYS * (np.mean(excess) - beta * np.mean(hold_excess))),
         expected_shortfall_daily=expected_shortfall(returns),
+        months=months,
         **monthly,
     )
 
@@ -191,8 +192,8 @@ def _date(dates: Dates, position: int | None) -> np.datetime64 | None:
     return None if position is None else dates[position]
 
 
-def _monthly_figures(wealth: Array, *, dates: Dates, rate_return: Array, hold: Array) -> dict[str, float]:
-    """The figures of C11 that stand on monthly returns."""
+def _monthly_figures(wealth: Array, *, dates: Dates, rate_return: Array, hold: Array) -> tuple[int, dict[str, float]]:
+    """The number of whole months, and the figures of C11 that stand on monthly returns."""
     own = monthly_returns(wealth, dates=dates, rate_return=rate_return)
     market = monthly_returns(hold, dates=dates, rate_return=rate_return)
     names = (
@@ -200,9 +201,9 @@ def _monthly_figures(wealth: Array, *, dates: Dates, rate_return: Array, hold: A
         "expected_shortfall_monthly", "skewness", "excess_kurtosis",
     )  # fmt: skip
     figures: dict[str, float] = dict.fromkeys(names, float("nan"))
-    figures["months"] = len(own.returns)
-    if len(own.returns) < FEWEST_MONTHS or not np.isfinite(own.returns).all():
-        return figures
+    months = len(own.returns)
+    if months < FEWEST_MONTHS or not np.isfinite(own.returns).all():
+        return months, figures
     figures["leland_beta"], figures["leland_alpha"] = leland(own.returns, market.returns, own.cash)
     log_excess = np.log1p(own.returns) - np.log1p(own.cash)
     figures["stutzer"] = stutzer_index(log_excess)
@@ -213,7 +214,7 @@ def _monthly_figures(wealth: Array, *, dates: Dates, rate_return: Array, hold: A
     if np.std(log_returns) > 1e-12:
         figures["skewness"] = float(stats.skew(log_returns, bias=False))
         figures["excess_kurtosis"] = float(stats.kurtosis(log_returns, bias=False))
-    return figures
+    return months, figures
 
 
 def leland(returns: Array, market: Array, cash: Array) -> tuple[float, float]:

@@ -44,6 +44,11 @@ class RollCosts:
     years: float
     legs: tuple[LegCosts, ...]
 
+    @property
+    def net_a_year(self) -> float:
+        """What all legs brought a year after costs, decimal of spot; negative when they cost."""
+        return sum(leg.net for leg in self.legs) / self.years
+
     def as_dict(self) -> dict[str, object]:
         """Per leg and in all, sums, a year, and a roll; decimals of spot."""
         total = {name: sum(getattr(leg, name) for leg in self.legs) for name in MONEY_FIELDS}

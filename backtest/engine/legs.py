@@ -36,6 +36,7 @@ class DayState:
     growth: Array
     tau_years: Array
     smile: SmileSlice
+    vol_shift: float
 
     @property
     def root_tau(self) -> Array:
@@ -44,7 +45,15 @@ class DayState:
 
     def stdev(self, strike: Array) -> Array:
         """Total standard deviation at each strike, shape ``(leg, day)``."""
-        return np.sqrt(self.smile.total_variance(np.log(strike) - self.log_forward))
+        return self.stdev_at(np.log(strike) - self.log_forward)
+
+    def stdev_at(self, log_moneyness: Array) -> Array:
+        """Total standard deviation at each ``ln(K/F)``; NaN where the shift leaves no vol."""
+        stdev: Array = np.sqrt(self.smile.total_variance(log_moneyness))
+        if self.vol_shift != 0.0:
+            stdev = stdev + self.vol_shift * self.root_tau
+            stdev[stdev <= 0.0] = np.nan
+        return stdev
 
 
 def day_state(market: Market, group: PricingGroup, day: Days | slice, expiry_day: npt.NDArray[np.int64]) -> DayState:
@@ -53,16 +62,22 @@ def day_state(market: Market, group: PricingGroup, day: Days | slice, expiry_day
     A slice of days is looked at in place; positions are gathered.
     """
     tau = (expiry_day - market.day_number[day]) / DAYS_IN_YEAR
-    discount = np.exp(-market.rate[day] * tau)
-    growth = np.exp(-market.dividend_yield[day] * tau)
-    forward = market.spot[day] * (growth / discount)
+    # in place where it can be: on a few thousand days numpy's overhead is a good part of the cost
+    interest, carry = market.rate[day] * tau, market.dividend_yield[day] * tau
+    discount, growth = np.exp(-interest), np.exp(-carry)
+    forward = market.spot[day] * growth
+    forward /= discount
+    log_forward = interest
+    log_forward -= carry
+    log_forward += market.log_spot[day]
     return DayState(
         forward=forward,
-        log_forward=np.log(forward),
+        log_forward=log_forward,
         discount=discount,
         growth=growth,
         tau_years=tau,
         smile=group.volatility.slice(day, tau),
+        vol_shift=group.vol_shift,
     )
 
 
@@ -117,7 +132,8 @@ def price_group(plan: Plan, group: PricingGroup) -> LegPaths:
     """Price all legs of a group over the plan's window."""
     market, rolls = plan.market, group.schedule
     window = slice(plan.start, plan.end + 1)
-    roll_of_day = np.repeat(np.arange(len(rolls.opened)), np.diff(rolls.opened, append=plan.end + 1))
+    days_held = np.append(rolls.opened[1:], plan.end + 1) - rolls.opened
+    roll_of_day = np.repeat(np.arange(len(rolls.opened)), days_held)
     signs = np.array(group.signs)[:, np.newaxis]
 
     opens = day_state(market, group, rolls.opened, rolls.expiry_day)
@@ -175,7 +191,7 @@ def _marks(daily: DayState, strike: Array, roll_of_day: Days, signs: Array) -> t
         rows = slice(first, first + step)
         log_moneyness = log_strike[rows].take(roll_of_day, axis=1)
         log_moneyness -= daily.log_forward
-        stdev = np.sqrt(daily.smile.total_variance(log_moneyness))
+        stdev = daily.stdev_at(log_moneyness)
         value, forward_delta = black_with_delta(
             daily.forward, strike[rows].take(roll_of_day, axis=1), log_moneyness, stdev, signs[rows]
         )

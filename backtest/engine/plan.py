@@ -29,10 +29,14 @@ SHORT_TENOR_DAYS = 120
 
 @dataclass(frozen=True, slots=True, kw_only=True, eq=False)
 class PricingGroup:
-    """Distinct legs with the same rolls and the same volatility; they share all that depends on the day alone."""
+    """Distinct legs with the same rolls and the same volatility; they share all that depends on the day alone.
+
+    ``vol_shift`` is added to every vol, decimal.
+    """
 
     schedule: Schedule
     volatility: BoundVolatility
+    vol_shift: float = 0.0
     rules: list[StrikeRule] = field(default_factory=list)
     signs: list[float] = field(default_factory=list)
 
@@ -120,7 +124,7 @@ class _PlanBuilder:
         self.plan = Plan(market=market, start=start, end=end, groups=[], families=[])
         self._bound = bound
         self._schedules: dict[tuple[ListedCycle, int], Schedule] = {}
-        self._groups: dict[tuple[ListedCycle, int, Volatility], int] = {}
+        self._groups: dict[tuple[ListedCycle, int, Volatility, float], int] = {}
         self._legs: dict[tuple[int, str, StrikeRule], int] = {}
         self._families: dict[tuple[ListedCycle, str], Family] = {}
         self._checked: set[Volatility] = set()
@@ -146,11 +150,14 @@ class _PlanBuilder:
         family.holdings.append(tuple(rows))
 
     def _leg(self, leg: Leg, volatility: Volatility) -> tuple[int, int]:
-        group_key = (leg.cycle, leg.term, volatility)
+        vol_shift = volatility.shift(leg.right)
+        group_key = (leg.cycle, leg.term, volatility, vol_shift)
         if group_key not in self._groups:
             self._groups[group_key] = len(self.plan.groups)
             schedule = self._schedule(leg.cycle, leg.term)
-            self.plan.groups.append(PricingGroup(schedule=schedule, volatility=self._bound[volatility]))
+            self.plan.groups.append(
+                PricingGroup(schedule=schedule, volatility=self._bound[volatility], vol_shift=vol_shift)
+            )
         number = self._groups[group_key]
         group = self.plan.groups[number]
         leg_key = (number, leg.right, leg.strike)

@@ -72,9 +72,13 @@ def black_with_delta(
     stdev = np.maximum(total_stdev, SMALLEST_STDEV)
     d1 = 0.5 * stdev - log_moneyness / stdev
     d2 = d1 - stdev
-    delta = ndtr(d1 * sign) * sign
+    delta = ndtr(d1 * sign)
+    delta *= sign
+    exercised = ndtr(d2 * sign)
+    exercised *= sign
+    exercised *= strike
     value = delta * forward
-    value -= ndtr(d2 * sign) * (strike * sign)
+    value -= exercised
     return value, delta
 
 

@@ -91,6 +91,9 @@ class Volatility:
         Index-like unless given (C7).
     quote : {"at the money", "variance swap"}
         How an implied series is read. Realised vol is always read at the money.
+    put_shift, call_shift : float
+        Vol points added to every vol at which puts, or calls, are priced: how far does an answer lean on
+        the prices? Where nothing is left of a vol the option has no price, and the wealth becomes NaN.
 
     Raises
     ------
@@ -101,11 +104,19 @@ class Volatility:
     source: ImpliedSeries | RealisedVolatility | None = None
     smile: FlatSmile | SSVISmile = field(default=INDEX)
     quote: str = "at the money"
+    put_shift: float = 0.0
+    call_shift: float = 0.0
 
     def __post_init__(self) -> None:
         one_of("quote", self.quote, QUOTES)
+        number("put_shift", self.put_shift, least=-100.0, most=100.0, unit=" vol points")
+        number("call_shift", self.call_shift, least=-100.0, most=100.0, unit=" vol points")
         if not isinstance(self.smile, (FlatSmile, SSVISmile)):
             raise OverlayError(f"smile is {self.smile!r}; give one of the ladder or an SSVISmile", field="smile")
+
+    def shift(self, right: str) -> float:
+        """What is added to the vols of puts or of calls, decimal."""
+        return (self.call_shift if right == "call" else self.put_shift) / 100.0
 
     def source_for(self, market: Market) -> ImpliedSeries | RealisedVolatility:
         """The source that will be used on this market."""

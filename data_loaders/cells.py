@@ -1,0 +1,76 @@
+"""Columns of text cells -> dates and numbers, whole columns at a time."""
+
+from __future__ import annotations
+
+from typing import Any
+
+import numpy as np
+import numpy.typing as npt
+import pyarrow as pa
+import pyarrow.compute as pc
+
+from .schema import FIRST_DATE, INFINITE_TEXTS, LAST_DATE, MISSING_TEXTS, NAN_TEXTS
+
+Dates = npt.NDArray[np.datetime64]
+Floats = npt.NDArray[np.float64]
+Mask = npt.NDArray[np.bool_]
+Lines = npt.NDArray[np.int64]
+
+_DATE_PATTERN = r"^\d{4}-\d{2}-\d{2}([T ]00:00(:00(\.0+)?)?)?$"
+_NUMBER_PATTERN = r"^[+-]?(\d+(\.\d*)?|\.\d+)([eE][+-]?\d+)?$"
+
+
+def dates_from_text(column: pa.Array) -> tuple[Dates, Mask, Mask]:
+    """ISO dates, with or without a time of midnight.
+
+    Returns
+    -------
+    dates : ndarray of datetime64[D]
+        1970-01-01 where there is no date.
+    bad, outside : bool ndarrays
+        Cells that are no such date; dates outside the range of the schema.
+    """
+    text = pc.utf8_trim_whitespace(column)
+    shaped = _numpy(pc.match_substring_regex(text, _DATE_PATTERN))
+    good = text if shaped.all() else pc.if_else(pa.array(shaped), text, "1970-01-01")
+    year, month, day = (
+        _numpy(pc.cast(pc.utf8_slice_codeunits(good, start, stop), pa.int64()))
+        for start, stop in ((0, 4), (5, 7), (8, 10))
+    )
+    in_year = (month >= 1) & (month <= 12)
+    first = ((year - 1970) * 12 + np.where(in_year, month, 1) - 1).astype("datetime64[M]")
+    length = ((first + 1).astype("datetime64[D]") - first.astype("datetime64[D]")).astype(np.int64)
+    bad = ~(shaped & in_year & (day >= 1) & (day <= length))
+    dates = first.astype("datetime64[D]") + np.where(bad, 1, day) - 1
+    outside = ~bad & ((dates < np.datetime64(FIRST_DATE)) | (dates > np.datetime64(LAST_DATE)))
+    dates[bad] = np.datetime64("1970-01-01")
+    return dates, bad, outside
+
+
+def numbers_from_text(column: pa.Array) -> tuple[Floats, Mask, Mask, Mask, Mask]:
+    """Plain numbers: digits, point, sign, exponent.
+
+    Returns
+    -------
+    values : ndarray of float64
+        The nearest double; NaN where there is no finite number.
+    missing, nan, infinite, other : bool ndarrays
+        Cells that say there is no value, that say ``nan``, that are infinite or too large, that are no number.
+    """
+    text = pc.utf8_trim_whitespace(column)
+    plain = _numpy(pc.match_substring_regex(text, _NUMBER_PATTERN))
+    numeric = pc.utf8_ltrim(text, characters="+")
+    if not plain.all():
+        numeric = pc.if_else(pa.array(plain), numeric, pa.scalar(None, pa.string()))
+    values = np.array(pc.cast(numeric, pa.float64()).to_numpy(zero_copy_only=False), dtype=np.float64)
+    lower = pc.utf8_lower(text)
+    missing, nan, infinite = (
+        _numpy(pc.is_in(lower, value_set=pa.array(texts))) for texts in (MISSING_TEXTS, NAN_TEXTS, INFINITE_TEXTS)
+    )
+    too_large = np.isinf(values)
+    values[too_large] = np.nan
+    return values, missing, nan, infinite | too_large, ~(plain | missing | nan | infinite)
+
+
+def _numpy(column: pa.Array) -> npt.NDArray[Any]:
+    return np.asarray(column.to_numpy(zero_copy_only=False))

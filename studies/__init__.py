@@ -1,0 +1,1 @@
+"""What a person runs: the command line, one replay, results on disk."""

@@ -1,0 +1,115 @@
+"""In words: what a replay stands on, and what about it may mislead."""
+
+from __future__ import annotations
+
+import numpy as np
+import numpy.typing as npt
+
+from backtest import ImpliedSeries, RealisedVolatility, Replay, SSVISmile
+from backtest.analytics.performance import years_between
+from backtest.engine.plan import long_term_warning
+from backtest.volatility import SMILE_LADDER
+
+Array = npt.NDArray[np.float64]
+
+#: Cautions of the trade, said once in every report (defer to licensed advice).
+CAUTION = (
+    "Option prices here are model prices on past volatilities, not quotes; the past is not the future. Options carry "
+    "risks that are described in the risk documents of your exchange; tax and regulation are local. Ask a licensed "
+    "adviser before you trade."
+)
+
+#: The first year of a history knows only part of a year of dividends.
+DIVIDEND_WINDOW_DAYS = 365
+
+
+def assumptions_of(found: Replay) -> dict[str, str]:
+    """In words, what the numbers stand on."""
+    market, volatility, costs = found.market, found.volatility, found.overlay.costs
+    source = volatility.source_for(market)
+    if isinstance(source, RealisedVolatility):
+        markup = "" if source.markup == 1 else f", times {source.markup:g}"
+        vol = f"realised close-to-close of {source.window} trading days{markup}, taken as the at-the-money vol"
+    else:
+        tenors = ", ".join(f"{int(days)}" for days in market.vol_tenor_days)
+        read = {"variance swap": "variance-swap quote", "at the money": "at-the-money vol"}[volatility.quote]
+        vol = f"implied, {tenors} days, read as {read}"
+    smile = volatility.smile
+    parameters = ""
+    if isinstance(smile, SSVISmile):
+        parameters = f" (SSVI rho {smile.rho:g}, eta {smile.eta:g}, gamma {smile.gamma:g})"
+    spreads = [f"{costs.half_spread_vol:g} vol points"]
+    if costs.half_spread_percent:
+        spreads.append(f"{costs.half_spread_percent:g}% of mid")
+    if costs.half_spread_min:
+        spreads.append(f"{costs.half_spread_min:g} in price")
+    cost = "half-spread " + (spreads[0] if len(spreads) == 1 else "the largest of " + ", ".join(spreads))
+    if costs.commission:
+        cost += f"; commission {costs.commission:g} a contract of {costs.multiplier:g}"
+    if costs.settlement_fee:
+        cost += f"; settlement fee {costs.settlement_fee:g} a contract"
+    if costs.stock_bps:
+        cost += f"; stock {costs.stock_bps:g} basis points"
+    account = {
+        "resize": "all wealth into whole packages at every roll of the longest leg",
+        "cash": "fixed shares, premiums and settlements through a cash account at the riskless rate",
+    }[found.overlay.account]
+    window = found.window
+    rate, carry = market.rate[window], market.dividend_yield[window]
+    return {
+        "volatility": vol,
+        "smile": f"{smile.name if smile.name in SMILE_LADDER else 'own'}{parameters}",
+        "cost": cost,
+        "account": account,
+        "settlement": "at the close of the expiry date (afternoon settlement)",
+        "rate": _span(np.expm1(rate)),
+        "dividend_yield": _span(np.expm1(carry)),
+    }
+
+
+def _span(values: Array) -> str:
+    low, high = (f"{100 * v + 0.0:.2f}%" for v in (values.min(), values.max()))
+    return f"{low} throughout" if low == high else f"{low} to {high} a year"
+
+
+def warnings_of(found: Replay) -> list[str]:
+    """Plain sentences about what may mislead."""
+    market, volatility, overlay = found.market, found.volatility, found.overlay
+    said = []
+    if (long_term := long_term_warning(market, overlay, volatility)) is not None:
+        said.append(long_term)
+    source = volatility.source_for(market)
+    if isinstance(source, RealisedVolatility):
+        said.append(
+            "options are priced off realised volatility; real ones are commonly dearer than the past was volatile"
+        )
+    elif isinstance(source, ImpliedSeries) and volatility.quote == "at the money":
+        said.append(
+            "the vol series is read as at-the-money vol; if it is an index of the variance-swap kind, say "
+            "--vol-quote variance-swap, or options come out about a fifth too dear in vol"
+        )
+    paid = np.flatnonzero(market.dividend != 0)
+    known_from = market.dates[0] + np.timedelta64(DIVIDEND_WINDOW_DAYS, "D")
+    if paid.size and found.dates[0] < known_from and np.ptp(market.dividend_yield) > 0:
+        said.append(
+            f"dividends are known from {market.dates[0]} only: until {known_from} forwards use less than a year of them"
+        )
+    if not market.dividend.any():
+        said.append("no dividends are known: hold and overlay both go without them")
+    if not np.nan_to_num(market.rate).any():
+        said.append("no rate is known: cash earns nothing and forwards carry no interest")
+    if years_between(found.dates) < 1:
+        said.append("less than a year: returns are totals, not annualised")
+    for leg in found.legs:
+        settled = leg.close_value[~leg.schedule.live]
+        if leg.leg.right == "put" and leg.leg.direction > 0 and not (settled > 0).any():
+            said.append(f"no {leg.label} paid off in this window: it says nothing about protection")
+        below = int(np.count_nonzero((leg.leg.direction < 0) & (leg.premium < leg.open_cost)))
+        if below:
+            said.append(
+                f"{below} of {len(leg.premium)} sold options ({leg.label}) brought less than they cost to trade"
+            )
+    if not np.isfinite(found.wealth).all():
+        lost = found.dates[int(np.argmax(~np.isfinite(found.wealth)))]
+        said.append(f"the overlay loses everything on {lost}: figures after that day do not exist")
+    return said

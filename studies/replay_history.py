@@ -1,0 +1,295 @@
+"""One overlay on one history -> an answer, and the answer as a results folder (C14)."""
+
+from __future__ import annotations
+
+import platform
+from dataclasses import dataclass, fields, replace
+from importlib.metadata import version
+from pathlib import Path
+from typing import Any
+
+import numpy as np
+import numpy.typing as npt
+import pandas as pd
+
+from backtest import (
+    Market,
+    Overlay,
+    Replay,
+    Volatility,
+    replay,
+    replay_many,
+)
+from backtest.analytics import Attribution, Mixes, Performance, RollCosts, attribute, mixes, performance, roll_costs
+from backtest.analytics.performance import years_between
+from backtest.volatility import SMILE_LADDER
+
+from .assumptions import assumptions_of, warnings_of
+from .overlay_files import OverlayFile, overlay_to_table
+from .results import (
+    MANIFEST,
+    SCHEMA,
+    check_replaceable,
+    folder_name,
+    free_folder,
+    write_folder,
+    write_json,
+    write_parquet,
+)
+
+Array = npt.NDArray[np.float64]
+
+
+@dataclass(frozen=True, slots=True, kw_only=True, eq=False)
+class SmileRung:
+    """The same overlay repriced under one smile of the ladder."""
+
+    replay: Replay
+    figures: Performance
+    mixes: Mixes
+    same_beta_figures: Performance | None
+    costs: RollCosts
+
+
+@dataclass(frozen=True, slots=True, kw_only=True, eq=False)
+class Answer:
+    """Everything a replay of one overlay says.
+
+    ``figures`` has ``overlay``, ``hold``, ``mix_*``, ``put_only`` and ``call_only``; None where a comparison
+    does not exist (an overlay without calls has no ``call_only``).
+    """
+
+    replay: Replay
+    mixes: Mixes
+    put_only: Replay | None
+    call_only: Replay | None
+    figures: dict[str, Performance | None]
+    attribution: Attribution
+    costs: RollCosts
+    ladder: dict[str, SmileRung]
+    assumptions: dict[str, str]
+    warnings: tuple[str, ...]
+    history_notes: tuple[str, ...]
+
+    @property
+    def paths(self) -> dict[str, Array]:
+        """Growth of 1 of everything in ``figures`` that exists."""
+        found = {"overlay": self.replay.wealth, "hold": self.replay.hold}
+        found |= {f"mix_{name}": mix.wealth for name, mix in self.mixes.items() if mix is not None}
+        found |= {n: r.wealth for n, r in (("put_only", self.put_only), ("call_only", self.call_only)) if r is not None}
+        return found
+
+
+def answer(
+    market: Market,
+    overlay: Overlay,
+    *,
+    volatility: Volatility | None = None,
+    start: object = None,
+    end: object = None,
+    history_notes: tuple[str, ...] = (),
+) -> Answer:
+    """Replay an overlay, all its comparisons and the smile ladder.
+
+    Raises
+    ------
+    BacktestError
+        As :func:`backtest.replay_many`.
+    """
+    volatility = volatility or Volatility()
+    smiles = dict(SMILE_LADDER)
+    if volatility.smile.name not in smiles:
+        smiles["own"] = volatility.smile
+    quoted = [replace(volatility, smile=smile) for smile in smiles.values()]
+    replays = replay_many(market, [overlay] * len(quoted), volatility=quoted, start=start, end=end)
+    ladder = {name: _rung(found) for name, found in zip(smiles, replays, strict=True)}
+    main = ladder[volatility.smile.name if volatility.smile.name in ladder else "own"]
+    one_sided = {
+        right: _one_sided(market, overlay, right, main.replay, volatility=volatility, end=end)
+        for right in ("put", "call")
+    }
+    figures: dict[str, Performance | None] = {"overlay": main.figures, "hold": _figures(main.replay, main.replay.hold)}
+    for name, mix in main.mixes.items():
+        figures[f"mix_{name}"] = None if mix is None else _figures(main.replay, mix.wealth)
+    for right, found in one_sided.items():
+        figures[f"{right}_only"] = None if found is None else _figures(main.replay, found.wealth)
+    return Answer(
+        replay=main.replay,
+        mixes=main.mixes,
+        put_only=one_sided["put"],
+        call_only=one_sided["call"],
+        figures=figures,
+        attribution=attribute(main.replay),
+        costs=main.costs,
+        ladder=ladder,
+        assumptions=assumptions_of(main.replay),
+        warnings=tuple(warnings_of(main.replay)),
+        history_notes=history_notes,
+    )
+
+
+def _rung(found: Replay) -> SmileRung:
+    mixed = mixes(found.wealth, hold=found.hold, rate_return=found.rate_return, delta=found.delta)
+    same_beta = mixed.same_beta
+    return SmileRung(
+        replay=found,
+        figures=_figures(found, found.wealth),
+        mixes=mixed,
+        same_beta_figures=None if same_beta is None else _figures(found, same_beta.wealth),
+        costs=roll_costs(found),
+    )
+
+
+def _figures(found: Replay, wealth: Array) -> Performance:
+    return performance(wealth, dates=found.dates, rate_return=found.rate_return, hold=found.hold)
+
+
+def _one_sided(
+    market: Market, overlay: Overlay, right: str, whole: Replay, *, volatility: Volatility, end: object
+) -> Replay | None:
+    """The overlay's own legs of one right, from the same inception (C10)."""
+    legs = tuple(leg for leg in overlay.legs if leg.right == right)
+    if not legs:
+        return None
+    if len(legs) == len(overlay.legs):
+        return whole
+    part = replace(overlay, legs=legs, name=f"{right} only")
+    return replay(market, part, volatility=volatility, inception=whole.dates[0], end=end)
+
+
+def summary(found: Answer) -> dict[str, Any]:
+    """The summary of C14, version 1, as nested plain values; decimals, not percents."""
+    made: dict[str, Any] = {
+        "schema": SCHEMA,
+        "name": found.replay.overlay.name,
+        "inception": found.replay.dates[0],
+        "end": found.replay.dates[-1],
+        "years": years_between(found.replay.dates),
+        "rolls": sum(len(leg.opened) for leg in found.replay.legs),
+        "open_legs": sum(int(leg.schedule.live.sum()) for leg in found.replay.legs),
+        "assumptions": found.assumptions,
+    }
+    for name, figures in found.figures.items():
+        made[name] = _as_dict(figures)
+    for name, mix in found.mixes.items():
+        if mix is not None and made[f"mix_{name}"] is not None:
+            made[f"mix_{name}"]["share_of_stock"] = mix.share
+    made["roll_cost"] = found.costs.as_dict()
+    made["attribution"] = found.attribution.annual()
+    made["smile_ladder"] = {name: _rung_summary(found, name, rung) for name, rung in found.ladder.items()}
+    made["warnings"] = list(found.warnings)
+    made["history_notes"] = list(found.history_notes)
+    return made
+
+
+def _as_dict(figures: Performance | None) -> dict[str, Any] | None:
+    return None if figures is None else {f.name: getattr(figures, f.name) for f in fields(figures)}
+
+
+def _rung_summary(found: Answer, name: str, rung: SmileRung) -> dict[str, Any]:
+    beaten = rung.same_beta_figures
+    return {
+        "used": rung.replay is found.replay,
+        "annual_return": rung.figures.annual_return,
+        "volatility": rung.figures.volatility,
+        "sharpe": rung.figures.sharpe,
+        "max_drawdown": rung.figures.max_drawdown,
+        "beta": rung.figures.beta,
+        "mix_same_beta_annual_return": None if beaten is None else beaten.annual_return,
+        "mix_same_beta_sharpe": None if beaten is None else beaten.sharpe,
+        "net_roll_cost_a_year": rung.costs.net_a_year,
+    }
+
+
+def daily_frame(found: Answer) -> pd.DataFrame:
+    """``daily.parquet`` of C14: the replay's own frame with the mixes beside it."""
+    frame = found.replay.to_frame().reset_index()
+    paths = found.paths
+    for place, name in enumerate(name for name in paths if name not in ("overlay", "hold")):
+        frame.insert(3 + place, name, paths[name])
+    return frame
+
+
+def write_answer(found: Answer, folder: Path, manifest: dict[str, Any]) -> None:
+    """Write all files of a results folder into an existing empty folder."""
+    write_parquet(folder / "daily.parquet", daily_frame(found))
+    write_parquet(folder / "rolls.parquet", found.replay.rolls_frame())
+    _write_pictures(found, folder)
+    write_json(folder / "summary.json", summary(found))
+    write_json(folder / MANIFEST, manifest)
+
+
+def _write_pictures(found: Answer, folder: Path) -> None:
+    from backtest.charts import replay_figures
+
+    shown = {"overlay": found.replay.wealth, "hold": found.replay.hold}
+    if found.mixes.same_beta is not None:
+        shown["same-beta mix"] = found.mixes.same_beta.wealth
+    pictures = replay_figures(
+        dates=found.replay.dates, growth_paths=shown, replay=found.replay, title=found.replay.overlay.name
+    )
+    for name, figure in pictures.items():
+        figure.savefig(folder / f"{name}.png", metadata={"Software": None})
+
+
+def make_answer_folder(
+    frame: pd.DataFrame,
+    agreed: OverlayFile,
+    *,
+    label: str,
+    inputs: list[dict[str, Any]],
+    notes: tuple[str, ...] = (),
+    rate: float | None = None,
+    dividend_yield: float | None = None,
+    start: str | None = None,
+    end: str | None = None,
+    out: Path | None = None,
+    results: Path = Path("results"),
+    command: str = "",
+) -> tuple[Answer, Path]:
+    """Replay one overlay on a history's frame and write its results folder.
+
+    Parameters
+    ----------
+    frame : DataFrame
+        As :meth:`backtest.Market.from_frame` takes it.
+    inputs : list of dict
+        What the numbers were made from: ``kind``, ``file``, ``sha256``.
+    rate, dividend_yield : float, optional
+        Constant, percent a year.
+    start, end : str, optional
+        ISO dates of the window.
+    out : Path, optional
+        The folder; a free one under ``results``, named after history and overlay, if not given.
+
+    Raises
+    ------
+    BacktestError, ResultsError
+    """
+    if out is not None:
+        check_replaceable(out)
+    market = Market.from_frame(
+        frame,
+        rate=None if rate is None else rate / 100.0,
+        dividend_yield=None if dividend_yield is None else dividend_yield / 100.0,
+    )
+    found = answer(market, agreed.overlay, volatility=agreed.volatility, start=start, end=end, history_notes=notes)
+    manifest = {
+        "schema": SCHEMA,
+        "made_by": f"rollband {version('rollband')}",
+        "versions": {name: version(name) for name in ("numpy", "pandas", "pyarrow", "scipy")}
+        | {"python": platform.python_version()},
+        "command": command,
+        "inputs": inputs,
+        "settings": {
+            "overlay": overlay_to_table(agreed.overlay, agreed.volatility),
+            "from": start,
+            "to": end,
+            "rate": rate,
+            "dividend_yield": dividend_yield,
+        },
+        "seed": None,  # nothing here is drawn at random
+    }
+    folder = out if out is not None else free_folder(results, folder_name(label, agreed.overlay.name), manifest)
+    write_folder(folder, lambda fresh: write_answer(found, fresh, manifest))
+    return found, folder
