@@ -39,20 +39,19 @@ Bools = npt.NDArray[np.bool_]
 Dates = npt.NDArray[np.datetime64]
 
 NAME = "Torvane Coast 40"
-#: Picked among some thousands of seeds for a typical story: a slow fall, a deep one, a fast crash that recovers. On it a
+#: Picked among some thousands for a typical story: a slow fall, a deep one, a fast crash that recovers. On it a
 #: quarterly 95 put with a monthly 110 call does a little worse than on the median seed: it is no advertisement.
 DEFAULT_SEED = 2198
 
 TRADING_DAYS = 252  # a year
 FIRST_CLOSE = 1_000.0
 
-# -- regimes: annual drift of the log total return, size of the news against what the variance says, mean length in
-# trading days, chances of the next regime
+# -- regimes
 RISE, SLIDE, PANIC, REBOUND = range(4)
-REGIME_DRIFT = (0.115, -0.20, -1.9, 0.36)
-REGIME_NOISE = (1.0, 1.0, 1.3, 1.0)
-REGIME_LENGTH = (900, 250, 22, 140)
-REGIME_NEXT = (
+REGIME_DRIFT = (0.115, -0.20, -1.9, 0.36)  # of the log total return, a year
+REGIME_NOISE = (1.0, 1.0, 1.3, 1.0)  # size of the news against what the market's variance says
+REGIME_LENGTH = (900, 250, 22, 140)  # mean, trading days
+REGIME_NEXT = (  # chances of the regime after it
     (0.00, 0.60, 0.40, 0.00),
     (0.00, 0.00, 0.35, 0.65),
     (0.00, 0.20, 0.00, 0.80),
@@ -381,7 +380,7 @@ def _draw_bars(close: Floats, variance: Floats, rng: np.random.Generator) -> tup
     overnight += np.sqrt(OVERNIGHT_SHARE * (1.0 - OVERNIGHT_SHARE) * variance) * rng.standard_normal(len(close))
     day = change - overnight  # the log return from open to close
     open_ = close * np.exp(-day)
-    # extremes of a Brownian bridge from 0 to `day` (Karatzas and Shreve 1991, section 4.3), each drawn by itself
+    # a Brownian bridge from 0 to `day` passes m with chance exp(-2 m (m - day) / variance); each end drawn by itself
     draws = -2.0 * (1.0 - OVERNIGHT_SHARE) * variance * np.log(1.0 - rng.uniform(size=(2, len(close))))
     above = (day + np.sqrt(day**2 + draws[0])) / 2.0
     below = (day - np.sqrt(day**2 + draws[1])) / 2.0
