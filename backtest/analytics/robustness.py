@@ -33,13 +33,15 @@ WIDEST_SHIFT = 20.0
 class RollDayLuck:
     """The same rule on every possible roll day.
 
-    Arrays of shape ``(offset,)``; offset 0 is the user's own day. All start on the same day, with stubs.
+    Arrays of shape ``(offset,)``; offset 0 is the user's own day. ``sharpe_gain`` is the Sharpe ratio less that
+    of the offset's own same-beta mix. All start on the same day, with stubs.
     ``ladder_*`` is the figure of holding all offsets side by side in equal parts.
     """
 
     offsets: npt.NDArray[np.int64]
     annual_return: Array
     sharpe: Array
+    sharpe_gain: Array
     max_drawdown: Array
     ladder_annual_return: float
     ladder_sharpe: float
@@ -74,11 +76,19 @@ def roll_day_luck(found: Replay, *, offsets: int | None = None) -> RollDayLuck:
         offsets=np.arange(count),
         annual_return=np.array([annual_return(row, found.dates) for row in wealth]),
         sharpe=sharpe_ratio(daily_excess(wealth, rate)),
+        sharpe_gain=np.array([sharpe_gain(row, hold=found.hold, rate_return=rate) for row in wealth]),
         max_drawdown=drawdown_path(wealth).min(axis=-1),
         ladder_annual_return=annual_return(ladder, found.dates),
         ladder_sharpe=float(sharpe_ratio(daily_excess(ladder, rate))),
         ladder_max_drawdown=float(drawdown_path(ladder).min()),
     )
+
+
+def sharpe_gain(wealth: Array, *, hold: Array, rate_return: Array) -> float:
+    """Sharpe ratio of a path less that of its same-beta mix (C10); NaN where either cannot be had."""
+    excess, hold_excess = daily_excess(wealth, rate_return), daily_excess(hold, rate_return)
+    mix = mix_wealth(regression_beta(excess, hold_excess), hold_excess, rate_return[1:])
+    return float(sharpe_ratio(excess) - sharpe_ratio(daily_excess(mix, rate_return)))
 
 
 def _shift(overlay: Overlay, days: int) -> Overlay:
@@ -166,7 +176,6 @@ class _Curve:
 
     def __init__(self, found: Replay, make: Callable[[float], tuple[Overlay, Volatility]]) -> None:
         self._found, self._make = found, make
-        self._excess = daily_excess(found.hold, found.rate_return)
         self._hold_return = annual_return(found.hold, found.dates)
 
     def gap(self, question: int, point: float) -> float:
@@ -185,9 +194,7 @@ class _Curve:
         for column, one in enumerate(replays):
             if not np.isfinite(one.wealth).all():
                 continue
-            excess = daily_excess(one.wealth, rate)
-            mix = mix_wealth(regression_beta(excess, self._excess), self._excess, rate[1:])
-            gaps[0, column] = sharpe_ratio(excess) - sharpe_ratio(daily_excess(mix, rate))
+            gaps[0, column] = sharpe_gain(one.wealth, hold=found.hold, rate_return=rate)
             gaps[1, column] = annual_return(one.wealth, found.dates) - self._hold_return
         return gaps
 

@@ -1,0 +1,213 @@
+"""The verdict: a few sentences, made from the numbers by the rules below. It never recommends.
+
+Each clause has a finding (``yes``, ``no`` or ``open``) and a sentence with its figure and its uncertainty.
+
+=============================  ================================================================================
+clause                         rule
+=============================  ================================================================================
+protects                       yes: the overlay's maximum drawdown is shallower than the hold's, and in at least
+                               95% of the resamples; no: it is not shallower; open: otherwise
+costs                          yes: it returned less a year than the hold, and all of the 90% interval of the
+                               difference lies below zero; no: it returned as much or more and all of the
+                               interval lies above zero; open: otherwise
+beats the same-risk mix        yes: its Sharpe ratio is above the same-beta mix's and so is all of the 90%
+                               interval of the difference; no: all of the interval lies below zero; open: otherwise
+holds under other smiles       yes: the Sharpe difference to the same-beta mix has one sign under every smile of
+                               the ladder; no: it has both
+holds on other roll days       yes: that difference has the sign of the user's own roll day on at least 90% of
+                               the roll days; no: on at most half; open: between
+holds without one crisis       yes: that difference keeps its sign when each of the worst falls is left out; no:
+                               it changes
+=============================  ================================================================================
+
+A clause whose figures cannot be had is open, and says why.
+"""
+
+from __future__ import annotations
+
+import math
+from collections.abc import Mapping, Sequence
+from dataclasses import dataclass
+
+SURE = 0.95
+MOST_ROLL_DAYS, FEW_ROLL_DAYS = 0.90, 0.50
+
+
+@dataclass(frozen=True, slots=True, kw_only=True)
+class Difference:
+    """A figure of the overlay less another's, with its 90% interval; NaN where it cannot be had."""
+
+    value: float
+    low: float
+    high: float
+
+    @property
+    def known(self) -> bool:
+        """Whether value and interval are all numbers."""
+        return all(math.isfinite(x) for x in (self.value, self.low, self.high))
+
+
+@dataclass(frozen=True, slots=True, kw_only=True)
+class Evidence:
+    """The numbers that the verdict is made from; decimals."""
+
+    years: float
+    put_payoffs: int | None
+    overlay_drawdown: float
+    hold_drawdown: float
+    probability_shallower: float
+    return_difference: Difference
+    sharpe_difference: Difference
+    smile_differences: Mapping[str, float]
+    used_smile: str
+    break_even: str
+    roll_day_differences: Sequence[float]
+    roll_day_returns: Sequence[float]
+    without_worst: Sequence[float]
+
+
+@dataclass(frozen=True, slots=True, kw_only=True)
+class Clause:
+    """One clause of the verdict."""
+
+    title: str
+    finding: str
+    sentence: str
+
+
+def verdict(evidence: Evidence) -> tuple[Clause, ...]:
+    """Apply the rules of this module, in the order of its table."""
+    return (
+        _protects(evidence),
+        _costs(evidence),
+        _beats(evidence),
+        _smiles(evidence),
+        _roll_days(evidence),
+        _crises(evidence),
+    )
+
+
+def _protects(e: Evidence) -> Clause:
+    title = "Protects"
+    if not all(math.isfinite(x) for x in (e.overlay_drawdown, e.hold_drawdown)):
+        return Clause(title=title, finding="open", sentence="No drawdown can be had for this replay.")
+    gained = e.overlay_drawdown - e.hold_drawdown
+    payoffs = _payoffs(e)
+    if gained <= 0:
+        sentence = (
+            f"Its deepest fall was {_percent(e.overlay_drawdown)}, the hold's {_percent(e.hold_drawdown)}.{payoffs}"
+        )
+        return Clause(title=title, finding="no", sentence=sentence)
+    sentence = (
+        f"It took {_points(gained)} off the deepest fall: {_percent(e.overlay_drawdown)} instead of "
+        f"{_percent(e.hold_drawdown)}"
+    )
+    if not math.isfinite(e.probability_shallower):
+        return Clause(
+            title=title, finding="open", sentence=f"{sentence}; the history is too short to say how surely.{payoffs}"
+        )
+    sure = e.probability_shallower >= SURE
+    sentence += f"; the fall was shallower in {100 * e.probability_shallower:.0f}% of the resampled histories.{payoffs}"
+    return Clause(title=title, finding="yes" if sure else "open", sentence=sentence)
+
+
+def _payoffs(e: Evidence) -> str:
+    if e.put_payoffs is None:
+        return ""
+    if e.put_payoffs == 0:
+        return " No bought put paid off in this history, so it says nothing about protection by puts."
+    times = "time" if e.put_payoffs == 1 else "separate times"
+    return (
+        f" The bought puts paid off {e.put_payoffs} {times} in {e.years:.0f} years: that is the size of the evidence."
+    )
+
+
+def _costs(e: Evidence) -> Clause:
+    title, d = "Costs", e.return_difference
+    if not math.isfinite(d.value):
+        return Clause(title=title, finding="open", sentence="No return can be had for this replay.")
+    less = "less" if d.value < 0 else "more"
+    sentence = f"It returned {_points(abs(d.value))} a year {less} than the hold"
+    if not d.known:
+        return Clause(title=title, finding="open", sentence=f"{sentence}; the history is too short for an interval.")
+    sentence += f" (90% interval {_signed_points(d.low)} to {_signed_points(d.high)})"
+    if d.high < 0:
+        return Clause(title=title, finding="yes", sentence=f"{sentence}.")
+    if d.low > 0:
+        return Clause(title=title, finding="no", sentence=f"{sentence}.")
+    return Clause(title=title, finding="open", sentence=f"{sentence}: the history does not settle it.")
+
+
+def _beats(e: Evidence) -> Clause:
+    title, d = "Beats holding less", e.sharpe_difference
+    if not math.isfinite(d.value):
+        return Clause(title=title, finding="open", sentence="No Sharpe ratio can be had for overlay and same-beta mix.")
+    side = "above" if d.value >= 0 else "below"
+    sentence = f"Its Sharpe ratio was {abs(d.value):.2f} {side} that of holding less stock at the same beta"
+    if not d.known:
+        return Clause(title=title, finding="open", sentence=f"{sentence}; the history is too short for an interval.")
+    sentence += f" (90% interval {d.low:+.2f} to {d.high:+.2f})"
+    if d.low > 0 and d.value > 0:
+        return Clause(title=title, finding="yes", sentence=f"{sentence}.")
+    if d.high < 0:
+        return Clause(title=title, finding="no", sentence=f"{sentence}.")
+    return Clause(title=title, finding="open", sentence=f"{sentence}: the two cannot be told apart.")
+
+
+def _smiles(e: Evidence) -> Clause:
+    title = "Holds under other smiles"
+    known = {name: d for name, d in e.smile_differences.items() if math.isfinite(d)}
+    if len(known) < 2:
+        return Clause(title=title, finding="open", sentence="The overlay cannot be compared under several smiles.")
+    low, high = min(known, key=lambda n: known[n]), max(known, key=lambda n: known[n])
+    span = f"from {known[low]:+.2f} ({low}) to {known[high]:+.2f} ({high})"
+    turn = f" Break-even: all option vols wrong by {e.break_even}."
+    if known[low] < 0 < known[high]:
+        sentence = f"The prices decide it: that difference runs {span}, priced here under {e.used_smile}.{turn}"
+        return Clause(title=title, finding="no", sentence=sentence)
+    return Clause(title=title, finding="yes", sentence=f"That difference keeps its sign, {span}.{turn}")
+
+
+def _roll_days(e: Evidence) -> Clause:
+    title = "Holds on other roll days"
+    known = [d for d in e.roll_day_differences if math.isfinite(d)]
+    if len(known) < 2 or not math.isfinite(e.roll_day_differences[0]):
+        return Clause(title=title, finding="open", sentence="The overlay cannot be compared on other roll days.")
+    own = e.roll_day_differences[0]
+    same = sum((d > 0) == (own > 0) for d in known) / len(known)
+    finding = "yes" if same >= MOST_ROLL_DAYS else "no" if same <= FEW_ROLL_DAYS else "open"
+    returns = [r for r in e.roll_day_returns if math.isfinite(r)]
+    sentence = (
+        f"On {100 * same:.0f}% of the {len(known)} possible roll days that difference has the same sign; the return "
+        f"ran from {_percent(min(returns))} to {_percent(max(returns))} a year with the roll day alone."
+    )
+    return Clause(title=title, finding=finding, sentence=sentence)
+
+
+def _crises(e: Evidence) -> Clause:
+    title = "Holds without one crisis"
+    own = e.sharpe_difference.value
+    known = [d for d in e.without_worst if math.isfinite(d)]
+    if not known or not math.isfinite(own):
+        return Clause(title=title, finding="open", sentence="The hold had no fall over 10% to leave out.")
+    keeps = all((d > 0) == (own > 0) for d in known)
+    changed = "keeps" if keeps else "changes"
+    falls = "the worst fall is" if len(known) == 1 else f"each of the {len(known)} worst falls is"
+    sentence = (
+        f"That difference {changed} its sign when {falls} left out: {min(known):+.2f}"
+        + (f" to {max(known):+.2f}" if len(known) > 1 else "")
+        + f", {own:+.2f} with all of them."
+    )
+    return Clause(title=title, finding="yes" if keeps else "no", sentence=sentence)
+
+
+def _percent(value: float) -> str:
+    return f"{100 * value + 0.0:.1f}%"
+
+
+def _points(value: float) -> str:
+    return f"{100 * value + 0.0:.1f} points"
+
+
+def _signed_points(value: float) -> str:
+    return f"{100 * value + 0.0:+.1f}"
