@@ -16,7 +16,8 @@ def one_of(name: str, value: object, allowed: tuple[str, ...]) -> None:
 def number(name: str, value: object, *, least: float, most: float = math.inf, unit: str = "") -> None:
     """Raise OverlayError unless ``value`` is a finite number from ``least`` to ``most``."""
     plain = isinstance(value, (int, float)) and not isinstance(value, bool)
-    if not plain or not math.isfinite(value) or not least <= value <= most:  # type: ignore[arg-type,operator]
+    # an integer too large for a float is out of any range, and must not reach isfinite
+    if not plain or not least <= value <= most or abs(value) > 1e300:  # type: ignore[arg-type,operator]
         limit = f"from {least:g} to {most:g}" if math.isfinite(most) else f"of at least {least:g}"
         raise OverlayError(f"{name} is {value!r}; it takes a number {limit}{unit}", field=name)
 

@@ -10,11 +10,12 @@ import sys
 from collections.abc import Iterator
 from contextlib import contextmanager
 from datetime import datetime
-from enum import StrEnum
 from pathlib import Path
 from typing import TYPE_CHECKING, Annotated, Any
 
 import typer
+
+from .options import Account, Dividends, First, Last, Prices, Rates, Roll, Store, Unit, Vol, VolQuote, VolUnit
 
 if TYPE_CHECKING:
     from backtest import Costs, Overlay, Volatility
@@ -39,53 +40,6 @@ Option prices are model prices on past volatilities, not quotes; the past is not
 are described in the risk documents of your exchange; tax and regulation are local. Ask a licensed adviser before you
 trade.""",
 )
-
-
-class Roll(StrEnum):
-    """How often a leg is replaced."""
-
-    month = "month"
-    quarter = "quarter"
-    half = "half"
-    year = "year"
-
-
-class VolUnit(StrEnum):
-    """Unit of a vol file."""
-
-    percent = "percent"
-    decimal = "decimal"
-
-
-class VolQuote(StrEnum):
-    """How a vol series is read."""
-
-    atm = "atm"
-    variance_swap = "variance-swap"
-
-
-class Account(StrEnum):
-    """Who carries premiums and settlements."""
-
-    resize = "resize"
-    cash = "cash"
-
-
-Prices = Annotated[
-    Path | None, typer.Option("--prices", help="Price CSV: date, close; also open, high, low, volume, dividend.")
-]
-Vol = Annotated[
-    Path | None,
-    typer.Option("--vol", help="Vol CSV: date, vol; or a column per tenor named by its days. Without: realised vol."),
-]
-Dividends = Annotated[
-    Path | None, typer.Option("--dividends", help="Dividend CSV: date (ex-date), dividend (cash a share).")
-]
-Rates = Annotated[Path | None, typer.Option("--rates", help="Rate CSV: date, rate (percent a year).")]
-Unit = Annotated[VolUnit | None, typer.Option("--vol-unit", help="Unit of the vol file, where it is not plain.")]
-Store = Annotated[Path, typer.Option("--store", help="Folder of stored histories.")]
-First = Annotated[datetime | None, typer.Option("--from", formats=["%Y-%m-%d"], help="First day.")]
-Last = Annotated[datetime | None, typer.Option("--to", formats=["%Y-%m-%d"], help="Last day.")]
 
 
 @app.command()
@@ -124,7 +78,9 @@ def replay(
     name: Annotated[str | None, typer.Argument(help="A stored history; or give the file options instead.")] = None,
     put: Annotated[float | None, typer.Option("--put", help="Buy a put at this percent of spot.")] = None,
     call: Annotated[float | None, typer.Option("--call", help="Sell a call at this percent of spot.")] = None,
-    roll: Annotated[Roll, typer.Option("--roll", help="How often both are replaced.")] = Roll.quarter,
+    roll: Annotated[
+        Roll | None, typer.Option("--roll", help="How often both are replaced; a quarter if not given.")
+    ] = None,
     put_roll: Annotated[Roll | None, typer.Option("--put-roll", help="How often the put is replaced.")] = None,
     call_roll: Annotated[Roll | None, typer.Option("--call-roll", help="How often the call is replaced.")] = None,
     put_term: Annotated[
@@ -177,7 +133,13 @@ def replay(
     ] = False,
 ) -> None:
     """Replay one overlay on one history and write a results folder."""
-    agreed = _overlay(overlay, put, call, put_roll or roll, call_roll or roll, put_term, call_term)
+    agreed = _overlay(
+        overlay,
+        {"put": put, "call": call},
+        {"put": put_roll, "call": call_roll},
+        {"put": put_term, "call": call_term},
+        roll,
+    )
     agreed = _with_options(
         agreed, account=account, vol_quote=vol_quote, smile=smile,
         costs={
@@ -218,8 +180,9 @@ def demo(folder: Annotated[Path, typer.Argument(help="Where to put it.")] = Path
     )  # fmt: skip
     _say("")
     _say("Try next:")
-    _say(f"  rollband replay demo --store {store} --put 90 --call 110 --roll month --vol-quote variance-swap")
-    _say(f"  rollband replay demo --store {store} --overlay {overlay_file} --smile flat")
+    at, of = shlex.quote(str(store)), shlex.quote(str(overlay_file))
+    _say(f"  rollband replay demo --store {at} --put 90 --call 110 --roll month --vol-quote variance-swap")
+    _say(f"  rollband replay demo --store {at} --overlay {of} --smile flat")
     _say("  rollband load mine --prices my_prices.csv --vol my_vols.csv")
 
 
@@ -261,22 +224,35 @@ def _exit_code(error: Exception) -> int | None:
 
 
 def _overlay(
-    file: Path | None, put: float | None, call: float | None, put_roll: Roll, call_roll: Roll,
-    put_term: int | None, call_term: int | None,
+    file: Path | None, percent: dict[str, float | None], rolls: dict[str, Roll | None], terms: dict[str, int | None],
+    roll: Roll | None,
 ) -> OverlayFile:  # fmt: skip
+    """The overlay of a file, or of the shorthand options; an option that would do nothing is refused."""
     from .overlay_files import read_overlay_file, shorthand_overlay
 
+    options: dict[str, tuple[str, object]] = {f"--{right}-roll": (right, value) for right, value in rolls.items()}
+    options |= {f"--{right}-term": (right, value) for right, value in terms.items()}
     if file is not None:
-        if put is not None or call is not None:
-            raise typer.BadParameter("give --overlay or --put and --call, not both", param_hint="--overlay")
+        given = [f"--{right}" for right, value in percent.items() if value is not None]
+        given += [option for option, (_, value) in options.items() if value is not None]
+        given += ["--roll"] if roll is not None else []
+        if given:
+            raise typer.BadParameter(
+                f"give --overlay or --put and --call, not both: leave out {', '.join(given)}", param_hint="--overlay"
+            )
         return read_overlay_file(file)
-    if put is None and call is None:
+    if all(value is None for value in percent.values()):
         raise typer.BadParameter(
             "say what to replay: --put 95, --call 110, both, or --overlay FILE", param_hint="--put"
         )
+    for option, (right, value) in options.items():
+        if value is not None and percent[right] is None:
+            raise typer.BadParameter(f"there is no --{right} for it", param_hint=option)
+    usual = roll or Roll.quarter
     return shorthand_overlay(
-        put=put, call=call, put_roll=put_roll.value, call_roll=call_roll.value, put_term=put_term, call_term=call_term
-    )
+        put=percent["put"], call=percent["call"], put_roll=(rolls["put"] or usual).value,
+        call_roll=(rolls["call"] or usual).value, put_term=terms["put"], call_term=terms["call"],
+    )  # fmt: skip
 
 
 def _with_options(
@@ -313,6 +289,8 @@ def _history(
     from data_loaders.store import read_history
 
     given = [f"--{kind}" for kind, path in files.items() if path is not None]
+    if files["vol"] is None and vol_unit is not None:
+        raise typer.BadParameter("there is no --vol file for it", param_hint="--vol-unit")
     if name is not None:
         if given:
             raise typer.BadParameter(
@@ -337,7 +315,10 @@ def _replay_and_write(
     from .replay_history import make_answer_folder, summary
     from .results import json_text, sha256_of
 
-    inputs = [{"kind": source.kind, "file": source.file, "sha256": source.sha256} for source in history.sources]
+    inputs = [
+        {"kind": source.kind, "file": source.file, "sha256": source.sha256, "unit": source.unit}
+        for source in history.sources
+    ]
     if overlay_file is not None:
         inputs.append({"kind": "overlay", "file": overlay_file.name, "sha256": sha256_of(overlay_file)})
     with _working("replaying"):

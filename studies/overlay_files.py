@@ -38,7 +38,7 @@ LARGEST_FILE_BYTES = 1_000_000
 TOP_KEYS = ("name", "account", "leg", "costs", "volatility")
 LEG_KEYS = ("position", "right", "roll", "term", "phase", "shift_days", "ratio", "strike")
 COST_KEYS = tuple(f.name for f in fields(Costs))
-VOLATILITY_KEYS = ("smile", "quote", "source", "window", "markup")
+VOLATILITY_KEYS = ("smile", "quote", "source", "window", "markup", "put_shift", "call_shift")
 SMILE_KEYS = ("rho", "eta", "gamma")
 SOURCES = ("auto", "implied", "realised")
 
@@ -69,7 +69,8 @@ def read_overlay_file(path: Path) -> OverlayFile:
     """
     try:
         if not path.is_file():
-            raise OverlayFileError(file=path.name, line=None, key=None, problem="there is no such file")
+            problem = "is a folder, not a file" if path.is_dir() else "there is no such file"
+            raise OverlayFileError(file=path.name, line=None, key=None, problem=problem)
         if path.stat().st_size > LARGEST_FILE_BYTES:
             raise OverlayFileError(
                 file=path.name,
@@ -99,14 +100,14 @@ def parse_overlay(text: str, *, file: str = "overlay") -> OverlayFile:
     """
     try:
         table = tomllib.loads(text)
-    except tomllib.TOMLDecodeError as error:
+    except (ValueError, RecursionError) as error:  # not only the parser's own: also a number of 5,000 digits
         found = re.search(r"line (\d+)", str(error))
         line = int(found.group(1)) if found else None
         raise OverlayFileError(file=file, line=line, key=None, problem=f"not valid TOML: {error}") from None
     try:
         return overlay_from_table(table)
     except _KeyProblem as problem:
-        key = ".".join(str(part + 1) if isinstance(part, int) else part for part in problem.path)
+        key = ".".join(_key_word(part) for part in problem.path)
         raise OverlayFileError(
             file=file, line=_line_of(text, problem.path), key=key or None, problem=problem.problem
         ) from None
@@ -120,14 +121,14 @@ def overlay_from_table(table: Mapping[str, Any]) -> OverlayFile:
         raise _KeyProblem(("leg",), "an overlay needs at least one [[leg]]")
     built = tuple(_leg(("leg", number), leg) for number, leg in enumerate(legs))
     costs = _table(("costs",), table.get("costs", {}), COST_KEYS)
-    name = table.get("name", "")
+    name = table.get("name", describe_legs(built))
     if not isinstance(name, str):
         raise _KeyProblem(("name",), f"is {name!r}; it takes a text in quotes")
     made_costs = _build(("costs",), Costs, **costs)
     overlay = _build(
         (),
         Overlay,
-        name=name or describe_legs(built),
+        name=name,
         account=table.get("account", "resize"),
         legs=built,
         costs=made_costs,
@@ -171,6 +172,7 @@ def overlay_to_table(overlay: Overlay, volatility: Volatility) -> dict[str, Any]
         vol |= {"source": "realised", "window": volatility.source.window, "markup": volatility.source.markup}
     elif volatility.source is not None:
         vol["source"] = "implied"
+    vol |= {"put_shift": volatility.put_shift, "call_shift": volatility.call_shift}
     return {
         "name": overlay.name,
         "account": overlay.account,
@@ -218,6 +220,14 @@ def describe_legs(legs: tuple[Leg, ...]) -> str:
     return ", ".join(words)
 
 
+def _key_word(part: str | int) -> str:
+    """A key as it is shown: tables of a list count from 1, odd characters are escaped, long keys cut."""
+    if isinstance(part, int):
+        return str(part + 1)
+    shown = part if part.isprintable() else repr(part)[1:-1]
+    return shown if len(shown) <= 60 else f"{shown[:57]}..."
+
+
 def _leg(path: tuple[str | int, ...], value: Any) -> Leg:
     given = _table(path, value, LEG_KEYS)
     for needed in ("position", "right", "strike"):
@@ -260,7 +270,8 @@ def _volatility(value: Any) -> Volatility:
     elif source == "realised":
         made = _build(path, RealisedVolatility, **{k: given[k] for k in ("window", "markup") if k in given})
     smile = smile_from_value(given.get("smile", "index"), path=(*path, "smile"))
-    return _build(path, Volatility, source=made, smile=smile, quote=given.get("quote", "at the money"))
+    quoted = {key: given[key] for key in ("quote", "put_shift", "call_shift") if key in given}
+    return _build(path, Volatility, source=made, smile=smile, **quoted)
 
 
 def smile_from_value(value: Any, *, path: tuple[str | int, ...] = ("smile",)) -> FlatSmile | SSVISmile:
@@ -321,33 +332,55 @@ def _known_keys(path: tuple[str | int, ...], table: Mapping[str, Any], keys: tup
     for key in table:
         if key not in keys:
             near = difflib.get_close_matches(key, keys, n=1)
-            hint = f"; did you mean {near[0]}?" if near else ""
+            hint = f"; did you mean {near[0]}?" if near else "."
             raise _KeyProblem((*path, key), f"unknown key{hint} Known here: {', '.join(keys)}")
 
 
+#: A value that spans more lines than this is not looked through for its place.
+LONGEST_VALUE_LINES = 200
+
+
 def _line_of(text: str, path: tuple[str | int, ...]) -> int | None:
-    """Line on which a key path is written, or the line of the nearest table around it."""
-    wanted = list(path)
-    header: tuple[str | int, ...] = ()
-    count: dict[str, int] = {}
-    best: tuple[int, int] | None = None  # (how much of the path matched, line)
-    for number, line in enumerate(text.splitlines(), start=1):
-        here: tuple[str | int, ...]
-        if found := re.match(r"\s*(\[\[?)\s*([\w.-]+)\s*\]", line):
-            name = found.group(2)
-            header = (name,)
-            if found.group(1) == "[[":
-                count[name] = count.get(name, -1) + 1
-                header = (name, count[name])
-            here = header
-        elif found := re.match(r"\s*[\"']?([\w-]+)[\"']?\s*=", line):
-            here = (*header, found.group(1))
-        else:
+    """Line on which a key path is written, counted from 1; None if it cannot be told.
+
+    The parser itself is asked: the line is the first that names the key and after which the file, cut off
+    there, holds the path. So comments, quoted look-alikes and dotted keys need no grammar of our own.
+    """
+    lines = text.split("\n")
+    key = next((part for part in reversed(path) if isinstance(part, str)), None)
+    if key is None:
+        return None
+    for number, line in enumerate(lines):
+        if key not in line:
             continue
-        matched = len(here) if list(here) == wanted[: len(here)] else 0
-        if matched and (best is None or matched > best[0]):
-            best = (matched, number)
-    return best[1] if best else None
+        for stop in range(number + 1, min(number + LONGEST_VALUE_LINES, len(lines)) + 1):
+            try:
+                table = tomllib.loads("\n".join(lines[:stop]))
+            except (ValueError, RecursionError):
+                continue  # cut off inside a value
+            if _holds(table, path):
+                return _within(lines, key, path, number, stop)
+            break
+    return None
+
+
+def _within(lines: list[str], key: str, path: tuple[str | int, ...], first: int, stop: int) -> int:
+    """Line inside a value of several lines: for the third table of a list, the third that names the key."""
+    naming = [number for number in range(first, stop) if key in lines[number]]
+    index = next((part for part in path if isinstance(part, int)), 0)
+    in_header = lines[first].lstrip().startswith("[") or len(naming) == 1
+    return naming[0 if in_header else min(index, len(naming) - 1)] + 1
+
+
+def _holds(table: Any, path: tuple[str | int, ...]) -> bool:
+    for part in path:
+        if isinstance(part, int):
+            if not isinstance(table, list) or part >= len(table):
+                return False
+        elif not isinstance(table, dict) or part not in table:
+            return False
+        table = table[part]
+    return True
 
 
 def _toml(value: Any) -> str:
@@ -356,4 +389,5 @@ def _toml(value: Any) -> str:
     if isinstance(value, str):
         # JSON's escapes are TOML's, but for the delete character, which TOML wants escaped
         return json.dumps(value, ensure_ascii=False).replace("\x7f", "\\u007f")
-    return repr(value)
+    # a number of numpy's would write its type as well
+    return repr(value.item() if hasattr(value, "item") else value)

@@ -22,6 +22,7 @@ from backtest import (
 )
 from backtest.analytics import Attribution, Mixes, Performance, RollCosts, attribute, mixes, performance, roll_costs
 from backtest.analytics.performance import years_between
+from backtest.arguments import number
 from backtest.volatility import SMILE_LADDER
 
 from .assumptions import assumptions_of, warnings_of
@@ -254,7 +255,7 @@ def make_answer_folder(
     frame : DataFrame
         As :meth:`backtest.Market.from_frame` takes it.
     inputs : list of dict
-        What the numbers were made from: ``kind``, ``file``, ``sha256``.
+        What the numbers were made from: ``kind``, ``file``, ``sha256``, and how it was read.
     rate, dividend_yield : float, optional
         Constant, percent a year.
     start, end : str, optional
@@ -268,6 +269,9 @@ def make_answer_folder(
     """
     if out is not None:
         check_replaceable(out)
+    for option, value, least in (("--rate", rate, -99.0), ("--dividend-yield", dividend_yield, -49.0)):
+        if value is not None:
+            number(option, value, least=least, most=100.0, unit=" percent a year")
     market = Market.from_frame(
         frame,
         rate=None if rate is None else rate / 100.0,
@@ -287,6 +291,7 @@ def make_answer_folder(
             "to": end,
             "rate": rate,
             "dividend_yield": dividend_yield,
+            "history": {"first": str(frame.index[0].date()), "last": str(frame.index[-1].date()), "days": len(frame)},
         },
         "seed": None,  # nothing here is drawn at random
     }

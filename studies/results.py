@@ -52,6 +52,8 @@ def write_folder(out: Path, fill: Callable[[Path], None]) -> None:
 
 def check_replaceable(out: Path) -> None:
     """Raise ResultsError unless ``out`` is absent, an empty folder, or a results folder."""
+    if out.resolve() == Path.cwd() and not any(out.iterdir()):
+        raise ResultsError(f"{out} is the folder you stand in: give a new folder as --out")
     if out.is_symlink() or (out.exists() and not out.is_dir()):
         raise ResultsError(f"{out} is not a folder: give another --out")
     if out.is_dir() and any(out.iterdir()) and not (out / MANIFEST).is_file():
@@ -66,12 +68,13 @@ def _moved_aside(out: Path) -> Iterator[None]:
         return
     aside = Path(tempfile.mkdtemp(prefix=f".{out.name}.old.", dir=out.parent))
     former = aside / out.name
-    out.rename(former)
     try:
-        yield
-    except BaseException:
-        former.rename(out)
-        raise
+        out.rename(former)
+        try:
+            yield
+        except BaseException:
+            former.rename(out)
+            raise
     finally:
         shutil.rmtree(aside, ignore_errors=True)
 
@@ -91,7 +94,7 @@ def repeatable_part(manifest: dict[str, Any] | None) -> Any:
     """What of a manifest decides the numbers: inputs by content and the settings, not the command's spelling."""
     if manifest is None:
         return None
-    inputs = sorted((entry.get("kind", ""), entry.get("sha256", "")) for entry in manifest.get("inputs", []))
+    inputs = sorted(json.dumps({**entry, "file": ""}, sort_keys=True) for entry in manifest.get("inputs", []))
     return inputs, manifest.get("settings"), manifest.get("schema")
 
 
@@ -121,7 +124,7 @@ def plain(value: Any) -> Any:
     if isinstance(value, (list, tuple)):
         return [plain(item) for item in value]
     if isinstance(value, np.datetime64):
-        return str(value.astype("datetime64[D]"))
+        return None if np.isnat(value) else str(value.astype("datetime64[D]"))
     if isinstance(value, np.generic):
         value = value.item()
     if isinstance(value, float) and not math.isfinite(value):

@@ -20,6 +20,8 @@ Array = npt.NDArray[np.float64]
 
 #: Shares of stock searched for the same-drawdown mix: none to five times.
 LARGEST_SHARE = 5.0
+#: Where the same-return search ends when no day could lose everything.
+UNBOUNDED_SHARE = 1e3
 
 
 @dataclass(frozen=True, slots=True, kw_only=True, eq=False)
@@ -61,7 +63,7 @@ def mixes(wealth: Array, *, hold: Array, rate_return: Array, delta: Array) -> Mi
     delta : ndarray, shape (day,)
         Dollar delta over wealth after each day's trades.
     """
-    if not np.isfinite(wealth).all():
+    if not np.isfinite(wealth).all() or len(wealth) < 2:
         return Mixes(same_beta=None, same_volatility=None, same_return=None, same_drawdown=None, same_delta=None)
     excess, cash = daily_excess(hold, rate_return), rate_return[1:]
 
@@ -88,6 +90,8 @@ def mix_wealth(share: float | Array, excess: Array, cash: Array) -> Array:
 
 def _same_volatility(wealth: Array, excess: Array, cash: Array) -> float | None:
     """Larger root of ``var(rf) + 2 w cov(rf, e) + w^2 var(e) = var(R)``."""
+    if len(excess) < 2:
+        return None
     target = np.var(wealth[1:] / wealth[:-1] - 1.0, ddof=1)
     covariance = np.cov(cash, excess, ddof=1)
     a, half_b, c = covariance[1, 1], covariance[0, 1], covariance[0, 0] - target
@@ -112,23 +116,25 @@ def _same_return(wealth: Array, excess: Array, cash: Array) -> float | None:
         return float(np.sum(excess / (1.0 + cash + share * excess)))
 
     lowest, highest = _ruin_bounds(excess, cash)
-    if lowest is None or highest is None:
-        return None
+    if slope(lowest) * slope(highest) > 0:
+        # a hold that only rises, or only falls, against cash: growth has no maximum in between, and one root at most
+        return _root(gap, lowest, highest)
     top = brentq(slope, lowest, highest, xtol=1e-14)
     if gap(top) < 0:
         return None
     return _root(gap, lowest, top)
 
 
-def _ruin_bounds(excess: Array, cash: Array) -> tuple[float | None, float | None]:
-    """Shares just inside those at which some day loses everything; None without such a day."""
+def _ruin_bounds(excess: Array, cash: Array) -> tuple[float, float]:
+    """Shares just inside those at which some day loses everything, or a large share where no day does."""
     inside = 1.0 - 1e-9
     with np.errstate(divide="ignore"):
         limits = -(1.0 + cash) / excess
     lower, upper = limits[excess > 0], limits[excess < 0]
-    if lower.size == 0 or upper.size == 0:
-        return None, None
-    return float(lower.max()) * inside, float(upper.min()) * inside
+    return (
+        float(lower.max()) * inside if lower.size else -UNBOUNDED_SHARE,
+        float(upper.min()) * inside if upper.size else UNBOUNDED_SHARE,
+    )
 
 
 def _same_drawdown(wealth: Array, excess: Array, cash: Array) -> float | None:

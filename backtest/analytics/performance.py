@@ -24,6 +24,10 @@ DAYS_IN_CALENDAR_YEAR = 365.25
 MONTHS_IN_YEAR = 12
 #: Fewer whole months than this and no monthly figure is given.
 FEWEST_MONTHS = 12
+#: A power of Leland's under this is taken for zero.
+SMALLEST_POWER = 1e-8
+#: A standard deviation under this is rounding, not variation.
+SMALLEST_SPREAD = 1e-13
 #: The worst share of returns that an expected shortfall averages.
 TAIL = 0.05
 
@@ -109,14 +113,22 @@ def annual_return(wealth: Array, dates: Dates) -> float:
 
 
 def annual_volatility(returns: Array) -> Array:
-    """``std(R, ddof=1) sqrt(252)`` along the last axis (C11)."""
-    return np.std(returns, axis=-1, ddof=1) * np.sqrt(TRADING_DAYS)
+    """``std(R, ddof=1) sqrt(252)`` along the last axis; NaN for fewer than two returns (C11)."""
+    return sample_spread(returns) * np.sqrt(TRADING_DAYS)
+
+
+def sample_spread(values: Array) -> Array:
+    """Sample standard deviation along the last axis; NaN for fewer than two values."""
+    if values.shape[-1] < 2:
+        return np.full(values.shape[:-1], np.nan)
+    return np.std(values, axis=-1, ddof=1)
 
 
 def sharpe_ratio(excess: Array) -> Array:
     """``mean(X) / std(X, ddof=1) sqrt(252)`` along the last axis; NaN without variation (Sharpe 1994, C11)."""
-    spread = np.std(excess, axis=-1, ddof=1)
-    ratio = np.divide(np.mean(excess, axis=-1), spread, out=np.full(np.shape(spread), np.nan), where=spread > 1e-15)
+    spread = sample_spread(excess)
+    varies = spread > SMALLEST_SPREAD
+    ratio = np.divide(np.mean(excess, axis=-1), spread, out=np.full(np.shape(spread), np.nan), where=varies)
     return ratio * np.sqrt(TRADING_DAYS)
 
 
@@ -128,8 +140,10 @@ def daily_excess(wealth: Array, rate_return: Array) -> Array:
 def regression_beta(excess: Array, hold_excess: Array) -> float:
     """Slope of the regression of ``excess`` on ``hold_excess``; NaN when the latter does not vary."""
     centred = hold_excess - np.mean(hold_excess)
-    variation = float(np.sum(centred * centred))
-    return float(np.sum(centred * (excess - np.mean(excess)))) / variation if variation > 0 else float("nan")
+    variation = float(np.mean(centred * centred))
+    if not variation > SMALLEST_SPREAD**2:
+        return float("nan")
+    return float(np.mean(centred * (excess - np.mean(excess)))) / variation
 
 
 def expected_shortfall(returns: Array) -> float:
@@ -179,7 +193,7 @@ def monthly_returns(wealth: Array, *, dates: Dates, rate_return: Array) -> Month
 
 def _sortino(excess: Array) -> float:
     downside = float(np.sqrt(np.mean(np.minimum(excess, 0.0) ** 2)))
-    if not downside > 0:
+    if not downside > SMALLEST_SPREAD:
         return float("nan")
     return float(np.mean(excess) * TRADING_DAYS / (downside * np.sqrt(TRADING_DAYS)))
 
@@ -227,10 +241,11 @@ def leland(returns: Array, market: Array, cash: Array) -> tuple[float, float]:
     """
     rate = float(np.mean(cash))
     spread = float(np.var(np.log1p(market), ddof=1))
-    if not spread > 0:
+    if not spread > SMALLEST_SPREAD**2:
         return float("nan"), float("nan")
     power = (np.log1p(np.mean(market)) - np.log1p(rate)) / spread
-    weight = -((1.0 + market) ** -power)
+    # a market that earns what cash does has a power of zero, and weights all alike: their limit is the logarithm
+    weight = -((1.0 + market) ** -power) if abs(power) > SMALLEST_POWER else np.log1p(market)
     weight = weight - np.mean(weight)
     beta = float(np.sum(weight * returns) / np.sum(weight * market))
     alpha = float(np.mean(returns) - beta * (np.mean(market) - rate) - rate)

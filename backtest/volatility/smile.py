@@ -21,6 +21,7 @@ import numpy as np
 import numpy.typing as npt
 from scipy.interpolate import BSpline, make_interp_spline
 
+from ..arguments import number
 from ..errors import OverlayError
 from ..pricing.black import black
 
@@ -128,9 +129,7 @@ class SSVISmile:
 
     def __post_init__(self) -> None:
         for name in ("rho", "eta", "gamma"):
-            value = getattr(self, name)
-            if not isinstance(value, (int, float)) or isinstance(value, bool) or not math.isfinite(value):
-                raise OverlayError(f"{name} is {value!r}; it takes a number", field="smile")
+            number(name, getattr(self, name), least=-1e6, most=1e6)
         if not abs(self.rho) < 1:
             raise OverlayError(f"rho is {self.rho:g}; a smile takes rho above -1 and below 1", field="smile")
         if not self.eta > 0:
