@@ -16,10 +16,10 @@ Reads no files and prints nothing. A short tour:
 ... )
 >>> result = replay(market, band, volatility=Volatility(quote="variance swap"))
 >>> result
-<Replay overlay: 2015-03-20 to 2020-12-31, growth of 1 to 1.1537>
+<Replay overlay: 2015-03-20 to 2020-12-31, growth of 1 to 0.9742>
 >>> put = result.rolls_frame().iloc[0]
 >>> put.leg, str(put.expiry.date()), round(float(put.strike), 2)
-('put', '2015-06-19', 101.69)
+('put', '2015-06-19', 102.78)
 """
 
 from .engine.replay import replay, replay_many

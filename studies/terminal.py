@@ -20,6 +20,7 @@ ROW_TITLES = {
     "hold": "hold",
     "mix_same_beta": "same-beta mix",
     "mix_same_volatility": "same-volatility mix",
+    "mix_same_return": "same-return mix",
     "mix_same_drawdown": "same-drawdown mix",
     "mix_same_delta": "same-delta mix",
     "put_only": "put only",

@@ -42,7 +42,7 @@ def replay(
     >>> result.dates[0], len(result.legs[0].strike)
     (np.datetime64('2018-03-16'), 12)
     >>> result.to_frame()[["overlay", "hold"]].iloc[-1].round(4).tolist()
-    [0.8719, 0.9319]
+    [0.8379, 0.92]
     """
     return replay_many(market, [overlay], volatility=volatility, start=start, end=end, inception=inception)[0]
 
@@ -96,7 +96,7 @@ def replay_many(
     >>> puts = [Leg(position="long", right="put", strike=PercentOfSpot(p)) for p in (90, 95)]
     >>> results = replay_many(market, [Overlay(legs=(put,)) for put in puts])
     >>> [round(float(r.wealth[-1]), 4) for r in results]
-    [1.1943, 1.1122]
+    [1.0602, 0.9586]
     """
     overlays = list(overlays)
     if volatility is None or isinstance(volatility, Volatility):

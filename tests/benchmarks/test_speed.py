@@ -110,6 +110,6 @@ def test_a_grid_against_single_replays(market: Market) -> None:
         rounds=3,
     )
     print(
-        f"\n400 overlays together {together * 1e3:.0f} ms, one by one {apart * 1e3:.0f} ms: {apart / together:.0f} times"
+        f"\n400 overlays: together {together * 1e3:.0f} ms, singly {apart * 1e3:.0f} ms: {apart / together:.0f} times"
     )
     assert apart / together >= 10

@@ -99,8 +99,8 @@ WRONG = [
     wrong("smile word", more("[volatility]", 'smile = "steeper"'), 16, "volatility.smile", "is 'steeper'; it " + SMILES),
     wrong("smile number", more("[volatility]", "smile = 1"), 16, "volatility.smile", "is 1; it " + SMILES),
     wrong("smile lacks", more("[volatility]", "smile = { eta = 1 }"), 16, "volatility.smile", "lacks rho, gamma"),
-    wrong("smile text", more("[volatility]", 'smile = { rho = "a", eta = 1, gamma = 0.5 }'), 16, "volatility.smile",
-          "rho is 'a'; it takes a number"),
+    wrong("smile text", more("[volatility]", 'smile = { rho = "a", eta = 1, gamma = 0.5 }'), 16, "volatility.smile.rho",
+          "is 'a'; it takes a number"),
     # numbers outside their limits
     wrong("low percent", swap("= 95 }", "= 0.95 }"), 7, "leg.1.strike", "percent_of_spot is 0.95; it takes a number from 1 to 1000"),
     wrong("high percent", swap("= 105 }", "= 1000.5 }"), 14, "leg.2.strike", "percent_of_forward is 1000.5", "from 1 to 1000"),
