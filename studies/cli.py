@@ -7,7 +7,7 @@ from __future__ import annotations
 
 import shlex
 import sys
-from collections.abc import Iterator
+from collections.abc import Callable, Iterator
 from contextlib import contextmanager
 from datetime import datetime
 from pathlib import Path
@@ -15,7 +15,7 @@ from typing import TYPE_CHECKING, Annotated, Any
 
 import typer
 
-from .options import Account, Dividends, First, Last, Prices, Rates, Roll, Store, Unit, Vol, VolQuote, VolUnit
+from .options import Account, AsJson, Dividends, First, Last, Prices, Rates, Roll, Store, Unit, Vol, VolQuote, VolUnit
 
 if TYPE_CHECKING:
     from backtest import Costs, Overlay, Volatility
@@ -128,9 +128,12 @@ def replay(
     out: Annotated[
         Path | None, typer.Option("--out", help="Results folder; a new one under ./results if not given.")
     ] = None,
-    as_json: Annotated[
-        bool, typer.Option("--json", help="Print the summary as JSON on standard output, and nothing else there.")
-    ] = False,
+    as_json: AsJson = False,
+    pdf: Annotated[bool, typer.Option("--pdf", help="Also write the report's pictures as report.pdf.")] = False,
+    resamples: Annotated[
+        int, typer.Option("--resamples", help="How often the history is drawn again for the intervals.")
+    ] = 2000,
+    seed: Annotated[int, typer.Option("--seed", help="Of those draws; the same seed gives the same numbers.")] = 1,
 ) -> None:
     """Replay one overlay on one history and write a results folder."""
     agreed = _overlay(
@@ -152,8 +155,24 @@ def replay(
     window = {"start": first.date().isoformat() if first else None, "end": last.date().isoformat() if last else None}
     _replay_and_write(
         history, label, agreed, rate=rate, dividend_yield=dividend_yield, window=window, out=out, as_json=as_json,
-        results=Path("results"), overlay_file=overlay, command=["rollband", *sys.argv[1:]],
+        results=Path("results"), overlay_file=overlay, command=["rollband", *sys.argv[1:]], seed=seed,
+        resamples=resamples, pdf=pdf,
     )  # fmt: skip
+
+
+@app.command()
+def show(
+    folder: Annotated[Path, typer.Argument(help="A results folder.")],
+    as_json: AsJson = False,
+) -> None:
+    """Print the summary of a results folder again."""
+    from .results import json_text, read_manifest, read_summary
+
+    told = read_summary(folder)
+    if as_json:
+        typer.echo(json_text(told))
+        return
+    _show(told, history=(read_manifest(folder) or {}).get("history") or folder.name)
 
 
 @app.command()
@@ -310,9 +329,10 @@ def _history(
 def _replay_and_write(
     history: History, label: str, agreed: OverlayFile, *, rate: float | None, dividend_yield: float | None,
     window: dict[str, str | None], out: Path | None, as_json: bool, results: Path, overlay_file: Path | None,
-    command: list[str],
+    command: list[str], **report: Any,
 ) -> None:  # fmt: skip
-    from .replay_history import make_answer_folder, summary
+    from .answer_folder import make_answer_folder, whole_summary
+    from .page import DataHealth
     from .results import json_text, sha256_of
 
     inputs = [
@@ -321,38 +341,44 @@ def _replay_and_write(
     ]
     if overlay_file is not None:
         inputs.append({"kind": "overlay", "file": overlay_file.name, "sha256": sha256_of(overlay_file)})
-    with _working("replaying"):
-        found, folder = make_answer_folder(
+    with _working("replaying") as progress:
+        made, folder = make_answer_folder(
             history.frame, agreed, label=label, inputs=inputs, notes=history.notes, rate=rate,
             dividend_yield=dividend_yield, start=window["start"], end=window["end"], out=out, results=results,
-            command=shlex.join(command),
+            command=shlex.join(command), data_health=DataHealth.of(history), progress=progress, **report,
         )  # fmt: skip
+    told = whole_summary(made)
     if as_json:
-        typer.echo(json_text(summary(found)))
+        typer.echo(json_text(told))
         typer.echo(f"Results: {folder}", err=True)
         return
-    from rich.console import Console
-
-    from .terminal import show_answer
-
-    show_answer(Console(), found, history=label)
+    _show(told, history=label)
     _say("")
-    _say(f"Results: {folder}")
+    _say(f"Read {folder / 'report.html'}")
     _say(
-        "  summary.json (all figures), daily.parquet, rolls.parquet, growth.png, drawdown.png, band.png, manifest.json"
+        f"Beside it in {folder}: summary.json (all figures), tables (CSV), daily.parquet, rolls.parquet, growth.png, "
+        "drawdown.png, band.png, manifest.json"
     )
 
 
+def _show(told: dict[str, Any], *, history: str) -> None:
+    from rich.console import Console
+
+    from .terminal import show_summary
+
+    show_summary(Console(), told, history=history)
+
+
 @contextmanager
-def _working(what: str) -> Iterator[None]:
-    """A sign of life on standard error while something takes its time, where a person looks on."""
+def _working(what: str) -> Iterator[Callable[[str], None]]:
+    """A sign of life on standard error while something takes its time, where a person looks on; told each step."""
     if not sys.stderr.isatty():
-        yield
+        yield lambda step: None
         return
     from rich.console import Console
 
-    with Console(stderr=True).status(f"{what} ..."):
-        yield
+    with Console(stderr=True).status(f"{what} ...") as status:
+        yield lambda step: status.update(f"{step} ...")
 
 
 def _tell_history(history: Any) -> None:

@@ -55,3 +55,6 @@ Unit = Annotated[VolUnit | None, typer.Option("--vol-unit", help="Unit of the vo
 Store = Annotated[Path, typer.Option("--store", help="Folder of stored histories.")]
 First = Annotated[datetime | None, typer.Option("--from", formats=["%Y-%m-%d"], help="First day.")]
 Last = Annotated[datetime | None, typer.Option("--to", formats=["%Y-%m-%d"], help="Last day.")]
+AsJson = Annotated[
+    bool, typer.Option("--json", help="Print the summary as JSON on standard output, and nothing else there.")
+]

@@ -1,11 +1,8 @@
-"""One overlay on one history -> an answer, and the answer as a results folder (C14)."""
+"""One overlay on one history -> an answer, and the answer as plain values (C14)."""
 
 from __future__ import annotations
 
-import platform
 from dataclasses import dataclass, fields, replace
-from importlib.metadata import version
-from pathlib import Path
 from typing import Any
 
 import numpy as np
@@ -22,21 +19,10 @@ from backtest import (
 )
 from backtest.analytics import Attribution, Mixes, Performance, RollCosts, attribute, mixes, performance, roll_costs
 from backtest.analytics.performance import years_between
-from backtest.arguments import number
 from backtest.volatility import SMILE_LADDER
 
 from .assumptions import assumptions_of, warnings_of
-from .overlay_files import OverlayFile, overlay_to_table
-from .results import (
-    MANIFEST,
-    SCHEMA,
-    check_replaceable,
-    folder_name,
-    free_folder,
-    write_folder,
-    write_json,
-    write_parquet,
-)
+from .results import SCHEMA
 
 Array = npt.NDArray[np.float64]
 
@@ -71,6 +57,11 @@ class Answer:
     assumptions: dict[str, str]
     warnings: tuple[str, ...]
     history_notes: tuple[str, ...]
+
+    @property
+    def used_smile(self) -> str:
+        """Name in ``ladder`` of the smile that the answer itself is priced under."""
+        return next(name for name, rung in self.ladder.items() if rung.replay is self.replay)
 
     @property
     def paths(self) -> dict[str, Array]:
@@ -177,6 +168,7 @@ def summary(found: Answer) -> dict[str, Any]:
             made[f"mix_{name}"]["share_of_stock"] = mix.share
     made["roll_cost"] = found.costs.as_dict()
     made["attribution"] = found.attribution.annual()
+    made["attribution_risk_shares"] = found.attribution.risk_shares()
     made["smile_ladder"] = {name: _rung_summary(found, name, rung) for name, rung in found.ladder.items()}
     made["warnings"] = list(found.warnings)
     made["history_notes"] = list(found.history_notes)
@@ -209,92 +201,3 @@ def daily_frame(found: Answer) -> pd.DataFrame:
     for place, name in enumerate(name for name in paths if name not in ("overlay", "hold")):
         frame.insert(3 + place, name, paths[name])
     return frame
-
-
-def write_answer(found: Answer, folder: Path, manifest: dict[str, Any]) -> None:
-    """Write all files of a results folder into an existing empty folder."""
-    write_parquet(folder / "daily.parquet", daily_frame(found))
-    write_parquet(folder / "rolls.parquet", found.replay.rolls_frame())
-    _write_pictures(found, folder)
-    write_json(folder / "summary.json", summary(found))
-    write_json(folder / MANIFEST, manifest)
-
-
-def _write_pictures(found: Answer, folder: Path) -> None:
-    from backtest.charts import replay_figures
-
-    shown = {"overlay": found.replay.wealth, "hold": found.replay.hold}
-    if found.mixes.same_beta is not None:
-        shown["same-beta mix"] = found.mixes.same_beta.wealth
-    pictures = replay_figures(
-        dates=found.replay.dates, growth_paths=shown, replay=found.replay, title=found.replay.overlay.name
-    )
-    for name, figure in pictures.items():
-        figure.savefig(folder / f"{name}.png", metadata={"Software": None})
-
-
-def make_answer_folder(
-    frame: pd.DataFrame,
-    agreed: OverlayFile,
-    *,
-    label: str,
-    inputs: list[dict[str, Any]],
-    notes: tuple[str, ...] = (),
-    rate: float | None = None,
-    dividend_yield: float | None = None,
-    start: str | None = None,
-    end: str | None = None,
-    out: Path | None = None,
-    results: Path = Path("results"),
-    command: str = "",
-) -> tuple[Answer, Path]:
-    """Replay one overlay on a history's frame and write its results folder.
-
-    Parameters
-    ----------
-    frame : DataFrame
-        As :meth:`backtest.Market.from_frame` takes it.
-    inputs : list of dict
-        What the numbers were made from: ``kind``, ``file``, ``sha256``, and how it was read.
-    rate, dividend_yield : float, optional
-        Constant, percent a year.
-    start, end : str, optional
-        ISO dates of the window.
-    out : Path, optional
-        The folder; a free one under ``results``, named after history and overlay, if not given.
-
-    Raises
-    ------
-    BacktestError, ResultsError
-    """
-    if out is not None:
-        check_replaceable(out)
-    for option, value, least in (("--rate", rate, -99.0), ("--dividend-yield", dividend_yield, -49.0)):
-        if value is not None:
-            number(option, value, least=least, most=100.0, unit=" percent a year")
-    market = Market.from_frame(
-        frame,
-        rate=None if rate is None else rate / 100.0,
-        dividend_yield=None if dividend_yield is None else dividend_yield / 100.0,
-    )
-    found = answer(market, agreed.overlay, volatility=agreed.volatility, start=start, end=end, history_notes=notes)
-    manifest = {
-        "schema": SCHEMA,
-        "made_by": f"rollband {version('rollband')}",
-        "versions": {name: version(name) for name in ("numpy", "pandas", "pyarrow", "scipy")}
-        | {"python": platform.python_version()},
-        "command": command,
-        "inputs": inputs,
-        "settings": {
-            "overlay": overlay_to_table(agreed.overlay, agreed.volatility),
-            "from": start,
-            "to": end,
-            "rate": rate,
-            "dividend_yield": dividend_yield,
-            "history": {"first": str(frame.index[0].date()), "last": str(frame.index[-1].date()), "days": len(frame)},
-        },
-        "seed": None,  # nothing here is drawn at random
-    }
-    folder = out if out is not None else free_folder(results, folder_name(label, agreed.overlay.name), manifest)
-    write_folder(folder, lambda fresh: write_answer(found, fresh, manifest))
-    return found, folder

@@ -23,6 +23,7 @@ from .errors import ResultsError
 #: Version of the results schema (C14).
 SCHEMA = 1
 MANIFEST = "manifest.json"
+SUMMARY = "summary.json"
 
 
 def write_folder(out: Path, fill: Callable[[Path], None]) -> None:
@@ -95,7 +96,7 @@ def repeatable_part(manifest: dict[str, Any] | None) -> Any:
     if manifest is None:
         return None
     inputs = sorted(json.dumps({**entry, "file": ""}, sort_keys=True) for entry in manifest.get("inputs", []))
-    return inputs, manifest.get("settings"), manifest.get("schema")
+    return inputs, manifest.get("settings"), manifest.get("seed"), manifest.get("schema")
 
 
 def read_manifest(folder: Path) -> dict[str, Any] | None:
@@ -105,6 +106,27 @@ def read_manifest(folder: Path) -> dict[str, Any] | None:
     except (OSError, ValueError):
         return None
     return found if isinstance(found, dict) else None
+
+
+def read_summary(folder: Path) -> dict[str, Any]:
+    """The summary of a results folder.
+
+    Raises
+    ------
+    ResultsError
+        If there is none, or one of another schema.
+    """
+    file = folder / SUMMARY
+    try:
+        found = json.loads(file.read_text(encoding="utf-8"))
+    except FileNotFoundError:
+        raise ResultsError(f"{folder} is no results folder: it has no {SUMMARY}") from None
+    except (OSError, ValueError) as error:
+        raise ResultsError(f"cannot read {file}: {error}") from None
+    schema = found.get("schema") if isinstance(found, dict) else None
+    if schema != SCHEMA:
+        raise ResultsError(f"{file} is of schema {schema!r}; this version reads {SCHEMA}")
+    return found
 
 
 def write_json(path: Path, value: Any) -> None:

@@ -1,17 +1,16 @@
-"""The answer as tables on the terminal, for somebody who holds the portfolio."""
+"""A summary as tables on the terminal, for somebody who holds the portfolio."""
 
 from __future__ import annotations
 
 import math
+from collections.abc import Mapping, Sequence
+from typing import Any
 
 from rich.console import Console
 from rich.table import Table
-
-from backtest.analytics import Performance
-from backtest.analytics.performance import years_between
+from rich.text import Text
 
 from .assumptions import CAUTION
-from .replay_history import Answer, SmileRung
 
 NOT_TO_BE_HAD = "–"
 
@@ -40,129 +39,139 @@ def ratio(value: float | None) -> str:
     return NOT_TO_BE_HAD if value is None or not math.isfinite(value) else f"{value + 0.0:.2f}"
 
 
-def show_answer(console: Console, found: Answer, *, history: str) -> None:
-    """Print headline figures, roll costs, the smile ladder, assumptions and cautions."""
+def show_summary(console: Console, told: Mapping[str, Any], *, history: str) -> None:
+    """Print headline figures, verdict, roll costs, smile ladder, assumptions and cautions of a summary (C14)."""
 
     def say(text: str, style: str | None = None) -> None:
         console.print(text, style=style, highlight=False, markup=False, soft_wrap=True)
 
-    replay = found.replay
-    options = sum(len(leg.opened) for leg in replay.legs)
-    still_open = sum(int(leg.schedule.live.sum()) for leg in replay.legs)
     say("")
-    say(f"{replay.overlay.name}, on {history}", style="bold")
+    say(f"{told['name']}, on {history}", style="bold")
     say(
-        f"{replay.dates[0]} to {replay.dates[-1]}, {years_between(replay.dates):.1f} years; "
-        f"{options} options opened, {still_open} still open at the end"
+        f"{told['inception']} to {told['end']}, {told['years']:.1f} years; "
+        f"{told['rolls']} options opened, {told['open_legs']} still open at the end"
     )
     say("")
-    console.print(_headline_table(found))
+    console.print(_headline_table(told))
     for name in ("overlay", "hold"):
-        say(_fall(name, found.figures[name]))
+        say(_fall(name, told[name]))
+    if told.get("verdict"):
+        say("")
+        say("Verdict", style="bold")
+        console.print(_verdict_table(told["verdict"]))
     say("")
     say("Options, a year, in percent of spot (minus: out of your pocket)", style="bold")
-    console.print(_cost_table(found))
-    for leg in found.costs.legs:
-        say(f"{leg.label}: {leg.paid_off} of {leg.rolls - leg.open_rolls} settled or sold above zero")
+    console.print(_cost_table(told["roll_cost"]))
+    for label, leg in told["roll_cost"]["legs"].items():
+        say(f"{label}: {leg['paid_off']} of {leg['rolls'] - leg['open_rolls']} settled or sold above zero")
     say("")
     say("The same overlay priced under other smiles, against its own same-beta mix", style="bold")
-    console.print(_ladder_table(found))
-    say(_ladder_reading(found))
+    console.print(_ladder_table(told["smile_ladder"]))
+    say(_ladder_reading(told["smile_ladder"]))
     say("")
     say("What this stands on", style="bold")
-    for what, words in found.assumptions.items():
+    for what, words in told["assumptions"].items():
         say(f"  {what.replace('_', ' ')}: {words}")
-    if found.warnings or found.history_notes:
+    if told["warnings"] or told["history_notes"]:
         say("Mind", style="bold")
-    for warning in found.warnings:
+    for warning in told["warnings"]:
         say(f"  {warning}")
-    if found.history_notes:
-        say(f"  {len(found.history_notes)} notes on the history itself are in summary.json")
+    if told["history_notes"]:
+        say(f"  {len(told['history_notes'])} notes on the history itself are in summary.json")
     console.print()
     console.print(CAUTION, style="dim", highlight=False, markup=False)
 
 
-def _headline_table(found: Answer) -> Table:
-    under_a_year = years_between(found.replay.dates) < 1
-    table = Table(box=None, padding=(0, 2, 0, 0))
-    table.add_column("", no_wrap=True)
-    titles = (
-        "return, whole" if under_a_year else "return a year",
+def _headline_table(told: Mapping[str, Any]) -> Table:
+    table = _table(
+        "",
+        "return, whole" if told["years"] < 1 else "return a year",
         "volatility",
         "Sharpe ratio",
         "maximum drawdown",
         "worst 5% of months",
         "beta",
     )
-    for title in titles:
-        table.add_column(title, justify="right", min_width=len(max(title.split(), key=len)))
     for name, title in ROW_TITLES.items():
-        figures = found.figures.get(name)
+        figures = told.get(name)
         if figures is None:
             continue
         table.add_row(
             title,
-            percent(figures.annual_return),
-            percent(figures.volatility),
-            ratio(figures.sharpe),
-            percent(figures.max_drawdown),
-            percent(figures.expected_shortfall_monthly),
-            ratio(figures.beta),
+            percent(figures["annual_return"]),
+            percent(figures["volatility"]),
+            ratio(figures["sharpe"]),
+            percent(figures["max_drawdown"]),
+            percent(figures["expected_shortfall_monthly"]),
+            ratio(figures["beta"]),
             style="bold" if name == "overlay" else None,
         )
     return table
 
 
-def _fall(name: str, figures: Performance | None) -> str:
-    if figures is None or figures.max_drawdown_peak is None:
+def _fall(name: str, figures: Mapping[str, Any] | None) -> str:
+    if figures is None or figures["max_drawdown_peak"] is None:
         return f"{name}: no fall from a peak"
-    again = figures.max_drawdown_recovery
+    again = figures["max_drawdown_recovery"]
     recovered = "not recovered by the end" if again is None else f"recovered by {again}"
     return (
-        f"{name}: deepest fall {percent(figures.max_drawdown)}, {figures.max_drawdown_peak} to "
-        f"{figures.max_drawdown_trough}, {recovered}"
+        f"{name}: deepest fall {percent(figures['max_drawdown'])}, {figures['max_drawdown_peak']} to "
+        f"{figures['max_drawdown_trough']}, {recovered}"
     )
 
 
-def _cost_table(found: Answer) -> Table:
-    years = found.costs.years
-    table = Table(box=None, padding=(0, 2, 0, 0))
-    for title in ("", "premium", "settled or sold", "spread, fees", "still open", "net"):
-        table.add_column(title, justify="right" if title else "left", no_wrap=not title)
-    for leg in found.costs.legs:
+def _verdict_table(clauses: Sequence[Mapping[str, str]]) -> Table:
+    table = Table(box=None, padding=(0, 2, 0, 0), show_header=False)
+    table.add_column(no_wrap=True)
+    table.add_column(no_wrap=True)
+    table.add_column()
+    for clause in clauses:
+        # text, not markup: nothing in it is to be read as a style
+        table.add_row(*(Text(clause[part]) for part in ("title", "finding", "sentence")))
+    return table
+
+
+def _cost_table(costs: Mapping[str, Any]) -> Table:
+    table = _table("", "premium", "settled or sold", "spread, fees", "still open", "net")
+    for label, leg in costs["legs"].items():
+        year = leg["a_year"]
         sums = (
-            leg.premium_received - leg.premium_paid,
-            leg.settled_received - leg.settled_paid,
-            -leg.trading_cost,
-            leg.open_value,
-            leg.net,
+            year["premium_received"] - year["premium_paid"],
+            year["settled_received"] - year["settled_paid"],
+            -year["trading_cost"],
+            year["open_value"],
+            year["net"],
         )
-        table.add_row(leg.label, *(_signed_percent(value / years) for value in sums))
+        table.add_row(label, *(_signed_percent(value) for value in sums))
     return table
 
 
-def _ladder_table(found: Answer) -> Table:
-    table = Table(box=None, padding=(0, 2, 0, 0))
-    titles = ("smile", "return a year", "Sharpe ratio", "mix: Sharpe ratio", "overlay less mix", "options net")
-    for title in titles:
-        table.add_column(title, justify="left" if title == "smile" else "right", no_wrap=title == "smile")
-    for name, rung in found.ladder.items():
-        used = rung.replay is found.replay
+def _ladder_table(ladder: Mapping[str, Any]) -> Table:
+    table = _table("smile", "return a year", "Sharpe ratio", "mix: Sharpe ratio", "overlay less mix", "options net")
+    for name, rung in ladder.items():
         table.add_row(
-            f"{name} (used)" if used else name,
-            percent(rung.figures.annual_return),
-            ratio(rung.figures.sharpe),
-            ratio(None if rung.same_beta_figures is None else rung.same_beta_figures.sharpe),
+            f"{name} (used)" if rung["used"] else name,
+            percent(rung["annual_return"]),
+            ratio(rung["sharpe"]),
+            ratio(rung["mix_same_beta_sharpe"]),
             _signed(sharpe_gain(rung)),
-            _signed_percent(rung.costs.net_a_year),
-            style="bold" if used else None,
+            _signed_percent(rung["net_roll_cost_a_year"]),
+            style="bold" if rung["used"] else None,
         )
     return table
 
 
-def _ladder_reading(found: Answer) -> str:
+def _table(first: str, *titles: str) -> Table:
+    table = Table(box=None, padding=(0, 2, 0, 0))
+    table.add_column(first, no_wrap=True)
+    for title in titles:
+        table.add_column(title, justify="right", min_width=len(max(title.split(), key=len)))
+    return table
+
+
+def _ladder_reading(ladder: Mapping[str, Any]) -> str:
     """One line under the ladder: does the smile turn the comparison?"""
-    gains = {name: sharpe_gain(rung) for name, rung in found.ladder.items()}
+    gains = {name: sharpe_gain(rung) for name, rung in ladder.items()}
     known = {name: gain for name, gain in gains.items() if gain is not None and math.isfinite(gain)}
     if not known:
         return "No Sharpe ratio can be had here."
@@ -175,15 +184,15 @@ def _ladder_reading(found: Answer) -> str:
     return f"The overlay's Sharpe ratio is {side} its same-beta mix under every smile here."
 
 
-def sharpe_gain(rung: SmileRung) -> float | None:
-    """Sharpe ratio of the overlay less that of its same-beta mix."""
-    mix = rung.same_beta_figures
-    return None if mix is None else rung.figures.sharpe - mix.sharpe
+def sharpe_gain(rung: Mapping[str, Any]) -> float | None:
+    """Sharpe ratio of the overlay less that of its same-beta mix, of one rung of a summary's ladder."""
+    own, mix = rung["sharpe"], rung["mix_same_beta_sharpe"]
+    return None if own is None or mix is None else own - mix
 
 
 def _signed(value: float | None) -> str:
     return NOT_TO_BE_HAD if value is None or not math.isfinite(value) else f"{value + 0.0:+.2f}"
 
 
-def _signed_percent(value: float) -> str:
-    return NOT_TO_BE_HAD if value == 0 or not math.isfinite(value) else f"{100 * value:+.2f}%"
+def _signed_percent(value: float | None) -> str:
+    return NOT_TO_BE_HAD if value is None or value == 0 or not math.isfinite(value) else f"{100 * value:+.2f}%"

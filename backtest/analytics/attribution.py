@@ -33,12 +33,25 @@ class Attribution:
     cost: Array
     labels: tuple[str, ...]
 
-    def annual(self) -> dict[str, float]:
-        """Mean of each part times 252; ``volatility_<leg>`` per leg, and ``excess_return`` for the whole."""
+    def parts(self) -> dict[str, Array]:
+        """Every part by name, ``volatility_<leg>`` per leg, then the whole as ``excess_return``."""
         parts = {"passive_equity": self.passive_equity, "equity_timing": self.equity_timing}
         parts |= {f"volatility_{label}": part for label, part in zip(self.labels, self.volatility, strict=True)}
-        parts |= {"cost": self.cost, "excess_return": self.excess}
-        return {name: float(np.mean(part) * TRADING_DAYS) for name, part in parts.items()}
+        return parts | {"cost": self.cost, "excess_return": self.excess}
+
+    def annual(self) -> dict[str, float]:
+        """Mean of each part times 252."""
+        return {name: float(np.mean(part) * TRADING_DAYS) for name, part in self.parts().items()}
+
+    def risk_shares(self) -> dict[str, float]:
+        """Share of each part in the variance of the whole; the parts sum to one (NaN where nothing varies)."""
+        return {name: self.risk_share(part) for name, part in self.parts().items()}
+
+    def risk_share(self, part: Array) -> float:
+        """Covariance of a part with the excess return over the variance of that, as parts of a sum share its risk."""
+        whole = self.excess - np.mean(self.excess)
+        variance = float(np.mean(whole**2))
+        return float(np.mean(part * whole) / variance) if variance > 0 else float("nan")
 
 
 def attribute(replay: Replay) -> Attribution:

@@ -29,6 +29,8 @@ import math
 from collections.abc import Mapping, Sequence
 from dataclasses import dataclass
 
+from .robustness import BreakEven
+
 SURE = 0.95
 MOST_ROLL_DAYS, FEW_ROLL_DAYS = 0.90, 0.50
 
@@ -60,7 +62,7 @@ class Evidence:
     sharpe_difference: Difference
     smile_differences: Mapping[str, float]
     used_smile: str
-    break_even: str
+    break_even: BreakEven
     roll_day_differences: Sequence[float]
     roll_day_returns: Sequence[float]
     without_worst: Sequence[float]
@@ -161,11 +163,21 @@ def _smiles(e: Evidence) -> Clause:
         return Clause(title=title, finding="open", sentence="The overlay cannot be compared under several smiles.")
     low, high = min(known, key=lambda n: known[n]), max(known, key=lambda n: known[n])
     span = f"from {known[low]:+.2f} ({low}) to {known[high]:+.2f} ({high})"
-    turn = f" Break-even: all option vols wrong by {e.break_even}."
+    turn = _turn(e.break_even)
     if known[low] < 0 < known[high]:
-        sentence = f"The prices decide it: that difference runs {span}, priced here under {e.used_smile}.{turn}"
+        sentence = f"The prices decide it: that difference in Sharpe ratio runs {span}; used: {e.used_smile}.{turn}"
         return Clause(title=title, finding="no", sentence=sentence)
-    return Clause(title=title, finding="yes", sentence=f"That difference keeps its sign, {span}.{turn}")
+    return Clause(
+        title=title, finding="yes", sentence=f"That difference in Sharpe ratio keeps its sign, {span}.{turn}"
+    )
+
+
+def _turn(at: BreakEven) -> str:
+    if at.value is None:
+        low, high = at.searched
+        return f" No error of all option vols from {low:+.0f} to {high:+.0f} points turns it."
+    side = "higher" if at.value > 0 else "lower"
+    return f" It turns where all option vols are {abs(at.value):.1f} points {side}."
 
 
 def _roll_days(e: Evidence) -> Clause:
@@ -178,8 +190,8 @@ def _roll_days(e: Evidence) -> Clause:
     finding = "yes" if same >= MOST_ROLL_DAYS else "no" if same <= FEW_ROLL_DAYS else "open"
     returns = [r for r in e.roll_day_returns if math.isfinite(r)]
     sentence = (
-        f"On {100 * same:.0f}% of the {len(known)} possible roll days that difference has the same sign; the return "
-        f"ran from {_percent(min(returns))} to {_percent(max(returns))} a year with the roll day alone."
+        f"On {100 * same:.0f}% of the {len(known)} possible roll days the Sharpe difference has the same sign; the "
+        f"return ran from {_percent(min(returns))} to {_percent(max(returns))} a year with the roll day alone."
     )
     return Clause(title=title, finding=finding, sentence=sentence)
 
@@ -194,7 +206,7 @@ def _crises(e: Evidence) -> Clause:
     changed = "keeps" if keeps else "changes"
     falls = "the worst fall is" if len(known) == 1 else f"each of the {len(known)} worst falls is"
     sentence = (
-        f"That difference {changed} its sign when {falls} left out: {min(known):+.2f}"
+        f"The Sharpe difference {changed} its sign when {falls} left out: {min(known):+.2f}"
         + (f" to {max(known):+.2f}" if len(known) > 1 else "")
         + f", {own:+.2f} with all of them."
     )

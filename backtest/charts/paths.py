@@ -88,7 +88,7 @@ def band_chart(axes: Axes, *, replay: Replay, first: int = 0, days: npt.NDArray[
     axes.margins(x=0.01)
     time_axis(axes)
     if first == 0:
-        legend_above(axes, columns=5)
+        legend_above(axes, columns=3)
     return bare(axes, keep=("left", "bottom"))
 
 

@@ -11,6 +11,7 @@ import pytest
 
 from data_loaders.demo_market import write_demo_market
 from studies.cli import main
+from tests.studies.conftest import without_pictures
 
 
 @dataclass(frozen=True)
@@ -46,8 +47,7 @@ def home(tmp_path: Path, monkeypatch: pytest.MonkeyPatch) -> Path:
 @pytest.fixture
 def rollband(home: Path, monkeypatch: pytest.MonkeyPatch, capsys: pytest.CaptureFixture[str]) -> Run:
     """Run a command as the installed script does, and catch its exit."""
-    # drawing takes longer than everything else; the pictures are looked at in a process of their own
-    monkeypatch.setattr("studies.replay_history._write_pictures", lambda found, folder: None)
+    without_pictures(monkeypatch)
 
     def run(*arguments: object) -> Ran:
         monkeypatch.setattr(sys, "argv", ["rollband", *map(str, arguments)])

@@ -71,8 +71,8 @@ def test_replay_writes_a_results_folder(stored: Run, home: Path) -> None:
     ran = stored("replay", "mine", "--put", 95, "--call", 110, "--call-roll", "month", "--vol-quote", "variance-swap")
     assert (ran.code, ran.err) == (0, "")
     folder = home / "results" / "mine-quarterly-95-put-monthly-110-call"
-    assert tree(folder) == ["daily.parquet", "manifest.json", "rolls.parquet", "summary.json"]
-    assert f"Results: {folder.relative_to(home)}\n" in ran.out
+    assert tree(folder) == ["daily.parquet", "manifest.json", "report.html", "rolls.parquet", "summary.json"]
+    assert f"Read {folder.relative_to(home)}/report.html\n" in ran.out
     summary = read(folder, "summary.json")
     assert (summary["schema"], summary["name"]) == (1, "quarterly 95 put, monthly 110 call")
     kinds = [(source["kind"], source["file"]) for source in read(folder)["inputs"]]
@@ -298,7 +298,7 @@ def test_hostile_overlay_names_stay_in_the_results(stored: Run, home: Path, tmp_
     assert sorted(path.name for path in home.iterdir()) == ["band.toml", "histories", "results"]
     (folder,) = (home / "results").iterdir()
     assert re.fullmatch(r"mine[a-z0-9-]*", folder.name)
-    assert len(tree(folder)) == 4
+    assert len(tree(folder)) == 5
 
 
 # ---------------------------------------------------------------- demo
@@ -309,7 +309,7 @@ def test_demo(rollband: Run, home: Path) -> None:
     assert (ran.code, ran.err) == (0, "")
     assert tree(home / "here") == [
         "dividends.csv", "histories/demo.parquet", "overlay.toml", "prices.csv", "rates.csv", "results/daily.parquet",
-        "results/manifest.json", "results/rolls.parquet", "results/summary.json", "vol.csv",
+        "results/manifest.json", "results/report.html", "results/rolls.parquet", "results/summary.json", "vol.csv",
     ]  # fmt: skip
     before = content(home / "here" / "results", *BYTES, "manifest.json")
     assert rollband("demo", "here").code == 0
@@ -339,3 +339,63 @@ def test_demo_beside_files_of_ones_own(rollband: Run, home: Path) -> None:
     assert rollband("demo", ".").code == 0
     assert (home / "notes.txt").read_text() == "mine"
     assert (home / "results" / "summary.json").is_file()
+
+
+# ---------------------------------------------------------------- show
+
+
+def test_show_prints_what_replay_printed(stored: Run, home: Path) -> None:
+    first = stored("replay", "mine", "--put", 95, "--call", 110, "--out", "o")
+    again = stored("show", "o")
+    assert (again.code, again.err) == (0, "")
+    # all but the lines that say where the results are
+    assert again.out.strip() == first.out[: first.out.index("Read o")].strip()
+    assert "Verdict" in again.out
+    assert "on mine" in again.out
+
+
+def test_show_as_json_is_the_summary(stored: Run, home: Path) -> None:
+    told = stored("replay", "mine", "--put", 95, "--out", "o", "--json")
+    assert stored("show", "o", "--json").out == told.out == (home / "o" / "summary.json").read_text(encoding="utf-8")
+
+
+@pytest.mark.parametrize(
+    ("text", "said"),
+    [
+        (None, "rollband: o is no results folder: it has no summary.json"),
+        ("{", "rollband: cannot read o/summary.json: "),
+        ('{"schema": 2}', "rollband: o/summary.json is of schema 2; this version reads 1"),
+        ("[1]", "rollband: o/summary.json is of schema None; this version reads 1"),
+    ],
+)
+def test_show_refuses_what_is_no_results_folder(rollband: Run, home: Path, text: str | None, said: str) -> None:
+    if text is not None:
+        (home / "o").mkdir()
+        (home / "o" / "summary.json").write_text(text)
+    ran = rollband("show", "o")
+    assert (ran.code, ran.out) == (5, "")
+    assert ran.err.startswith(said)
+
+
+def test_the_same_seed_gives_the_same_intervals_and_another_does_not(stored: Run, home: Path) -> None:
+    def inference(out: str, *options: object) -> dict[str, Any]:
+        stored("replay", "mine", "--put", 95, "--from", "2018-01-01", "--out", out, "--json", *options)
+        assert read(home / out)["seed"] == (7 if options else 1)
+        return read(home / out, "summary.json")["inference"]
+
+    assert inference("a") == inference("b")
+    assert inference("c", "--seed", 7)["overlay"] != inference("a")["overlay"]
+
+
+@pytest.mark.parametrize(
+    ("option", "value", "rule"),
+    [
+        ("--resamples", 99, "--resamples is 99; it takes a whole number from 100 to 1000000"),
+        ("--seed", -1, "--seed is -1; it takes a whole number from 0 to 4294967295"),
+    ],
+)
+def test_draws_out_of_range_are_refused(stored: Run, home: Path, option: str, value: int, rule: str) -> None:
+    ran = stored("replay", "mine", "--put", 95, option, value)
+    assert ran.code == 2
+    assert rule in ran.err
+    assert not (home / "results").exists()

@@ -204,7 +204,9 @@ def test_the_folder_one_stands_in(rollband: Run, home: Path, market: Path) -> No
     # an empty working folder as --out: filled, or refused with nothing left behind
     ran = rollband("replay", "--prices", market / "prices.csv", "--put", 95, "--out", ".")
     if ran.code == 0:
-        assert sorted(tree(home)) == ["daily.parquet", "manifest.json", "rolls.parquet", "summary.json"]
+        assert sorted(tree(home)) == [
+            "daily.parquet", "manifest.json", "report.html", "rolls.parquet", "summary.json", "tables",
+        ]  # fmt: skip
     else:
         assert ran.code == 5
         assert tree(home) == {}

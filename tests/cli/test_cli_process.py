@@ -39,7 +39,7 @@ def test_help_says_what_it_is_for_and_the_caution_once(tmp_path: Path) -> None:
     assert list(tmp_path.iterdir()) == []
 
 
-@pytest.mark.parametrize("command", ["load", "replay", "demo"])
+@pytest.mark.parametrize("command", ["load", "replay", "show", "demo"])
 def test_help_of_every_command(tmp_path: Path, command: str) -> None:
     ran = run(command, "--help", cwd=tmp_path)
     assert (ran.returncode, ran.stderr) == (0, "")
@@ -77,18 +77,19 @@ def test_demo_with_its_pictures(tmp_path: Path) -> None:
     assert (ran.returncode, ran.stderr) == (0, "")
     results = tmp_path / "here" / "results"
     assert sorted(path.name for path in results.iterdir()) == [
-        "band.png", "daily.parquet", "drawdown.png", "growth.png", "manifest.json", "rolls.parquet", "summary.json",
+        "band.png", "daily.parquet", "drawdown.png", "growth.png", "manifest.json", "report.html", "rolls.parquet",
+        "summary.json", "tables",
     ]  # fmt: skip
     for name in ("band", "drawdown", "growth"):
         assert (results / f"{name}.png").read_bytes().startswith(b"\x89PNG\r\n\x1a\n")
         assert f"{name}.png" in ran.stdout
-    before = {path.name: path.read_bytes() for path in results.iterdir() if path.suffix != ".png"}
+    before = {path.name: path.read_bytes() for path in results.iterdir() if path.is_file()}
     # another process gives the same bytes, whatever its hash seed
     again = run(
         "replay", "demo", "--store", "here/histories", "--overlay", "here/overlay.toml", "--out", "again", cwd=tmp_path
     )
     assert again.returncode == 0
-    for name in ("daily.parquet", "rolls.parquet", "summary.json"):
+    for name in ("daily.parquet", "rolls.parquet", "summary.json", "band.png"):
         assert (tmp_path / "again" / name).read_bytes() == before[name]
 
 

@@ -31,10 +31,12 @@ from backtest import (
 )
 from backtest.volatility import SMILE_LADDER
 from data_loaders import History
+from studies.answer_folder import make_answer_folder
 from studies.errors import ResultsError
 from studies.overlay_files import OverlayFile, overlay_from_table, shorthand_overlay
-from studies.replay_history import Answer, answer, daily_frame, make_answer_folder, summary
+from studies.replay_history import Answer, answer, daily_frame, summary
 from studies.results import json_text
+from tests.studies.conftest import without_pictures
 
 PUT = Leg(position="long", right="put", roll="quarter", strike=PercentOfSpot(95))
 CALL = Leg(position="short", right="call", roll="month", strike=PercentOfSpot(110))
@@ -124,12 +126,12 @@ def make(demo_history: History, tmp_path_factory: pytest.TempPathFactory) -> Cal
     def made(case: str) -> Made:
         if case not in kept:
             with pytest.MonkeyPatch.context() as patch:
-                patch.setattr("studies.replay_history._write_pictures", lambda found, folder: None)
-                found, folder = make_answer_folder(
+                without_pictures(patch)
+                report, folder = make_answer_folder(
                     demo_history.frame, CASES[case], label="demo", inputs=[], notes=demo_history.notes,
-                    out=tmp_path_factory.mktemp("made") / "out", command="rollband replay demo",
+                    out=tmp_path_factory.mktemp("made") / "out", command="rollband replay demo", resamples=100,
                 )  # fmt: skip
-            kept[case] = read_back(demo_history, found, folder)
+            kept[case] = read_back(demo_history, report.answer, folder)
         return kept[case]
 
     return made
@@ -232,7 +234,7 @@ def test_manifest(band: Made) -> None:
 
 def test_the_folder_holds_nothing_else(band: Made) -> None:
     assert sorted(path.name for path in band.folder.iterdir()) == [
-        "daily.parquet", "manifest.json", "rolls.parquet", "summary.json",
+        "daily.parquet", "manifest.json", "report.html", "rolls.parquet", "summary.json", "tables",
     ]  # fmt: skip
 
 
@@ -243,7 +245,7 @@ def test_the_same_bytes_again(made: Made, tmp_path: Path) -> None:
     agreed = CASES[next(name for name, case in CASES.items() if case.overlay is made.found.replay.overlay)]
     _, again = make_answer_folder(
         made.history.frame.copy(), agreed, label="demo", inputs=[], notes=made.history.notes, out=tmp_path / "again",
-        command="rollband replay demo",
+        command="rollband replay demo", resamples=100,
     )  # fmt: skip
     for name in ("daily.parquet", "rolls.parquet", "summary.json", "manifest.json"):
         assert (again / name).read_bytes() == (made.folder / name).read_bytes()

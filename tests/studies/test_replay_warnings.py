@@ -14,8 +14,9 @@ import pytest
 
 from backtest import Leg, Market, Overlay, PercentOfSpot, RealisedVolatility, Volatility
 from data_loaders import History
+from studies.answer_folder import make_answer_folder
 from studies.overlay_files import OverlayFile
-from studies.replay_history import answer, daily_frame, make_answer_folder, summary
+from studies.replay_history import answer, daily_frame, summary
 from studies.results import json_text
 
 PUT = Leg(position="long", right="put", roll="quarter", strike=PercentOfSpot(95))
@@ -60,9 +61,10 @@ def test_a_few_days(demo_history: History, days: int) -> None:
 
 def test_constants_are_percents(demo_history: History, tmp_path: Path) -> None:
     frame = demo_history.frame[["close", "vol"]]
-    found, folder = make_answer_folder(
-        frame, AGREED, label="x", inputs=[], rate=3.0, dividend_yield=1.5, out=tmp_path / "o"
+    report, folder = make_answer_folder(
+        frame, AGREED, label="x", inputs=[], rate=3.0, dividend_yield=1.5, out=tmp_path / "o", resamples=100
     )
+    found = report.answer
     assert found.replay.market.rate[0] == pytest.approx(np.log(1.03), rel=1e-15)
     assert found.replay.market.dividend_yield[0] == pytest.approx(np.log(1.015), rel=1e-15)
     manifest = json.loads((folder / "manifest.json").read_text(encoding="utf-8"))

@@ -1,0 +1,182 @@
+"""An answer and its report as a results folder (C14)."""
+
+from __future__ import annotations
+
+import platform
+from collections.abc import Callable
+from importlib.metadata import version
+from pathlib import Path
+from typing import TYPE_CHECKING, Any
+
+import pandas as pd
+
+from backtest import Market
+from backtest.arguments import number, whole_number
+
+from .overlay_files import OverlayFile, overlay_to_table
+from .replay_history import Answer, answer, daily_frame, summary
+from .report import RESAMPLES, SEED, Report, make_report, report_summary
+from .results import (
+    MANIFEST,
+    SCHEMA,
+    SUMMARY,
+    check_replaceable,
+    folder_name,
+    free_folder,
+    plain,
+    write_folder,
+    write_json,
+    write_parquet,
+)
+
+if TYPE_CHECKING:
+    from .page.health import DataHealth
+
+
+#: Folder of the CSV tables in a results folder.
+TABLES = "tables"
+
+
+def whole_summary(report: Report) -> dict[str, Any]:
+    """The summary of C14 with what the report adds, as plain values."""
+    made = summary(report.answer)
+    notes = {key: made.pop(key) for key in ("warnings", "history_notes")}
+    return plain(made | report_summary(report) | notes)
+
+
+def write_answer(
+    report: Report,
+    folder: Path,
+    manifest: dict[str, Any],
+    *,
+    history: str,
+    data_health: DataHealth | None = None,
+    pdf: bool = False,
+) -> None:
+    """Write all files of a results folder into an existing empty folder."""
+    from .page import build_report
+    from .page.pdf import write_pdf
+    from .tables_csv import write_tables
+
+    found = report.answer
+    write_parquet(folder / "daily.parquet", daily_frame(found))
+    write_parquet(folder / "rolls.parquet", found.replay.rolls_frame())
+    _write_pictures(found, folder)
+    write_json(folder / SUMMARY, whole_summary(report))
+    write_tables(report, folder / TABLES)
+    page = build_report(
+        found,
+        report.findings,
+        report.inference,
+        report.clauses,
+        history=history,
+        how_to_run=manifest["command"],
+        data_health=data_health,
+    )
+    (folder / "report.html").write_text(page, encoding="utf-8")
+    if pdf:
+        write_pdf(report, folder / "report.pdf", history=history)
+    write_json(folder / MANIFEST, manifest)
+
+
+def _write_pictures(found: Answer, folder: Path) -> None:
+    from backtest.charts import replay_figures
+
+    shown = {"overlay": found.replay.wealth, "hold": found.replay.hold}
+    if found.mixes.same_beta is not None:
+        shown["same-beta mix"] = found.mixes.same_beta.wealth
+    pictures = replay_figures(
+        dates=found.replay.dates, growth_paths=shown, replay=found.replay, title=found.replay.overlay.name
+    )
+    for name, figure in pictures.items():
+        figure.savefig(folder / f"{name}.png", metadata={"Software": None})
+
+
+def make_answer_folder(
+    frame: pd.DataFrame,
+    agreed: OverlayFile,
+    *,
+    label: str,
+    inputs: list[dict[str, Any]],
+    notes: tuple[str, ...] = (),
+    rate: float | None = None,
+    dividend_yield: float | None = None,
+    start: str | None = None,
+    end: str | None = None,
+    out: Path | None = None,
+    results: Path = Path("results"),
+    command: str = "",
+    data_health: DataHealth | None = None,
+    seed: int = SEED,
+    resamples: int = RESAMPLES,
+    pdf: bool = False,
+    progress: Callable[[str], None] = lambda step: None,
+) -> tuple[Report, Path]:
+    """Replay one overlay on a history's frame, report on it, and write its results folder.
+
+    Parameters
+    ----------
+    frame : DataFrame
+        As :meth:`backtest.Market.from_frame` takes it.
+    inputs : list of dict
+        What the numbers were made from: ``kind``, ``file``, ``sha256``, and how it was read.
+    rate, dividend_yield : float, optional
+        Constant, percent a year.
+    start, end : str, optional
+        ISO dates of the window.
+    out : Path, optional
+        The folder; a free one under ``results``, named after history and overlay, if not given.
+    command : str
+        What gives the same folder again, for manifest and page.
+    seed, resamples : int
+        Of the resampling.
+    pdf : bool
+        Whether the pictures are also wanted as one PDF file.
+    progress : callable
+        Told what is being done.
+
+    Raises
+    ------
+    BacktestError, ResultsError
+    """
+    if out is not None:
+        check_replaceable(out)
+    for option, value, least in (("--rate", rate, -99.0), ("--dividend-yield", dividend_yield, -49.0)):
+        if value is not None:
+            number(option, value, least=least, most=100.0, unit=" percent a year")
+    whole_number("--seed", seed, least=0, most=2**32 - 1)
+    whole_number("--resamples", resamples, least=100, most=1_000_000)
+    progress("replaying")
+    market = Market.from_frame(
+        frame,
+        rate=None if rate is None else rate / 100.0,
+        dividend_yield=None if dividend_yield is None else dividend_yield / 100.0,
+    )
+    found = answer(market, agreed.overlay, volatility=agreed.volatility, start=start, end=end, history_notes=notes)
+    manifest = {
+        "schema": SCHEMA,
+        "made_by": f"rollband {version('rollband')}",
+        "versions": {name: version(name) for name in ("numpy", "pandas", "pyarrow", "scipy")}
+        | {"python": platform.python_version()},
+        "command": command,
+        "history": label,
+        "inputs": inputs,
+        "settings": {
+            "overlay": overlay_to_table(agreed.overlay, agreed.volatility),
+            "from": start,
+            "to": end,
+            "rate": rate,
+            "dividend_yield": dividend_yield,
+            "resamples": resamples,
+            "history": {"first": str(frame.index[0].date()), "last": str(frame.index[-1].date()), "days": len(frame)},
+        },
+        "seed": seed,
+    }
+    folder = out if out is not None else free_folder(results, folder_name(label, agreed.overlay.name), manifest)
+    report = make_report(found, seed=seed, resamples=resamples, progress=progress)
+    progress("writing tables, pictures and page")
+    write_folder(
+        folder,
+        lambda fresh: write_answer(report, fresh, manifest, history=label, data_health=data_health, pdf=pdf),
+    )
+    return report, folder
