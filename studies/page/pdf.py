@@ -22,6 +22,8 @@ if TYPE_CHECKING:
 
 #: Landscape, a shape that both A4 and letter paper take without scaling down much.
 PAGE_INCHES = (10.0, 7.0)
+#: Left, bottom, width and height of what a page holds, in parts of it.
+MARGINS = (0.03, 0.03, 0.94, 0.94)
 LINE = 108
 
 
@@ -67,11 +69,12 @@ def _first_page(report: Report, *, title: str, history: str) -> Figure:
 def _page(picture: Picture) -> Figure:
     """The chart drawn for the page, on a sheet of its own with its title and its reading."""
     figure = picture.figure
-    width, height = figure.get_size_inches()
-    grown = min(PAGE_INCHES[0] / width, PAGE_INCHES[1] / height, 1.45)
-    figure.set_size_inches(width * grown, height * grown + 0.9)
-    figure.suptitle(picture.title, x=0.01, ha="left", fontsize=11.0)
-    figure.supxlabel(textwrap.fill(picture.reading, LINE - 8), x=0.01, ha="left", fontsize=8.8)
+    figure.set_size_inches(*PAGE_INCHES)
+    engine = figure.get_layout_engine()
+    if engine is not None:
+        engine.set(rect=MARGINS)  # type: ignore[call-arg]  # of the constrained layout, which all charts have
+    figure.suptitle(picture.title, x=0.04, ha="left", fontsize=11.0)
+    figure.supxlabel(textwrap.fill(picture.reading, LINE), x=0.04, ha="left", fontsize=8.8)
     return figure
 
 
