@@ -12,6 +12,7 @@ import numpy.typing as npt
 from backtest.analytics.performance import daily_excess, years_between
 from backtest.analytics.resampling import Inference, independent_payoffs, paired_bootstrap
 from backtest.analytics.robustness import BreakEvens, RollDayLuck
+from backtest.analytics.roll_costs import payoffs_at_close
 from backtest.analytics.verdict import Clause, Difference, Evidence, verdict
 
 from .findings import Findings, find
@@ -113,7 +114,7 @@ def put_payoffs(found: Answer) -> int | None:
     Puts of one overlay pay in the same falls, so their counts are not added up.
     """
     counts = [
-        independent_payoffs(leg.close_value[~leg.schedule.live])
+        independent_payoffs(payoffs_at_close(found.replay, leg))
         for leg in found.replay.legs
         if leg.leg.right == "put" and leg.signed_ratio > 0
     ]

@@ -11,6 +11,7 @@ from __future__ import annotations
 from dataclasses import dataclass
 
 import numpy as np
+import numpy.typing as npt
 
 from ..engine.result import LegReplay, Replay
 from .performance import years_between
@@ -74,6 +75,16 @@ MONEY_FIELDS = (
 def roll_costs(replay: Replay) -> RollCosts:
     """Add up what each leg's rolls cost and brought."""
     return RollCosts(years=years_between(replay.dates), legs=tuple(_leg_costs(replay, leg) for leg in replay.legs))
+
+
+def payoffs_at_close(replay: Replay, leg: LegReplay) -> npt.NDArray[np.float64]:
+    """Intrinsic value of each finished option of a leg on the day it was closed, in price, shape ``(finished roll,)``.
+
+    For one that settled this is what it paid; one sold before expiry was worth more, but protected by no more.
+    """
+    done = ~leg.schedule.live
+    sign = 1.0 if leg.leg.right == "call" else -1.0
+    return np.maximum(sign * (replay.spot[leg.closed[done]] - leg.strike[done]), 0.0)
 
 
 def _leg_costs(replay: Replay, leg: LegReplay) -> LegCosts:

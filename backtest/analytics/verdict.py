@@ -167,9 +167,7 @@ def _smiles(e: Evidence) -> Clause:
     if known[low] < 0 < known[high]:
         sentence = f"The prices decide it: that difference in Sharpe ratio runs {span}; used: {e.used_smile}.{turn}"
         return Clause(title=title, finding="no", sentence=sentence)
-    return Clause(
-        title=title, finding="yes", sentence=f"That difference in Sharpe ratio keeps its sign, {span}.{turn}"
-    )
+    return Clause(title=title, finding="yes", sentence=f"That difference in Sharpe ratio keeps its sign, {span}.{turn}")
 
 
 def _turn(at: BreakEven) -> str:

@@ -8,6 +8,7 @@ from typing import TypeAlias
 import numpy as np
 
 from backtest.analytics.resampling import Inference, Interval, independent_payoffs
+from backtest.analytics.roll_costs import payoffs_at_close
 from backtest.analytics.verdict import Difference
 
 from ..replay_history import Answer
@@ -99,7 +100,7 @@ def payoff_words(found: Answer) -> str | None:
         return None
     said = []
     for leg in puts:
-        settled = leg.close_value[~leg.schedule.live]
+        settled = payoffs_at_close(found.replay, leg)
         times = independent_payoffs(settled)
         name = "bought put" if len(puts) == 1 else leg.label.replace("_", " ")
         if not times:

@@ -16,7 +16,9 @@ from backtest import Leg, Market, Overlay, PercentOfSpot, RealisedVolatility, Vo
 from data_loaders import History
 from studies.answer_folder import make_answer_folder
 from studies.overlay_files import OverlayFile
+from studies.page.luck import payoff_words
 from studies.replay_history import answer, daily_frame, summary
+from studies.report import put_payoffs
 from studies.results import json_text
 
 PUT = Leg(position="long", right="put", roll="quarter", strike=PercentOfSpot(95))
@@ -180,3 +182,22 @@ def test_warning_of_proceeds_below_costs(demo_history: History) -> None:
     assert below > 0
     assert f"{below} of {calls} sold options (call) brought less than they cost to trade" in found.warnings
     assert rolls["flag"].str.contains("proceeds below zero").sum() == below
+
+
+# ---------------------------------------------------------------- put payoffs
+
+
+def test_a_put_sold_before_expiry_counts_as_paid_only_in_the_money(demo_history: History) -> None:
+    # a year's put, replaced every quarter: the model value at its sale is never zero, the fall below its strike is rare
+    leg = Leg(position="long", right="put", roll="quarter", term_months=12, strike=PercentOfSpot(90))
+    found = answer(Market.from_frame(demo_history.frame), Overlay(legs=(leg,)), volatility=SWAP)
+    (held,) = found.replay.legs
+    spot, closed = found.replay.spot, held.closed[:-1]
+    below = [bool(spot[day] < strike) for day, strike in zip(closed, held.strike[:-1], strict=True)]
+    starts = sum(now and not before for before, now in zip([False, *below], below, strict=False))
+    assert (held.close_value[:-1] > 0).all()
+    assert 0 < starts < len(below) // 4
+    assert put_payoffs(found) == starts
+    words = payoff_words(found)
+    assert words is not None
+    assert words.startswith(f"The bought put paid off in {sum(below)} rolls of {len(below)}, {starts} separate times")
