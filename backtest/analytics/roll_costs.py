@@ -13,7 +13,7 @@ from dataclasses import dataclass
 import numpy as np
 import numpy.typing as npt
 
-from ..engine.result import LegReplay, Replay
+from ..engine.result import LegReplay, Replay, held
 from .performance import years_between
 
 
@@ -90,9 +90,10 @@ def payoffs_at_close(replay: Replay, leg: LegReplay) -> npt.NDArray[np.float64]:
 def _leg_costs(replay: Replay, leg: LegReplay) -> LegCosts:
     spot = replay.spot[leg.opened]
     live = leg.schedule.live
-    weight = leg.leg.ratio / spot
-    premium = float(np.sum(weight * leg.premium))
-    settled = float(np.sum((weight * leg.close_value)[~live]))
+    ratio = leg.leg.ratio
+    premium = float(np.sum(held(ratio, leg.premium) / spot))
+    closing = held(ratio, leg.close_value) / spot
+    settled = float(np.sum(closing[~live]))
     bought = leg.leg.direction > 0
     return LegCosts(
         label=leg.label,
@@ -100,10 +101,10 @@ def _leg_costs(replay: Replay, leg: LegReplay) -> LegCosts:
         open_rolls=int(live.sum()),
         premium_paid=premium if bought else 0.0,
         premium_received=0.0 if bought else premium,
-        trading_cost=float(np.sum(weight * (leg.open_cost + leg.exit_cost))),
+        trading_cost=float(np.sum(held(ratio, leg.open_cost + leg.exit_cost) / spot)),
         settled_received=settled if bought else 0.0,
         settled_paid=0.0 if bought else settled,
-        open_value=leg.leg.direction * float(np.sum((weight * leg.close_value)[live])),
+        open_value=leg.leg.direction * float(np.sum(closing[live])),
         net=float(np.sum(leg.profit / spot)),
         paid_off=int(np.count_nonzero(leg.close_value[~live] > 0)),
     )

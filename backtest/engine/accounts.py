@@ -71,6 +71,8 @@ class FamilyState:
     shares: Array  # (day,), resize account: after trades
     shares_before: Array  # (anchor roll,)
     units_cash: Array  # (anchor roll,)
+    hold: Array  # (day,), growth of 1 in the share alone
+    rate_return: Array  # (day,), zero on the first
 
 
 def family_state(plan: Plan, family: Family) -> FamilyState:
@@ -81,16 +83,20 @@ def family_state(plan: Plan, family: Family) -> FamilyState:
     days = plan.end - plan.start + 1
     anchor_of_day = np.repeat(np.arange(len(anchor_day)), np.diff(anchor_day, append=days))
     share_growth = market.share_growth[window] / market.share_growth[plan.start]
+    cash_growth = market.cash_growth[window] / market.cash_growth[plan.start]
+    spot = market.spot[window]
     at_anchor = share_growth[anchor_day]
     return FamilyState(
         anchor_day=anchor_day,
         anchor_of_day=anchor_of_day,
-        spot=market.spot[window],
-        cash_growth=market.cash_growth[window] / market.cash_growth[plan.start],
+        spot=spot,
+        cash_growth=cash_growth,
         share_growth=share_growth,
         shares=share_growth / at_anchor[anchor_of_day],
         shares_before=np.concatenate([[1.0], at_anchor[1:] / at_anchor[:-1]]),
         units_cash=at_anchor,
+        hold=share_growth * (spot / spot[0]),
+        rate_return=np.concatenate([[0.0], cash_growth[1:] / cash_growth[:-1] - 1.0]),
     )
 
 
@@ -235,9 +241,7 @@ def settle_accounts(
         value = wealth[block]
         value[:] = base
         for slot in range(rows.shape[1]):
-            part = books.path.take(rows[block, slot], axis=0)
-            part *= ratio[block, slot, np.newaxis]
-            value += part
+            value += _weighted(books.path.take(rows[block, slot], axis=0), ratio[block, slot])
         if account == "resize":
             value *= units[block].take(state.anchor_of_day, axis=1)
         else:
@@ -258,9 +262,8 @@ def _chain_units(state: FamilyState, books: Books, rows: Days, ratio: Array, sto
     value = np.broadcast_to(state.shares_before * spot, (len(rows), len(spot))).copy()
     price = np.broadcast_to(spot, value.shape).copy()
     for slot in range(rows.shape[1]):
-        weight = ratio[:, slot, np.newaxis]
-        value += weight * books.before[rows[:, slot]]
-        price += weight * books.price[rows[:, slot]]
+        value += _weighted(books.before[rows[:, slot]], ratio[:, slot])
+        price += _weighted(books.price[rows[:, slot]], ratio[:, slot])
     # before the first roll the holder has shares alone: one unit of wealth is one share's worth of spot
     value[:, 0] = spot[0]
     charge = stock_bps[:, np.newaxis] / 1e4 * spot
@@ -272,6 +275,13 @@ def _chain_units(state: FamilyState, books: Books, rows: Days, ratio: Array, sto
     units = np.cumprod(growth, axis=1) / spot[0]
     held = np.concatenate([np.full((len(rows), 1), 1.0 / spot[0]), units[:, :-1]], axis=1) * state.shares_before
     return units, charge * np.abs(units - held)
+
+
+def _weighted(rows: Array, ratio: Array) -> Array:
+    """Each row times its ratio, in place; what is held at ratio zero counts for nothing, even without a price."""
+    rows *= ratio[:, np.newaxis]
+    rows[ratio == 0.0] = 0.0
+    return rows
 
 
 def _blank_ruin(wealth: Array) -> None:

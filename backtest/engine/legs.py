@@ -7,17 +7,19 @@ the same rolls, then broadcast over the strikes.
 
 from __future__ import annotations
 
-from dataclasses import dataclass
+from dataclasses import dataclass, replace
+from typing import Any
 
 import numpy as np
 import numpy.typing as npt
 
+from ..errors import OverlayError
 from ..market import DAYS_IN_YEAR, Market
 from ..overlay import Costs
 from ..pricing.black import black, black_with_delta
-from ..strikes import OpenState
+from ..strikes import OpenState, StrikeRule
 from ..volatility.smile import SmileSlice
-from .plan import Plan, PricingGroup
+from .plan import GroupKey, Plan, PricingGroup
 
 Array = npt.NDArray[np.float64]
 Days = npt.NDArray[np.intp]
@@ -128,8 +130,53 @@ class LegPaths:
         return cost
 
 
-def price_group(plan: Plan, group: PricingGroup) -> LegPaths:
-    """Price all legs of a group over the plan's window."""
+#: Arrays of a leg that :class:`PricedLegs` keeps, first axis leg.
+KEPT = ("strike", "premium", "close_value", "vol_open", "delta_open", "mark", "delta")
+#: What :class:`PricedLegs` holds at most, in marks and deltas: 400 MB.
+MOST_KEPT = 25_000_000
+
+
+class PricedLegs:
+    """Legs of one market that are priced already, so that the batches of a grid price each leg once.
+
+    ``priced`` counts the legs that had to be priced. What is kept is bounded: when it grows past ``most`` values,
+    all of it is let go.
+    """
+
+    def __init__(self, market: Market, *, most: int = MOST_KEPT) -> None:
+        self.market = market
+        self.priced = 0
+        self._most, self._kept = most, 0
+        self._rows: dict[tuple[int, int, GroupKey], dict[tuple[float, StrikeRule], tuple[LegPaths, int]]] = {}
+
+    def group(self, plan: Plan, group: PricingGroup) -> LegPaths:
+        """The paths of a group, those not known yet priced in one go."""
+        if plan.market is not self.market:
+            raise OverlayError("these legs were priced on another market")
+        rows = self._rows.setdefault((plan.start, plan.end, group.key), {})
+        wanted = list(zip(group.signs, group.rules, strict=True))
+        new = [leg for leg in wanted if leg not in rows]
+        if new:
+            fresh = _price(plan, replace(group, signs=[sign for sign, _ in new], rules=[rule for _, rule in new]))
+            rows.update({leg: (fresh, row) for row, leg in enumerate(new)})
+            self.priced += len(new)
+            self._kept += len(new) * (plan.end - plan.start + 1)
+        found = [rows[leg] for leg in wanted]
+        if self._kept > self._most:
+            self._rows, self._kept = {}, 0
+        first = found[0][0]
+        if len(new) == len(wanted):
+            return first
+        arrays: dict[str, Any] = {name: np.stack([getattr(paths, name)[row] for paths, row in found]) for name in KEPT}
+        return replace(first, group=group, signs=np.array(group.signs)[:, np.newaxis], **arrays)
+
+
+def price_group(plan: Plan, group: PricingGroup, priced: PricedLegs | None = None) -> LegPaths:
+    """All legs of a group over the plan's window, from ``priced`` where they are in it."""
+    return _price(plan, group) if priced is None else priced.group(plan, group)
+
+
+def _price(plan: Plan, group: PricingGroup) -> LegPaths:
     market, rolls = plan.market, group.schedule
     window = slice(plan.start, plan.end + 1)
     days_held = np.append(rolls.opened[1:], plan.end + 1) - rolls.opened

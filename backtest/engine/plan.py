@@ -11,6 +11,7 @@ from __future__ import annotations
 
 from collections.abc import Sequence
 from dataclasses import dataclass, field
+from typing import TypeAlias
 
 import numpy as np
 import numpy.typing as npt
@@ -27,13 +28,18 @@ LONG_TERM_MONTHS = 4
 SHORT_TENOR_DAYS = 120
 
 
+#: Cycle, term in months, volatility and shift of a group of legs.
+GroupKey: TypeAlias = tuple[ListedCycle, int, Volatility, float]
+
+
 @dataclass(frozen=True, slots=True, kw_only=True, eq=False)
 class PricingGroup:
     """Distinct legs with the same rolls and the same volatility; they share all that depends on the day alone.
 
-    ``vol_shift`` is added to every vol, decimal.
+    ``key`` tells groups of one window apart; ``vol_shift`` is added to every vol, decimal.
     """
 
+    key: GroupKey
     schedule: Schedule
     volatility: BoundVolatility
     vol_shift: float = 0.0
@@ -124,7 +130,7 @@ class _PlanBuilder:
         self.plan = Plan(market=market, start=start, end=end, groups=[], families=[])
         self._bound = bound
         self._schedules: dict[tuple[ListedCycle, int], Schedule] = {}
-        self._groups: dict[tuple[ListedCycle, int, Volatility, float], int] = {}
+        self._groups: dict[GroupKey, int] = {}
         self._legs: dict[tuple[int, str, StrikeRule], int] = {}
         self._families: dict[tuple[ListedCycle, str], Family] = {}
         self._checked: set[Volatility] = set()
@@ -156,7 +162,7 @@ class _PlanBuilder:
             self._groups[group_key] = len(self.plan.groups)
             schedule = self._schedule(leg.cycle, leg.term)
             self.plan.groups.append(
-                PricingGroup(schedule=schedule, volatility=self._bound[volatility], vol_shift=vol_shift)
+                PricingGroup(key=group_key, schedule=schedule, volatility=self._bound[volatility], vol_shift=vol_shift)
             )
         number = self._groups[group_key]
         group = self.plan.groups[number]

@@ -4,16 +4,10 @@ from __future__ import annotations
 
 from collections.abc import Sequence
 
-import numpy as np
-import numpy.typing as npt
-
-from ..errors import OverlayError
 from ..market import Market
 from ..overlay import Overlay
 from ..volatility.sources import Volatility
-from .accounts import keep_books, settle_accounts
-from .legs import price_group
-from .plan import Family, as_day, make_plans
+from .families import replay_families
 from .result import Replay, Replays
 
 
@@ -99,46 +93,8 @@ def replay_many(
     [1.0602, 0.9586]
     """
     overlays = list(overlays)
-    if volatility is None or isinstance(volatility, Volatility):
-        volatilities = [volatility or Volatility()] * len(overlays)
-    else:
-        volatilities = list(volatility)
-        if len(volatilities) != len(overlays):
-            raise OverlayError(
-                f"{len(volatilities)} volatilities for {len(overlays)} overlays; give one, or one for each"
-            )
-    plans = make_plans(
-        market,
-        overlays,
-        volatilities,
-        start=as_day(start, "start"),
-        end=as_day(end, "end"),
-        inception=as_day(inception, "inception"),
-    )
     replays: dict[int, Replay] = {}
-    for plan in plans:
-        legs = [price_group(plan, group) for group in plan.groups]
-        for family in plan.families:
-            state, books, book_rolls = keep_books(plan, family, legs)
-            rows, ratio, stock_bps = _holdings(family, overlays)
-            accounts = settle_accounts(state, books, family.account, rows, ratio, stock_bps)
-            for member, number in enumerate(family.members):
-                replays[number] = Replay(
-                    plan=plan, family=family, state=state, accounts=accounts, member=member,
-                    overlay=overlays[number], volatility=volatilities[number], legs=legs, book_rolls=book_rolls,
-                )  # fmt: skip
+    for found in replay_families(market, overlays, volatility=volatility, start=start, end=end, inception=inception):
+        for member, number in enumerate(found.numbers):
+            replays[number] = Replay(found, member, overlays[number])
     return Replays([replays[number] for number in range(len(overlays))])
-
-
-def _holdings(
-    family: Family, overlays: Sequence[Overlay]
-) -> tuple[npt.NDArray[np.intp], npt.NDArray[np.float64], npt.NDArray[np.float64]]:
-    """Book rows and ratios per slot, padded with ratio zero, and each member's stock cost."""
-    slots = max(len(rows) for rows in family.holdings)
-    rows = np.zeros((len(family.members), slots), dtype=np.intp)
-    ratio = np.zeros((len(family.members), slots))
-    for member, (number, held) in enumerate(zip(family.members, family.holdings, strict=True)):
-        rows[member, : len(held)] = held
-        ratio[member, : len(held)] = [leg.ratio for leg in overlays[number].legs]
-    stock_bps = np.array([overlays[number].costs.stock_bps for number in family.members])
-    return rows, ratio, stock_bps

@@ -14,9 +14,8 @@ from ..calendar import Schedule
 from ..market import Market
 from ..overlay import Leg, Overlay
 from ..volatility.sources import Volatility
-from .accounts import Accounts, BookRolls, FamilyState
-from .legs import LegPaths
-from .plan import BookKey, Family, Plan
+from .families import FamilyReplay
+from .plan import BookKey
 
 if TYPE_CHECKING:
     import pandas as pd
@@ -60,9 +59,8 @@ class LegReplay:
     @property
     def profit(self) -> Array:
         """Profit of each option held per unit, signed, after its costs; a live one at its mark."""
-        return self.signed_ratio * (self.close_value - self.premium) - self.leg.ratio * (
-            self.open_cost + self.exit_cost
-        )
+        gained = held(self.signed_ratio, self.close_value - self.premium)
+        return gained - held(self.leg.ratio, self.open_cost + self.exit_cost)
 
     def flags(self) -> list[str]:
         """A word for each roll that is not the ordinary case."""
@@ -88,21 +86,19 @@ class Replay:
         next day's return. NaN from the day on which nothing is left.
     """
 
-    def __init__(
-        self, *, plan: Plan, family: Family, state: FamilyState, accounts: Accounts, member: int, overlay: Overlay,
-        volatility: Volatility, legs: list[LegPaths], book_rolls: list[BookRolls],
-    ) -> None:  # fmt: skip
-        self.market: Market = plan.market
+    def __init__(self, found: FamilyReplay, member: int, overlay: Overlay) -> None:
+        self.market: Market = found.plan.market
         self.overlay = overlay
-        self.volatility = volatility
-        self.wealth: Array = accounts.wealth[member]
-        self._plan = plan
-        self._family = family
-        self._state = state
-        self._accounts = accounts
+        self.volatility: Volatility = found.volatilities[member]
+        self.wealth: Array = found.wealth[member]
+        self._found = found
+        self._plan = found.plan
+        self._family = found.family
+        self._state = found.state
+        self._accounts = found.accounts
         self._member = member
-        self._leg_paths = legs
-        self._book_rolls = book_rolls
+        self._leg_paths = found.legs
+        self._book_rolls = found.book_rolls
 
     def __len__(self) -> int:
         return len(self.wealth)
@@ -119,7 +115,7 @@ class Replay:
     @property
     def dates(self) -> npt.NDArray[np.datetime64]:
         """Trading days from inception to the end, shape ``(day,)``."""
-        return self.market.dates[self.window]
+        return self._found.dates
 
     @property
     def spot(self) -> Array:
@@ -129,13 +125,12 @@ class Replay:
     @property
     def hold(self) -> Array:
         """Growth of 1 in the share alone, dividends reinvested, shape ``(day,)`` (C10)."""
-        return self._state.share_growth * (self._state.spot / self._state.spot[0])
+        return self._found.hold
 
-    @cached_property
+    @property
     def rate_return(self) -> Array:
         """Return on cash of each day at the previous day's rate, shape ``(day,)``; zero on the first (C11)."""
-        growth = self._state.cash_growth
-        return np.concatenate([[0.0], growth[1:] / growth[:-1] - 1.0])
+        return self._found.rate_return
 
     @cached_property
     def units(self) -> Array:
@@ -154,7 +149,7 @@ class Replay:
         """Cash after each day's trades, shape ``(day,)``; on the first day the trading costs have left it."""
         total = np.zeros(len(self))
         for leg, number in zip(self.overlay.legs, self._rows, strict=True):
-            total += leg.ratio * self._book_rolls[number].cash
+            total += held(leg.ratio, self._book_rolls[number].cash)
         return total * (self.units if self.overlay.account == "resize" else 1.0 / self._state.spot[0])
 
     @cached_property
@@ -165,13 +160,13 @@ class Replay:
     @cached_property
     def leg_value(self) -> Array:
         """Signed value of each leg at mid after each day's trades, shape ``(leg, day)``."""
-        return np.array([self.units * leg.signed_ratio * leg.daily_mark for leg in self.legs])
+        return np.array([self.units * held(leg.signed_ratio, leg.daily_mark) for leg in self.legs])
 
     @cached_property
     def leg_dollar_delta(self) -> Array:
         """Signed spot delta of each leg times spot, over wealth, shape ``(leg, day)``."""
         scale = self.units * self.spot / self.wealth
-        return np.array([scale * leg.signed_ratio * leg.daily_delta for leg in self.legs])
+        return np.array([scale * held(leg.signed_ratio, leg.daily_delta) for leg in self.legs])
 
     @cached_property
     def delta(self) -> Array:
@@ -186,7 +181,7 @@ class Replay:
             # the option held overnight is worth its mark, or what it settles or sells for on a roll day
             ending = leg.daily_mark.copy()
             ending[leg.opened[1:]] = leg.close_value[:-1]
-            profit[row, 1:] = self.units[:-1] * leg.signed_ratio * (ending[1:] - leg.daily_mark[:-1])
+            profit[row, 1:] = self.units[:-1] * held(leg.signed_ratio, ending[1:] - leg.daily_mark[:-1])
         return profit
 
     @cached_property
@@ -210,8 +205,8 @@ class Replay:
         cost = np.zeros(len(self))
         before = np.concatenate([self.units[:1], self.units[:-1]])
         for leg in self.legs:
-            cost[leg.opened] += self.units[leg.opened] * leg.leg.ratio * leg.open_cost
-            cost[leg.opened[1:]] += before[leg.opened[1:]] * leg.leg.ratio * leg.exit_cost[:-1]
+            cost[leg.opened] += self.units[leg.opened] * held(leg.leg.ratio, leg.open_cost)
+            cost[leg.opened[1:]] += before[leg.opened[1:]] * held(leg.leg.ratio, leg.exit_cost[:-1])
         cost[self._state.anchor_day] += self._accounts.stock_cost[self._member]
         return cost
 
@@ -340,6 +335,11 @@ class Replays(Sequence[Replay]):
 
     def __repr__(self) -> str:
         return f"<Replays of {len(self)} overlays>"
+
+
+def held(ratio: float, values: Array) -> Array:
+    """``ratio * values``; what is held at ratio zero counts for nothing, even where it has no price."""
+    return ratio * values if ratio != 0.0 else np.zeros_like(values)
 
 
 def leg_labels(overlay: Overlay) -> list[str]:

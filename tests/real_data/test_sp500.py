@@ -68,7 +68,7 @@ def replayed(folder: Path) -> Replayed:
             with pytest.MonkeyPatch.context() as patch:
                 patch.chdir(folder)
                 # the pictures are looked at elsewhere; they take longer than the rest
-                patch.setattr("studies.replay_history._write_pictures", lambda found, folder: None)
+                patch.setattr("studies.answer_folder._write_pictures", lambda found, folder: None)
                 patch.setattr(sys, "argv", ["rollband", "replay", "--prices", prices, *options, "--out", out])
                 with pytest.raises(SystemExit) as exited:
                     main()

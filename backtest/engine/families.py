@@ -1,0 +1,142 @@
+"""Many overlays at once: plan, price, account, one family after the other.
+
+A family is a matrix of wealth paths, ``(overlay, day)``: what a study needs. :func:`backtest.replay_many` makes
+single replays of it.
+"""
+
+from __future__ import annotations
+
+from collections.abc import Iterator, Sequence
+from dataclasses import dataclass
+
+import numpy as np
+import numpy.typing as npt
+
+from ..errors import OverlayError
+from ..market import Market
+from ..overlay import Overlay
+from ..volatility.sources import Volatility
+from .accounts import Accounts, BookRolls, FamilyState, keep_books, settle_accounts
+from .legs import LegPaths, PricedLegs, price_group
+from .plan import Family, Plan, as_day, make_plans
+
+Array = npt.NDArray[np.float64]
+
+
+@dataclass(frozen=True, slots=True, kw_only=True, eq=False)
+class FamilyReplay:
+    """Overlays of one inception, anchor and account, replayed together."""
+
+    plan: Plan
+    family: Family
+    state: FamilyState
+    accounts: Accounts
+    legs: list[LegPaths]
+    book_rolls: list[BookRolls]
+    ratio: Array
+    volatilities: list[Volatility]  # of each overlay of the family
+
+    @property
+    def numbers(self) -> list[int]:
+        """Positions of the overlays in the caller's list."""
+        return self.family.members
+
+    @property
+    def wealth(self) -> Array:
+        """Growth of 1, shape ``(overlay, day)``."""
+        return self.accounts.wealth
+
+    @property
+    def dates(self) -> npt.NDArray[np.datetime64]:
+        """Trading days from inception to the end, shape ``(day,)``."""
+        return self.plan.market.dates[self.plan.start : self.plan.end + 1]
+
+    @property
+    def hold(self) -> Array:
+        """Growth of 1 in the share alone, dividends reinvested, shape ``(day,)`` (C10)."""
+        return self.state.hold
+
+    @property
+    def rate_return(self) -> Array:
+        """Return on cash of each day at the previous day's rate, shape ``(day,)``; zero on the first (C11)."""
+        return self.state.rate_return
+
+    def options_net(self) -> Array:
+        """What all options of each overlay brought after costs, in spots at their opens, shape ``(overlay,)``.
+
+        Summed over the whole replay as :func:`backtest.analytics.roll_costs` does: per share, live options at mark.
+        """
+        by_book = np.empty(len(self.family.books))
+        for number, key in enumerate(self.family.books):
+            leg, rolls = self.legs[key.group], self.book_rolls[number]
+            spot = self.plan.market.spot[leg.group.schedule.opened]
+            profit = key.direction * (leg.close_value[key.row] - leg.premium[key.row])
+            by_book[number] = np.sum((profit - rolls.open_cost - rolls.exit_cost) / spot)
+        brought = np.zeros(self.ratio.shape)
+        for member, rows in enumerate(self.family.holdings):
+            brought[member, : len(rows)] = by_book[list(rows)]
+        return np.sum(np.where(self.ratio == 0.0, 0.0, brought * self.ratio), axis=1)
+
+
+def replay_families(
+    market: Market,
+    overlays: Sequence[Overlay],
+    *,
+    volatility: Volatility | Sequence[Volatility] | None = None,
+    start: object = None,
+    end: object = None,
+    inception: object = None,
+    priced: PricedLegs | None = None,
+) -> Iterator[FamilyReplay]:
+    """Replay many overlays, a family at a time; parameters and errors as :func:`backtest.replay_many`.
+
+    Parameters
+    ----------
+    priced : PricedLegs, optional
+        Legs priced by earlier calls on the same market, and the place to keep those of this one: a grid replayed in
+        batches prices each of its legs once.
+    """
+    overlays = list(overlays)
+    if volatility is None or isinstance(volatility, Volatility):
+        volatilities = [volatility or Volatility()] * len(overlays)
+    else:
+        volatilities = list(volatility)
+        if len(volatilities) != len(overlays):
+            raise OverlayError(
+                f"{len(volatilities)} volatilities for {len(overlays)} overlays; give one, or one for each"
+            )
+    plans = make_plans(
+        market,
+        overlays,
+        volatilities,
+        start=as_day(start, "start"),
+        end=as_day(end, "end"),
+        inception=as_day(inception, "inception"),
+    )
+    for plan in plans:
+        legs = [price_group(plan, group, priced) for group in plan.groups]
+        for family in plan.families:
+            state, books, book_rolls = keep_books(plan, family, legs)
+            rows, ratio, stock_bps = _holdings(family, overlays)
+            yield FamilyReplay(
+                plan=plan,
+                family=family,
+                state=state,
+                accounts=settle_accounts(state, books, family.account, rows, ratio, stock_bps),
+                legs=legs,
+                book_rolls=book_rolls,
+                ratio=ratio,
+                volatilities=[volatilities[number] for number in family.members],
+            )
+
+
+def _holdings(family: Family, overlays: Sequence[Overlay]) -> tuple[npt.NDArray[np.intp], Array, Array]:
+    """Book rows and ratios per slot, padded with ratio zero, and each member's stock cost."""
+    slots = max(len(rows) for rows in family.holdings)
+    rows = np.zeros((len(family.members), slots), dtype=np.intp)
+    ratio = np.zeros((len(family.members), slots))
+    for member, (number, held) in enumerate(zip(family.members, family.holdings, strict=True)):
+        rows[member, : len(held)] = held
+        ratio[member, : len(held)] = [leg.ratio for leg in overlays[number].legs]
+    stock_bps = np.array([overlays[number].costs.stock_bps for number in family.members])
+    return rows, ratio, stock_bps
