@@ -1,0 +1,196 @@
+"""The headline figures of C11 for many paths at once, in as few passes over memory as they need.
+
+The same figures as :func:`backtest.analytics.performance`, which is the readable way for one path; here the last
+axis is time and the first the overlay. Paths are worked on in blocks that fit a core's cache.
+"""
+
+from __future__ import annotations
+
+import numpy as np
+import numpy.typing as npt
+from numpy.polynomial import Chebyshev
+
+from ..volatility.realised import TRADING_DAYS
+from .performance import (
+    FEWEST_MONTHS,
+    SMALLEST_SPREAD,
+    TAIL,
+    annual_return,
+    daily_excess,
+    month_ends,
+    sharpe_ratio,
+    years_between,
+)
+
+Array = npt.NDArray[np.float64]
+Dates = npt.NDArray[np.datetime64]
+
+#: Values of a block: with its working copies it stays in a core's second cache.
+BLOCK_VALUES = 32_768
+#: Figures that :func:`headline_figures` gives, in its order.
+HEADLINE = (
+    "annual_return",
+    "volatility",
+    "sharpe",
+    "sortino",
+    "max_drawdown",
+    "calmar",
+    "ulcer",
+    "beta",
+    "alpha",
+    "expected_shortfall_monthly",
+)
+#: Nodes of the interpolation of mix returns, and the narrowest ellipse of analyticity it is used in.
+NODES = 48
+LEAST_ELLIPSE = 2.3
+
+
+def headline_figures(wealth: Array, *, hold: Array, rate_return: Array, dates: Dates) -> dict[str, Array]:
+    """Figures of many paths over the same days.
+
+    Parameters
+    ----------
+    wealth : ndarray, shape (overlay, day)
+        Growth of 1; a path may end in NaN, and then has no figures.
+    hold, rate_return : ndarray, shape (day,)
+        Growth of 1 of the hold, and the return on cash over each day (the first is not used).
+    dates : ndarray of datetime64, shape (day,)
+
+    Returns
+    -------
+    dict of str to ndarray, shape (overlay,)
+        The figures of ``HEADLINE``; NaN where one cannot be had.
+    """
+    overlays, days = wealth.shape
+    made = {name: np.full(overlays, np.nan) for name in HEADLINE}
+    if days < 3:
+        return made
+    passes = _Passes(hold=hold, rate_return=rate_return, dates=dates)
+    step = max(1, BLOCK_VALUES // days)
+    for first in range(0, overlays, step):
+        block = slice(first, first + step)
+        for name, values in passes.figures(wealth[block]).items():
+            made[name][block] = values
+    years = years_between(dates)
+    total = wealth[:, -1] / wealth[:, 0]
+    with np.errstate(invalid="ignore", divide="ignore"):
+        made["annual_return"] = total ** (1.0 / years) - 1.0 if years >= 1.0 else total - 1.0
+        falls = made["max_drawdown"] < 0
+        np.divide(made["annual_return"], -made["max_drawdown"], out=made["calmar"], where=falls)
+    return made
+
+
+class _Passes:
+    """What all blocks share, and the working arrays they are done in."""
+
+    def __init__(self, *, hold: Array, rate_return: Array, dates: Dates) -> None:
+        days = len(hold)
+        self._growth_of_cash = 1.0 + rate_return[1:]
+        cash, market = rate_return[1:], daily_excess(hold, rate_return)
+        self._count = days - 1
+        # one product gives the covariances with hold and cash together
+        market_part, cash_part = market - market.mean(), cash - cash.mean()
+        self._market_variation = float(market_part @ market_part)
+        self._market_varies = self._market_variation / self._count > SMALLEST_SPREAD**2
+        self._market_mean = float(market.mean())
+        self._cash_variation = float(cash_part @ cash_part)
+        self._weights = np.column_stack([market_part, cash_part])
+        self._ends = month_ends(dates)
+        rows = max(1, BLOCK_VALUES // days)
+        self._excess, self._other = np.empty((rows, self._count)), np.empty((rows, days))
+
+    def figures(self, wealth: Array) -> dict[str, Array]:
+        """Figures of one block, shape ``(row,)`` each."""
+        rows, count = len(wealth), self._count
+        excess, other = self._excess[:rows], self._other[:rows]
+        np.divide(wealth[:, 1:], wealth[:, :-1], out=excess)
+        excess -= self._growth_of_cash
+        below = other[:, :count]
+        np.minimum(excess, 0.0, out=below)
+        downside = np.sqrt(np.einsum("ij,ij->i", below, below) / count)
+        mean = excess.mean(axis=1)
+        # squares about the mean: as a difference of two large sums they would not tell a flat path from a calm one
+        excess -= mean[:, np.newaxis]
+        variation = np.einsum("ij,ij->i", excess, excess)
+        with_market, with_cash = (excess @ self._weights).T
+        spread = np.sqrt(variation / (count - 1))
+        # the return is excess and cash together
+        whole = np.maximum(variation + 2.0 * with_cash + self._cash_variation, 0.0)
+        yearly = np.sqrt(TRADING_DAYS)
+        made = {
+            "volatility": np.sqrt(whole / (count - 1)) * yearly,
+            "sharpe": _ratio(mean, spread) * yearly,
+            "sortino": _ratio(mean, downside) * yearly,
+            "beta": with_market / self._market_variation if self._market_varies else np.full(rows, np.nan),
+        }
+        made["alpha"] = TRADING_DAYS * (mean - made["beta"] * self._market_mean)
+        np.maximum.accumulate(wealth, axis=1, out=other)
+        np.divide(wealth, other, out=other)
+        other -= 1.0
+        made["max_drawdown"] = other.min(axis=1)
+        made["ulcer"] = np.sqrt(np.einsum("ij,ij->i", other, other) / (count + 1))
+        made["expected_shortfall_monthly"] = self._monthly_tail(wealth)
+        return made
+
+    def _monthly_tail(self, wealth: Array) -> Array:
+        at_end = wealth[:, self._ends]
+        months = at_end.shape[1] - 1
+        if months < FEWEST_MONTHS:
+            return np.full(len(wealth), np.nan)
+        returns = at_end[:, 1:] / at_end[:, :-1] - 1.0
+        worst = int(np.ceil(TAIL * months - 1e-9))
+        tail = np.mean(np.partition(returns, worst - 1, axis=1)[:, :worst], axis=1)
+        return np.where(np.isfinite(returns).all(axis=1), tail, np.nan)
+
+
+def same_beta_mixes(beta: Array, *, hold: Array, rate_return: Array, dates: Dates) -> dict[str, Array]:
+    """Annual return and Sharpe ratio of each overlay's same-beta mix (C10), shape ``(overlay,)`` each.
+
+    The Sharpe ratio of ``rf + w (hold - rf)`` is that of the hold, with the sign of ``w``. Its log growth is an
+    analytic function of ``w``, interpolated at Chebyshev nodes where that is exact to rounding, else summed.
+    """
+    cash, excess = rate_return[1:], daily_excess(hold, rate_return)
+    sharpe = float(sharpe_ratio(excess))
+    return {
+        "annual_return": _mix_returns(beta, cash=cash, excess=excess, dates=dates),
+        "sharpe": np.where(beta == 0.0, np.nan, np.sign(beta) * sharpe),
+    }
+
+
+def _mix_returns(share: Array, *, cash: Array, excess: Array, dates: Dates) -> Array:
+    log_growth = np.full(share.shape, np.nan)
+    known = np.isfinite(share)
+    if known.any():
+        wanted = share[known]
+        low, high = float(wanted.min()), float(wanted.max())
+        if low < high and wanted.size > NODES and _ellipse(low, high, cash, excess) > LEAST_ELLIPSE:
+            curve = Chebyshev.interpolate(
+                lambda shares: np.array([_log_growth(one, cash, excess) for one in shares]), NODES - 1, [low, high]
+            )
+            log_growth[known] = curve(wanted)
+        else:
+            log_growth[known] = [_log_growth(float(one), cash, excess) for one in wanted]
+    grown = np.exp(log_growth)
+    return np.array([annual_return(np.array([1.0, one]), dates[[0, -1]]) for one in grown])
+
+
+def _log_growth(share: float, cash: Array, excess: Array) -> float:
+    daily = cash + share * excess
+    return float(np.sum(np.log1p(daily))) if daily.min() > -1.0 else float("nan")
+
+
+def _ellipse(low: float, high: float, cash: Array, excess: Array) -> float:
+    """Sum of the half axes of the largest Bernstein ellipse around the shares without a ruinous day in it.
+
+    Chebyshev interpolation at n nodes is off by about its inverse to the power n.
+    """
+    with np.errstate(divide="ignore"):
+        ruin = -(1.0 + cash) / excess
+    centre, half = (low + high) / 2.0, max((high - low) / 2.0, 1e-12)
+    nearest = float(np.min(np.abs(ruin - centre))) / half
+    return nearest + np.sqrt(nearest * nearest - 1.0) if nearest > 1.0 else 1.0
+
+
+def _ratio(mean: Array, spread: Array) -> Array:
+    """``mean / spread`` where there is a spread, else NaN."""
+    return np.divide(mean, spread, out=np.full(mean.shape, np.nan), where=spread > SMALLEST_SPREAD)
