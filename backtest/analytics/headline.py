@@ -40,7 +40,9 @@ HEADLINE = (
     "alpha",
     "expected_shortfall_monthly",
 )
-#: Nodes of the interpolation of mix returns, and the narrowest ellipse of analyticity it is used in.
+#: Shares of stock between which returns of mixes are interpolated, the nodes it takes, and the narrowest ellipse of
+#: analyticity for which it is exact to rounding. The span does not depend on who is asked about together with whom.
+SHARES = (-0.25, 1.5)
 NODES = 48
 LEAST_ELLIPSE = 2.3
 
@@ -88,13 +90,11 @@ class _Passes:
         self._growth_of_cash = 1.0 + rate_return[1:]
         cash, market = rate_return[1:], daily_excess(hold, rate_return)
         self._count = days - 1
-        # one product gives the covariances with hold and cash together
-        market_part, cash_part = market - market.mean(), cash - cash.mean()
-        self._market_variation = float(market_part @ market_part)
+        self._market, self._cash = market - market.mean(), cash - cash.mean()
+        self._market_variation = float(self._market @ self._market)
         self._market_varies = self._market_variation / self._count > SMALLEST_SPREAD**2
         self._market_mean = float(market.mean())
-        self._cash_variation = float(cash_part @ cash_part)
-        self._weights = np.column_stack([market_part, cash_part])
+        self._cash_variation = float(self._cash @ self._cash)
         self._ends = month_ends(dates)
         rows = max(1, BLOCK_VALUES // days)
         self._excess, self._other = np.empty((rows, self._count)), np.empty((rows, days))
@@ -112,7 +112,9 @@ class _Passes:
         # squares about the mean: as a difference of two large sums they would not tell a flat path from a calm one
         excess -= mean[:, np.newaxis]
         variation = np.einsum("ij,ij->i", excess, excess)
-        with_market, with_cash = (excess @ self._weights).T
+        # not a matrix product: that may round a row by what else is in the matrix
+        with_market = np.einsum("ij,j->i", excess, self._market)
+        with_cash = np.einsum("ij,j->i", excess, self._cash)
         spread = np.sqrt(variation / (count - 1))
         # the return is excess and cash together
         whole = np.maximum(variation + 2.0 * with_cash + self._cash_variation, 0.0)
@@ -159,17 +161,16 @@ def same_beta_mixes(beta: Array, *, hold: Array, rate_return: Array, dates: Date
 
 def _mix_returns(share: Array, *, cash: Array, excess: Array, dates: Dates) -> Array:
     log_growth = np.full(share.shape, np.nan)
-    known = np.isfinite(share)
-    if known.any():
-        wanted = share[known]
-        low, high = float(wanted.min()), float(wanted.max())
-        if low < high and wanted.size > NODES and _ellipse(low, high, cash, excess) > LEAST_ELLIPSE:
-            curve = Chebyshev.interpolate(
-                lambda shares: np.array([_log_growth(one, cash, excess) for one in shares]), NODES - 1, [low, high]
-            )
-            log_growth[known] = curve(wanted)
-        else:
-            log_growth[known] = [_log_growth(float(one), cash, excess) for one in wanted]
+    inside = (share >= SHARES[0]) & (share <= SHARES[1])
+    if inside.any() and _ellipse(*SHARES, cash, excess) > LEAST_ELLIPSE:
+        curve = Chebyshev.interpolate(
+            lambda shares: np.array([_log_growth(one, cash, excess) for one in shares]), NODES - 1, SHARES
+        )
+        log_growth[inside] = curve(share[inside])
+    else:
+        inside[:] = False
+    rest = np.isfinite(share) & ~inside
+    log_growth[rest] = [_log_growth(float(one), cash, excess) for one in share[rest]]
     grown = np.exp(log_growth)
     return np.array([annual_return(np.array([1.0, one]), dates[[0, -1]]) for one in grown])
 
