@@ -101,9 +101,9 @@ def evidence_of(found: Answer, findings: Findings, inference: Inference) -> Evid
         roll_day_differences=findings.luck.sharpe_gain.tolist(),
         roll_day_returns=findings.luck.annual_return.tolist(),
         without_worst=[
-            one.sharpe["overlay"] - one.sharpe["mix_same_beta"]
+            one.sharpe.get("overlay", NAN) - one.sharpe.get("mix_same_beta", NAN)
             for one in findings.without_worst
-            if one.left_out is not None and {"overlay", "mix_same_beta"} <= set(one.sharpe)
+            if one.left_out is not None
         ],
     )
 

@@ -40,6 +40,8 @@ HEADLINE = (
     "alpha",
     "expected_shortfall_monthly",
 )
+#: Mean and sample deviation of the daily excess return, from which other ratios follow; also given.
+MOMENTS = ("excess_mean", "excess_deviation")
 #: Shares of stock between which returns of mixes are interpolated, the nodes it takes, and the narrowest ellipse of
 #: analyticity for which it is exact to rounding. The span does not depend on who is asked about together with whom.
 SHARES = (-0.25, 1.5)
@@ -61,10 +63,10 @@ def headline_figures(wealth: Array, *, hold: Array, rate_return: Array, dates: D
     Returns
     -------
     dict of str to ndarray, shape (overlay,)
-        The figures of ``HEADLINE``; NaN where one cannot be had.
+        The figures of ``HEADLINE``, then ``MOMENTS``; NaN where one cannot be had.
     """
     overlays, days = wealth.shape
-    made = {name: np.full(overlays, np.nan) for name in HEADLINE}
+    made = {name: np.full(overlays, np.nan) for name in HEADLINE + MOMENTS}
     if days < 3:
         return made
     passes = _Passes(hold=hold, rate_return=rate_return, dates=dates)
@@ -125,6 +127,7 @@ class _Passes:
             "sortino": _ratio(mean, downside) * yearly,
             "beta": with_market / self._market_variation if self._market_varies else np.full(rows, np.nan),
         }
+        made |= {"excess_mean": mean, "excess_deviation": spread}
         made["alpha"] = TRADING_DAYS * (mean - made["beta"] * self._market_mean)
         np.maximum.accumulate(wealth, axis=1, out=other)
         np.divide(wealth, other, out=other)

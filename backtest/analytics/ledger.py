@@ -30,7 +30,8 @@ class Ledger:
     ----------
     lines : tuple of str
         Names of the bars, hold first: ``hold``, ``<leg> premium``, ``<leg> settled``, ``<leg> live`` (change in
-        the value of options still or already held at the ends of the span), ``spread and fees``, ``interest``,
+        the value of options still or already held at the ends of the span, less what was put into live ones when
+        packages were resized), ``spread and fees``, ``interest``,
         ``shares`` (the shares' gain less the hold's).
     money : ndarray, shape (span, line)
         Per 1 of starting wealth.

@@ -8,7 +8,7 @@ import numpy as np
 import numpy.typing as npt
 
 from ..volatility.realised import TRADING_DAYS
-from .performance import annual_volatility, month_ends
+from .performance import SMALLEST_SPREAD, annual_volatility, month_ends
 
 Array = npt.NDArray[np.float64]
 Dates = npt.NDArray[np.datetime64]
@@ -57,7 +57,10 @@ def calendar_table(wealth: Array, dates: Dates) -> CalendarTable:
     if len(ends) > 0 and ends[0] == 0:
         # ...but then the next month is whole: it begins on a month-end
         whole[row[1:2], column[1:2]] = finished[1:2]
-    yearly = np.nanprod(1.0 + monthly, axis=1) - 1.0
+    # months outside the path count for nothing; one without a return because wealth is lost leaves the year without
+    inside = np.zeros(monthly.shape, dtype=bool)
+    inside[row[moved], column[moved]] = True
+    yearly = np.where(inside.any(axis=1), np.prod(np.where(inside, 1.0 + monthly, 1.0), axis=1) - 1.0, np.nan)
     return CalendarTable(years=years, monthly=monthly, yearly=yearly, whole_month=whole)
 
 
@@ -114,7 +117,8 @@ def rolling_figures(wealth: Array, *, hold: Array, rate_return: Array, years: in
     centred = other - other.mean(axis=-1, keepdims=True)
     variation = np.sum(centred * centred, axis=-1)
     covariation = np.sum(centred * own, axis=-1)
-    found["beta"][days:] = np.divide(covariation, variation, out=np.full(len(variation), np.nan), where=variation > 0)
+    varies = variation > days * SMALLEST_SPREAD**2
+    found["beta"][days:] = np.divide(covariation, variation, out=np.full(len(variation), np.nan), where=varies)
     paths = window(wealth, days + 1)
     found["max_drawdown"][days:] = (paths / np.maximum.accumulate(paths, axis=-1)).min(axis=-1) - 1.0
     return Rolling(**found)

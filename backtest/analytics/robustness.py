@@ -13,6 +13,7 @@ import numpy as np
 import numpy.typing as npt
 from scipy.optimize import brentq
 
+from ..calendar import LARGEST_SHIFT_DAYS
 from ..engine.replay import replay_many
 from ..engine.result import Replay
 from ..overlay import Overlay
@@ -65,7 +66,7 @@ def roll_day_luck(found: Replay, *, offsets: int | None = None) -> RollDayLuck:
     """
     overlay = found.overlay
     count = offsets or overlay.anchor.cycle.months * DAYS_IN_MONTH
-    shifted = [_shift(overlay, days) for days in range(count)]
+    shifted = [_shift(overlay, days, count) for days in range(count)]
     replays = replay_many(
         found.market, shifted, volatility=found.volatility, inception=found.dates[0], end=found.dates[-1]
     )
@@ -91,8 +92,11 @@ def sharpe_gain(wealth: Array, *, hold: Array, rate_return: Array) -> float:
     return float(sharpe_ratio(excess) - sharpe_ratio(daily_excess(mix, rate_return)))
 
 
-def _shift(overlay: Overlay, days: int) -> Overlay:
-    legs = tuple(replace(leg, shift_days=leg.shift_days + days) for leg in overlay.legs)
+def _shift(overlay: Overlay, days: int, cycle_days: int) -> Overlay:
+    """Every roll ``days`` later; past the furthest shift there is, a whole cycle earlier, which comes to the same."""
+    furthest = max(leg.shift_days for leg in overlay.legs) + days
+    moved = days if furthest <= LARGEST_SHIFT_DAYS else days - cycle_days
+    legs = tuple(replace(leg, shift_days=leg.shift_days + moved) for leg in overlay.legs)
     return replace(overlay, legs=legs)
 
 

@@ -119,9 +119,8 @@ def _payoffs(e: Evidence) -> str:
     if e.put_payoffs == 0:
         return " No bought put paid off in this history, so it says nothing about protection by puts."
     times = "time" if e.put_payoffs == 1 else "separate times"
-    return (
-        f" The bought puts paid off {e.put_payoffs} {times} in {e.years:.0f} years: that is the size of the evidence."
-    )
+    years = f" in {e.years:.0f} years" if e.years >= 1.5 else ""
+    return f" The bought puts paid off {e.put_payoffs} {times}{years}: that is the size of the evidence."
 
 
 def _costs(e: Evidence) -> Clause:
@@ -133,9 +132,9 @@ def _costs(e: Evidence) -> Clause:
     if not d.known:
         return Clause(title=title, finding="open", sentence=f"{sentence}; the history is too short for an interval.")
     sentence += f" (90% interval {_signed_points(d.low)} to {_signed_points(d.high)})"
-    if d.high < 0:
+    if d.value < 0 and d.high < 0:
         return Clause(title=title, finding="yes", sentence=f"{sentence}.")
-    if d.low > 0:
+    if d.value >= 0 and d.low > 0:
         return Clause(title=title, finding="no", sentence=f"{sentence}.")
     return Clause(title=title, finding="open", sentence=f"{sentence}: the history does not settle it.")
 
@@ -171,7 +170,7 @@ def _smiles(e: Evidence) -> Clause:
 
 
 def _turn(at: BreakEven) -> str:
-    if at.value is None:
+    if at.value is None or not math.isfinite(at.value):
         low, high = at.searched
         return f" No error of all option vols from {low:+.0f} to {high:+.0f} points turns it."
     side = "higher" if at.value > 0 else "lower"
@@ -181,12 +180,12 @@ def _turn(at: BreakEven) -> str:
 def _roll_days(e: Evidence) -> Clause:
     title = "Holds on other roll days"
     known = [d for d in e.roll_day_differences if math.isfinite(d)]
-    if len(known) < 2 or not math.isfinite(e.roll_day_differences[0]):
+    returns = [r for r in e.roll_day_returns if math.isfinite(r)]
+    if len(known) < 2 or not returns or not math.isfinite(e.roll_day_differences[0]):
         return Clause(title=title, finding="open", sentence="The overlay cannot be compared on other roll days.")
     own = e.roll_day_differences[0]
     same = sum((d > 0) == (own > 0) for d in known) / len(known)
     finding = "yes" if same >= MOST_ROLL_DAYS else "no" if same <= FEW_ROLL_DAYS else "open"
-    returns = [r for r in e.roll_day_returns if math.isfinite(r)]
     sentence = (
         f"On {100 * same:.0f}% of the {len(known)} possible roll days the Sharpe difference has the same sign; the "
         f"return ran from {_percent(min(returns))} to {_percent(max(returns))} a year with the roll day alone."
@@ -198,8 +197,12 @@ def _crises(e: Evidence) -> Clause:
     title = "Holds without one crisis"
     own = e.sharpe_difference.value
     known = [d for d in e.without_worst if math.isfinite(d)]
-    if not known or not math.isfinite(own):
+    if not e.without_worst:
         return Clause(title=title, finding="open", sentence="The hold had no fall over 10% to leave out.")
+    if not known or not math.isfinite(own):
+        return Clause(
+            title=title, finding="open", sentence="The overlay cannot be compared without the worst falls of the hold."
+        )
     keeps = all((d > 0) == (own > 0) for d in known)
     changed = "keeps" if keeps else "changes"
     falls = "the worst fall is" if len(known) == 1 else f"each of the {len(known)} worst falls is"
@@ -212,7 +215,7 @@ def _crises(e: Evidence) -> Clause:
 
 
 def _percent(value: float) -> str:
-    return f"{100 * value + 0.0:.1f}%"
+    return f"{round(100 * value, 1) + 0.0:.1f}%"
 
 
 def _points(value: float) -> str:

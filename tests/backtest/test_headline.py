@@ -9,7 +9,7 @@ import numpy as np
 import pytest
 
 from backtest.analytics.comparisons import mix_wealth
-from backtest.analytics.headline import HEADLINE, headline_figures, same_beta_mixes
+from backtest.analytics.headline import HEADLINE, MOMENTS, headline_figures, same_beta_mixes
 from backtest.analytics.performance import annual_return, daily_excess, performance, sharpe_ratio
 
 
@@ -31,12 +31,15 @@ def made(days: int, overlays: int = 40, seed: int = 3) -> tuple[np.ndarray, np.n
 def test_every_figure_is_that_of_the_single_path(days: int) -> None:
     wealth, hold, rate, dates = made(days)
     found = headline_figures(wealth, hold=hold, rate_return=rate, dates=dates)
-    assert tuple(found) == HEADLINE
+    assert tuple(found) == HEADLINE + MOMENTS
     for row, path in enumerate(wealth):
         single = performance(path, dates=dates, rate_return=rate, hold=hold)
         for name in HEADLINE:
             # alpha and the ratios are small differences of larger sums
             assert found[name][row] == pytest.approx(getattr(single, name), rel=1e-9, abs=1e-13, nan_ok=True), name
+        excess = daily_excess(path, rate)
+        assert found["excess_mean"][row] == pytest.approx(excess.mean(), rel=1e-9, abs=1e-16)
+        assert found["excess_deviation"][row] == pytest.approx(excess.std(ddof=1), rel=1e-9)
 
 
 def test_it_does_not_matter_which_paths_stand_beside_it() -> None:
