@@ -59,7 +59,8 @@ def listed_expiry(dates: Dates, month: npt.ArrayLike, shift_days: int = 0) -> tu
     # a count of trading days that goes on past both ends of the file, where weekdays stand in
     count = np.searchsorted(dates, friday, side="right").astype(np.int64) - 1
     after, before = friday > dates[-1], friday < dates[0]
-    count[after] = last + np.busday_count(dates[-1], friday[after])
+    # weekdays after the last day, the Friday included: the last day itself may be of a weekend
+    count[after] = last + np.busday_count(dates[-1] + 1, friday[after] + 1)
     count[before] = -np.busday_count(friday[before], dates[0])
     count += shift_days
     inside = (count >= 0) & (count <= last)
@@ -131,16 +132,10 @@ def leg_schedule(dates: Dates, *, cycle: ListedCycle, term_months: int, start: i
     would already be holding (so with equal roll and term the stub expires on that
     next date). A roll date that falls on ``end`` is carried out.
     """
+    around, their_position = _months_around(dates, cycle)
+    first_month = int(around[their_position <= start][-1])
     month, position = _roll_months(dates, cycle)
     inside = (position > start) & (position <= end)
-    on_start = np.flatnonzero(position == start)
-    if on_start.size:
-        first_month = int(month[on_start[0]])
-    else:
-        later = position > start
-        # the next roll may lie beyond the file: then it is the first cycle month whose third Friday does
-        upcoming = int(month[later][0]) if later.any() else _first_month_after(dates, cycle)
-        first_month = upcoming - cycle.months
     open_month = np.concatenate([[first_month], month[inside]])
     opened = np.concatenate([[start], position[inside]])
     closed = np.concatenate([opened[1:], [end]])
@@ -183,12 +178,6 @@ def _roll_months(dates: Dates, cycle: ListedCycle) -> tuple[npt.NDArray[np.int64
     # a hole of weeks in the price file can put two cycle dates on one day: that is one roll, of the later month
     last_of_day = np.append(position[1:] != position[:-1], True) if position.size else np.zeros(0, dtype=bool)
     return month[last_of_day], position[last_of_day]
-
-
-def _first_month_after(dates: Dates, cycle: ListedCycle) -> int:
-    """The cycle's first month whose date lies after the last one."""
-    month, position = _months_around(dates, cycle)
-    return int(month[position == len(dates)][0])
 
 
 def _months_around(dates: Dates, cycle: ListedCycle) -> tuple[npt.NDArray[np.int64], Positions]:

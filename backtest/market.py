@@ -8,6 +8,7 @@ and of a share with its dividends reinvested.
 from __future__ import annotations
 
 from dataclasses import dataclass, field
+from numbers import Real
 from typing import TYPE_CHECKING, Any
 
 import numpy as np
@@ -82,6 +83,8 @@ class Market:
         object.__setattr__(self, "share_growth", np.cumprod(1.0 + self.dividend / self.spot))
         for name in ("dates", "spot", "dividend", "rate", "dividend_yield", "vol_quotes", "vol_tenor_days"):
             getattr(self, name).setflags(write=False)
+        for name in ("day_number", "log_spot", "cash_growth", "share_growth"):
+            getattr(self, name).setflags(write=False)
 
     def __len__(self) -> int:
         return len(self.dates)
@@ -126,6 +129,9 @@ class Market:
         """
         if "close" not in frame.columns:
             raise MarketError(f"the frame has no column 'close'; its columns are: {', '.join(map(str, frame.columns))}")
+        for name, value in (("rate", rate), ("dividend_yield", dividend_yield)):
+            if value is not None and not isinstance(value, Real):
+                raise MarketError(f"{name} is {value!r}; it takes a decimal number (0.05 is 5%)")
         dates = _dates(frame)
         spot = _column(frame, "close")
         day_number = dates.astype(np.int64)
@@ -167,16 +173,24 @@ def trailing_dividend_yield(day_number: npt.NDArray[np.int64], spot: Array, divi
     """``q = ln(1 + D/S)``, ``D`` the cash dividends of the 365 days up to and including the day (C5)."""
     paid = np.concatenate([[0.0], np.cumsum(dividend)])
     first = np.searchsorted(day_number, day_number - 365, side="right")
-    return np.log1p((paid[1:] - paid[first]) / spot)
+    with np.errstate(divide="ignore", invalid="ignore"):  # what makes no sense is named by the checks of the market
+        return np.log1p((paid[1:] - paid[first]) / spot)
 
 
 def _dates(frame: pd.DataFrame) -> Dates:
+    index: Any = frame.index
+    if index.dtype.kind in "iufb":
+        raise MarketError(f"the frame's index is not dates: it holds numbers such as {index[0]}")
+    if getattr(index, "tz", None) is not None:
+        index = index.tz_localize(None)
     try:
-        dates = frame.index.to_numpy().astype("datetime64[D]")
+        dates = index.to_numpy().astype("datetime64[D]")
     except (TypeError, ValueError) as error:
         raise MarketError(f"the frame's index is not dates: {error}") from None
     if len(dates) < 2:
         raise MarketError(f"the frame has {len(dates)} row(s); a market needs at least 2 trading days")
+    if np.isnat(dates).any():
+        raise MarketError(f"row {int(np.flatnonzero(np.isnat(dates))[0]) + 1} of the frame has no date")
     if (bad := np.flatnonzero(np.diff(dates.astype(np.int64)) <= 0)).size:
         raise MarketError(
             f"dates must increase without repeats, but {dates[bad[0] + 1]} follows {dates[bad[0]]}: sort the frame "
@@ -229,6 +243,12 @@ def _check_arrays(market: Market) -> None:
             ~(np.isfinite(market.dividend) & (market.dividend > -market.spot)),
             "above minus the price",
         ),
+        (
+            "dividend_yield",
+            market.dividend_yield,
+            ~np.isfinite(market.dividend_yield),
+            "(a year's dividends add up to more than minus the price)",
+        ),
     ):
         if bad.any():
             raise MarketError(
@@ -237,8 +257,9 @@ def _check_arrays(market: Market) -> None:
     known = ~np.isnan(market.vol_quotes)
     wrong = known & ~((market.vol_quotes > 0) & (market.vol_quotes <= HIGHEST_VOL))
     if wrong.any():
-        day = int(np.argwhere(wrong)[0, 1])
+        day = int(np.flatnonzero(wrong.any(axis=0))[0])
+        shown = market.vol_quotes[wrong[:, day], day][0]
         raise MarketError(
-            f"vol on {market.dates[day]} is {market.vol_quotes[:, day].max():g}; a decimal vol is above 0 and at most "
+            f"vol on {market.dates[day]} is {shown:g}; a decimal vol is above 0 and at most "
             f"{HIGHEST_VOL:g} (0.20 is 20%)"
         )

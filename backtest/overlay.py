@@ -62,7 +62,7 @@ class Leg:
         one_of("position", self.position, ("long", "short"))
         one_of("right", self.right, ("put", "call"))
         one_of("roll", self.roll, tuple(ROLL_MONTHS))
-        if not callable(getattr(self.strike, "strikes", None)):
+        if isinstance(self.strike, type) or not callable(getattr(self.strike, "strikes", None)):
             raise OverlayError(
                 f"strike is {self.strike!r}; give a strike rule such as PercentOfSpot(95)", field="strike"
             )
@@ -179,7 +179,10 @@ class Overlay:
     name: str = ""
 
     def __post_init__(self) -> None:
-        object.__setattr__(self, "legs", tuple(self.legs))
+        try:
+            object.__setattr__(self, "legs", tuple(self.legs))
+        except TypeError:
+            raise OverlayError(f"legs is {self.legs!r}; give a tuple of backtest.Leg objects", field="leg") from None
         if not self.legs:
             raise OverlayError("an overlay needs at least one leg", field="leg")
         if len(self.legs) > MOST_LEGS:
