@@ -7,21 +7,24 @@ from __future__ import annotations
 
 import shlex
 import sys
-from collections.abc import Callable, Iterator
+from collections.abc import Iterator
 from contextlib import contextmanager
-from datetime import datetime
 from pathlib import Path
-from typing import TYPE_CHECKING, Annotated, Any
+from typing import Annotated
 
 import typer
 
-from .options import Account, AsJson, Dividends, First, Last, Prices, Rates, Roll, Store, Unit, Vol, VolQuote, VolUnit
-
-if TYPE_CHECKING:
-    from backtest import Costs, Overlay, Volatility
-    from data_loaders import History
-
-    from .overlay_files import OverlayFile
+from .options import Account, AsJson, Dividends, First, Last, Prices, Rates, Roll, Store, Unit, Vol, VolQuote
+from .wiring import (
+    history_of,
+    overlay_of,
+    replay_and_write,
+    say,
+    show_summary_of,
+    store_option,
+    tell_history,
+    with_options,
+)
 
 #: Exit codes: a wrong command or overlay file, bad data, a replay or folder that cannot be had.
 WRONG_USE, BAD_DATA, NOT_POSSIBLE = 2, 3, 5
@@ -68,9 +71,9 @@ def load(
         last_day=last.date() if last else None,
     )  # fmt: skip
     path = write_history(history, store, name)
-    _tell_history(history)
-    _say(f"Stored as {path}")
-    _say(f"Next: rollband replay {shlex.quote(name)} --put 95 --call 110" + _store_option(store))
+    tell_history(history)
+    say(f"Stored as {path}")
+    say(f"Next: rollband replay {shlex.quote(name)} --put 95 --call 110" + store_option(store))
 
 
 @app.command()
@@ -136,14 +139,14 @@ def replay(
     seed: Annotated[int, typer.Option("--seed", help="Of those draws; the same seed gives the same numbers.")] = 1,
 ) -> None:
     """Replay one overlay on one history and write a results folder."""
-    agreed = _overlay(
+    agreed = overlay_of(
         overlay,
         {"put": put, "call": call},
         {"put": put_roll, "call": call_roll},
         {"put": put_term, "call": call_term},
         roll,
     )
-    agreed = _with_options(
+    agreed = with_options(
         agreed, account=account, vol_quote=vol_quote, smile=smile,
         costs={
             "half_spread_vol": half_spread_vol, "half_spread_percent": half_spread_percent, "commission": commission,
@@ -151,9 +154,9 @@ def replay(
         },
     )  # fmt: skip
     files = {"prices": prices, "vol": vol, "dividends": dividends, "rates": rates}
-    history, label = _history(name, files, vol_unit=vol_unit, last=last, store=store)
+    history, label = history_of(name, files, vol_unit=vol_unit, last=last, store=store)
     window = {"start": first.date().isoformat() if first else None, "end": last.date().isoformat() if last else None}
-    _replay_and_write(
+    replay_and_write(
         history, label, agreed, rate=rate, dividend_yield=dividend_yield, window=window, out=out, as_json=as_json,
         results=Path("results"), overlay_file=overlay, command=["rollband", *sys.argv[1:]], seed=seed,
         resamples=resamples, pdf=pdf,
@@ -172,7 +175,26 @@ def show(
     if as_json:
         typer.echo(json_text(told))
         return
-    _show(told, history=(read_manifest(folder) or {}).get("history") or folder.name)
+    show_summary_of(told, history=(read_manifest(folder) or {}).get("history") or folder.name)
+
+
+@app.command()
+def study(
+    file: Annotated[Path, typer.Argument(help="Study file (TOML); ready-made ones are in the folder studies.")],
+    store: Store = Path("histories"),
+    out: Annotated[
+        Path | None,
+        typer.Option("--out", help="Results folder; one named after the file under ./results if not given."),
+    ] = None,
+    workers: Annotated[
+        int | None, typer.Option("--workers", help="Processes; as many as there are cores if not given.")
+    ] = None,
+    resume: Annotated[bool, typer.Option("--resume", help="Go on with a run that was stopped.")] = False,
+) -> None:
+    """Replay the many overlays of a study file, and say how far the search alone explains the best of them."""
+    from .wiring_study import study_and_write
+
+    study_and_write(file, store=store, out=out, workers=workers, resume=resume, command=["rollband", *sys.argv[1:]])
 
 
 @app.command()
@@ -188,21 +210,21 @@ def demo(folder: Annotated[Path, typer.Argument(help="Where to put it.")] = Path
     history = load_history(prices=files.prices, vol=files.vol, dividends=files.dividends, rates=files.rates)
     store = folder / "histories"
     write_history(history, store, "demo")
-    _say(f"An invented market ({files.name}): prices, vols, dividends and rates as CSV files in {folder}")
-    _tell_history(history)
+    say(f"An invented market ({files.name}): prices, vols, dividends and rates as CSV files in {folder}")
+    tell_history(history)
     overlay_file = folder / "overlay.toml"
     arguments = ["demo", "--store", str(store), "--overlay", str(overlay_file), "--out", str(folder / "results")]
-    _replay_and_write(
+    replay_and_write(
         history, "demo", parse_overlay(DEMO_OVERLAY, file=overlay_file.name), rate=None, dividend_yield=None,
         window={"start": None, "end": None}, out=folder / "results", as_json=False, results=folder,
         overlay_file=overlay_file, command=["rollband", "replay", *arguments],
     )  # fmt: skip
-    _say("")
-    _say("Try next:")
+    say("")
+    say("Try next:")
     at, of = shlex.quote(str(store)), shlex.quote(str(overlay_file))
-    _say(f"  rollband replay demo --store {at} --put 90 --call 110 --roll month --vol-quote variance-swap")
-    _say(f"  rollband replay demo --store {at} --overlay {of} --smile flat")
-    _say("  rollband load mine --prices my_prices.csv --vol my_vols.csv")
+    say(f"  rollband replay demo --store {at} --put 90 --call 110 --roll month --vol-quote variance-swap")
+    say(f"  rollband replay demo --store {at} --overlay {of} --smile flat")
+    say("  rollband load mine --prices my_prices.csv --vol my_vols.csv")
 
 
 def main() -> None:
@@ -229,10 +251,11 @@ def _exit_code(error: Exception) -> int | None:
     from backtest.errors import BacktestError, MarketError, OverlayError
     from data_loaders.errors import LoadError
 
-    from .errors import OverlayFileError, StudyError
+    from .errors import OverlayFileError, StudyError, StudyFileError
 
     families: list[tuple[type[Exception], int]] = [
         (OverlayFileError, WRONG_USE),
+        (StudyFileError, WRONG_USE),
         (OverlayError, WRONG_USE),
         (LoadError, BAD_DATA),
         (MarketError, BAD_DATA),
@@ -240,159 +263,3 @@ def _exit_code(error: Exception) -> int | None:
         (StudyError, NOT_POSSIBLE),
     ]
     return next((code for family, code in families if isinstance(error, family)), None)
-
-
-def _overlay(
-    file: Path | None, percent: dict[str, float | None], rolls: dict[str, Roll | None], terms: dict[str, int | None],
-    roll: Roll | None,
-) -> OverlayFile:  # fmt: skip
-    """The overlay of a file, or of the shorthand options; an option that would do nothing is refused."""
-    from .overlay_files import read_overlay_file, shorthand_overlay
-
-    options: dict[str, tuple[str, object]] = {f"--{right}-roll": (right, value) for right, value in rolls.items()}
-    options |= {f"--{right}-term": (right, value) for right, value in terms.items()}
-    if file is not None:
-        given = [f"--{right}" for right, value in percent.items() if value is not None]
-        given += [option for option, (_, value) in options.items() if value is not None]
-        given += ["--roll"] if roll is not None else []
-        if given:
-            raise typer.BadParameter(
-                f"give --overlay or --put and --call, not both: leave out {', '.join(given)}", param_hint="--overlay"
-            )
-        return read_overlay_file(file)
-    if all(value is None for value in percent.values()):
-        raise typer.BadParameter(
-            "say what to replay: --put 95, --call 110, both, or --overlay FILE", param_hint="--put"
-        )
-    for option, (right, value) in options.items():
-        if value is not None and percent[right] is None:
-            raise typer.BadParameter(f"there is no --{right} for it", param_hint=option)
-    usual = roll or Roll.quarter
-    return shorthand_overlay(
-        put=percent["put"], call=percent["call"], put_roll=(rolls["put"] or usual).value,
-        call_roll=(rolls["call"] or usual).value, put_term=terms["put"], call_term=terms["call"],
-    )  # fmt: skip
-
-
-def _with_options(
-    agreed: OverlayFile,
-    *,
-    account: Account | None,
-    vol_quote: VolQuote | None,
-    smile: str | None,
-    costs: dict[str, float | None],
-) -> OverlayFile:
-    """Options given on the command line replace what the overlay file says."""
-    from dataclasses import replace
-
-    from .overlay_files import smile_from_option
-
-    made_costs: Costs = replace(
-        agreed.overlay.costs, **{key: value for key, value in costs.items() if value is not None}
-    )
-    overlay: Overlay = replace(agreed.overlay, costs=made_costs)
-    volatility: Volatility = agreed.volatility
-    if account is not None:
-        overlay = replace(overlay, account=account.value)
-    if vol_quote is not None:
-        volatility = replace(volatility, quote="at the money" if vol_quote is VolQuote.atm else "variance swap")
-    if smile is not None:
-        volatility = replace(volatility, smile=smile_from_option(smile))
-    return replace(agreed, overlay=overlay, volatility=volatility)
-
-
-def _history(
-    name: str | None, files: dict[str, Path | None], *, vol_unit: VolUnit | None, last: datetime | None, store: Path
-) -> tuple[History, str]:
-    from data_loaders import load_history
-    from data_loaders.store import read_history
-
-    given = [f"--{kind}" for kind, path in files.items() if path is not None]
-    if files["vol"] is None and vol_unit is not None:
-        raise typer.BadParameter("there is no --vol file for it", param_hint="--vol-unit")
-    if name is not None:
-        if given:
-            raise typer.BadParameter(
-                f"{name} is a stored history; leave out {', '.join(given)}, or the name", param_hint="NAME"
-            )
-        return read_history(store, name), name
-    prices = files["prices"]
-    if prices is None:
-        raise typer.BadParameter("say which history: a stored NAME, or --prices FILE", param_hint="NAME")
-    history = load_history(
-        prices=prices, vol=files["vol"], dividends=files["dividends"], rates=files["rates"],
-        vol_unit=vol_unit.value if vol_unit else None, needed_to=last.date() if last else None,
-    )  # fmt: skip
-    return history, prices.stem
-
-
-def _replay_and_write(
-    history: History, label: str, agreed: OverlayFile, *, rate: float | None, dividend_yield: float | None,
-    window: dict[str, str | None], out: Path | None, as_json: bool, results: Path, overlay_file: Path | None,
-    command: list[str], **report: Any,
-) -> None:  # fmt: skip
-    from .answer_folder import make_answer_folder, whole_summary
-    from .page import DataHealth
-    from .results import json_text, sha256_of
-
-    inputs = [
-        {"kind": source.kind, "file": source.file, "sha256": source.sha256, "unit": source.unit}
-        for source in history.sources
-    ]
-    if overlay_file is not None:
-        inputs.append({"kind": "overlay", "file": overlay_file.name, "sha256": sha256_of(overlay_file)})
-    with _working("replaying") as progress:
-        made, folder = make_answer_folder(
-            history.frame, agreed, label=label, inputs=inputs, notes=history.notes, rate=rate,
-            dividend_yield=dividend_yield, start=window["start"], end=window["end"], out=out, results=results,
-            command=shlex.join(command), data_health=DataHealth.of(history), progress=progress, **report,
-        )  # fmt: skip
-    told = whole_summary(made)
-    if as_json:
-        typer.echo(json_text(told))
-        typer.echo(f"Results: {folder}", err=True)
-        return
-    _show(told, history=label)
-    _say("")
-    _say(f"Read {folder / 'report.html'}")
-    _say(
-        f"Beside it in {folder}: summary.json (all figures), tables (CSV), daily.parquet, rolls.parquet, growth.png, "
-        "drawdown.png, band.png, manifest.json"
-    )
-
-
-def _show(told: dict[str, Any], *, history: str) -> None:
-    from rich.console import Console
-
-    from .terminal import show_summary
-
-    show_summary(Console(), told, history=history)
-
-
-@contextmanager
-def _working(what: str) -> Iterator[Callable[[str], None]]:
-    """A sign of life on standard error while something takes its time, where a person looks on; told each step."""
-    if not sys.stderr.isatty():
-        yield lambda step: None
-        return
-    from rich.console import Console
-
-    with Console(stderr=True).status(f"{what} ...") as status:
-        yield lambda step: status.update(f"{step} ...")
-
-
-def _tell_history(history: Any) -> None:
-    for source in history.sources:
-        _say(f"  {source.kind}: {source.rows} rows, {source.first} to {source.last}, from {source.file}")
-    for repair in history.repairs:
-        _say(f"  changed: {repair.what}")
-    for note in history.notes:
-        _say(f"  note: {note}")
-
-
-def _store_option(store: Path) -> str:
-    return "" if store == Path("histories") else f" --store {shlex.quote(str(store))}"
-
-
-def _say(text: str) -> None:
-    typer.echo(text)

@@ -7,10 +7,6 @@ its normal form always mean the same and the round trip is exact.
 
 from __future__ import annotations
 
-import difflib
-import json
-import re
-import tomllib
 from collections.abc import Mapping
 from dataclasses import dataclass, fields
 from pathlib import Path
@@ -27,10 +23,13 @@ from backtest import (
     SSVISmile,
     Volatility,
 )
+from backtest.arguments import one_of
+from backtest.overlay import ACCOUNTS
 from backtest.strikes import STRIKE_RULES, StrikeRule
 from backtest.volatility.smile import SMILE_LADDER, FlatSmile
 
 from .errors import OverlayFileError
+from .toml_text import KeyPath, KeyProblem, key_words, known_keys, line_of, parse_toml, read_toml_text, table_of, toml
 
 #: Larger files are taken for a mistake.
 LARGEST_FILE_BYTES = 1_000_000
@@ -51,14 +50,6 @@ class OverlayFile:
     volatility: Volatility
 
 
-class _KeyProblem(Exception):
-    """A problem at a path of keys, before file and line are known."""
-
-    def __init__(self, path: tuple[str | int, ...], problem: str) -> None:
-        super().__init__(problem)
-        self.path, self.problem = path, problem
-
-
 def read_overlay_file(path: Path) -> OverlayFile:
     """Read an overlay file.
 
@@ -67,20 +58,7 @@ def read_overlay_file(path: Path) -> OverlayFile:
     OverlayFileError
         If the file cannot be read, is no TOML, has an unknown key, or a value outside its limits.
     """
-    try:
-        if not path.is_file():
-            problem = "is a folder, not a file" if path.is_dir() else "there is no such file"
-            raise OverlayFileError(file=path.name, line=None, key=None, problem=problem)
-        if path.stat().st_size > LARGEST_FILE_BYTES:
-            raise OverlayFileError(
-                file=path.name,
-                line=None,
-                key=None,
-                problem=f"larger than {LARGEST_FILE_BYTES:,} bytes: no overlay file",
-            )
-        text = path.read_text(encoding="utf-8-sig")
-    except (OSError, UnicodeDecodeError) as error:
-        raise OverlayFileError(file=path.name, line=None, key=None, problem=f"cannot be read: {error}") from None
+    text = read_toml_text(path, error=OverlayFileError, what="overlay file", largest=LARGEST_FILE_BYTES)
     return parse_overlay(text, file=path.name)
 
 
@@ -98,42 +76,35 @@ def parse_overlay(text: str, *, file: str = "overlay") -> OverlayFile:
     >>> found.overlay.name, found.overlay.legs[0].roll, found.volatility.smile.name
     ('quarterly 95 put', 'quarter', 'index')
     """
-    try:
-        table = tomllib.loads(text)
-    except (ValueError, RecursionError) as error:  # not only the parser's own: also a number of 5,000 digits
-        found = re.search(r"line (\d+)", str(error))
-        line = int(found.group(1)) if found else None
-        raise OverlayFileError(file=file, line=line, key=None, problem=f"not valid TOML: {error}") from None
+    table = parse_toml(text, file=file, error=OverlayFileError)
     try:
         return overlay_from_table(table)
-    except _KeyProblem as problem:
-        key = ".".join(_key_word(part) for part in problem.path)
+    except KeyProblem as problem:
         raise OverlayFileError(
-            file=file, line=_line_of(text, problem.path), key=key or None, problem=problem.problem
+            file=file, line=line_of(text, problem.path), key=key_words(problem.path) or None, problem=problem.problem
         ) from None
 
 
 def overlay_from_table(table: Mapping[str, Any]) -> OverlayFile:
-    """An overlay from the parsed table, as :func:`overlay_to_table` writes it."""
-    _known_keys((), table, TOP_KEYS)
+    """An overlay from the parsed table, as :func:`overlay_to_table` writes it.
+
+    Raises
+    ------
+    KeyProblem
+        At the path of what is wrong.
+    """
+    known_keys((), table, TOP_KEYS)
     legs = table.get("leg", [])
     if not isinstance(legs, list) or not legs:
-        raise _KeyProblem(("leg",), "an overlay needs at least one [[leg]]")
-    built = tuple(_leg(("leg", number), leg) for number, leg in enumerate(legs))
-    costs = _table(("costs",), table.get("costs", {}), COST_KEYS)
+        raise KeyProblem(("leg",), "an overlay needs at least one [[leg]]")
+    built = tuple(leg_from_value(leg, number) for number, leg in enumerate(legs))
+    costs = costs_from_value(table.get("costs", {}))
     name = table.get("name", describe_legs(built))
     if not isinstance(name, str):
-        raise _KeyProblem(("name",), f"is {name!r}; it takes a text in quotes")
-    made_costs = _build(("costs",), Costs, **costs)
-    overlay = _build(
-        (),
-        Overlay,
-        name=name,
-        account=table.get("account", "resize"),
-        legs=built,
-        costs=made_costs,
-    )
-    return OverlayFile(overlay=overlay, volatility=_volatility(table.get("volatility", {})))
+        raise KeyProblem(("name",), f"is {name!r}; it takes a text in quotes")
+    account = account_from_value(table.get("account", "resize"))
+    overlay = _build((), Overlay, name=name, account=account, legs=built, costs=costs)
+    return OverlayFile(overlay=overlay, volatility=volatility_from_value(table.get("volatility", {})))
 
 
 def shorthand_overlay(
@@ -197,11 +168,11 @@ def overlay_to_table(overlay: Overlay, volatility: Volatility) -> dict[str, Any]
 def overlay_to_toml(overlay: Overlay, volatility: Volatility) -> str:
     """The normal form as the text of an overlay file."""
     table = overlay_to_table(overlay, volatility)
-    lines = [f"name = {_toml(table['name'])}", f"account = {_toml(table['account'])}"]
+    lines = [f"name = {toml(table['name'])}", f"account = {toml(table['account'])}"]
     for leg in table["leg"]:
-        lines += ["", "[[leg]]", *(f"{key} = {_toml(value)}" for key, value in leg.items())]
+        lines += ["", "[[leg]]", *(f"{key} = {toml(value)}" for key, value in leg.items())]
     for section in ("costs", "volatility"):
-        lines += ["", f"[{section}]", *(f"{key} = {_toml(value)}" for key, value in table[section].items())]
+        lines += ["", f"[{section}]", *(f"{key} = {toml(value)}" for key, value in table[section].items())]
     return "\n".join(lines) + "\n"
 
 
@@ -220,30 +191,36 @@ def describe_legs(legs: tuple[Leg, ...]) -> str:
     return ", ".join(words)
 
 
-def _key_word(part: str | int) -> str:
-    """A key as it is shown: tables of a list count from 1, odd characters are escaped, long keys cut."""
-    if isinstance(part, int):
-        return str(part + 1)
-    shown = part if part.isprintable() else repr(part)[1:-1]
-    return shown if len(shown) <= 60 else f"{shown[:57]}..."
+def account_from_value(value: Any) -> str:
+    """An account by its word."""
+    _build(("account",), one_of, "account", value, ACCOUNTS)
+    return value
 
 
-def _leg(path: tuple[str | int, ...], value: Any) -> Leg:
-    given = _table(path, value, LEG_KEYS)
+def costs_from_value(value: Any) -> Costs:
+    """Costs from the table ``[costs]``."""
+    path: KeyPath = ("costs",)
+    return _build(path, Costs, **table_of(path, value, COST_KEYS))
+
+
+def leg_from_value(value: Any, number: int) -> Leg:
+    """A leg from its table, the ``number``-th ``[[leg]]`` counted from 0."""
+    path: KeyPath = ("leg", number)
+    given = table_of(path, value, LEG_KEYS)
     for needed in ("position", "right", "strike"):
         if needed not in given:
-            raise _KeyProblem(path, f"has no {needed}; a leg needs position, right and strike")
+            raise KeyProblem(path, f"has no {needed}; a leg needs position, right and strike")
     arguments = {("term_months" if key == "term" else key): item for key, item in given.items()}
     arguments["strike"] = _strike((*path, "strike"), given["strike"])
     return _build(path, Leg, **arguments)
 
 
-def _strike(path: tuple[str | int, ...], value: Any) -> StrikeRule:
+def _strike(path: KeyPath, value: Any) -> StrikeRule:
     rules = ", ".join(STRIKE_RULES)
     if not isinstance(value, dict) or len(value) != 1:
-        raise _KeyProblem(path, f"is {value!r}; it takes one rule, such as {{ percent_of_spot = 95 }}; rules: {rules}")
+        raise KeyProblem(path, f"is {value!r}; it takes one rule, such as {{ percent_of_spot = 95 }}; rules: {rules}")
     ((rule, argument),) = value.items()
-    _known_keys(path, value, tuple(STRIKE_RULES))
+    known_keys(path, value, tuple(STRIKE_RULES))
     return _build(path, STRIKE_RULES[rule], argument)
 
 
@@ -255,15 +232,16 @@ def _strike_to_table(strike: StrikeRule) -> dict[str, float]:
     raise OverlayError(f"strike rule {strike!r} has no name in an overlay file", field="strike")
 
 
-def _volatility(value: Any) -> Volatility:
-    path: tuple[str | int, ...] = ("volatility",)
-    given = _table(path, value, VOLATILITY_KEYS)
+def volatility_from_value(value: Any) -> Volatility:
+    """How options are priced, from the table ``[volatility]``."""
+    path: KeyPath = ("volatility",)
+    given = table_of(path, value, VOLATILITY_KEYS)
     source = given.get("source", "auto")
     if source not in SOURCES:
-        raise _KeyProblem((*path, "source"), f"is {source!r}; it takes one of: {', '.join(SOURCES)}")
+        raise KeyProblem((*path, "source"), f"is {source!r}; it takes one of: {', '.join(SOURCES)}")
     for key in ("window", "markup"):
         if key in given and source != "realised":
-            raise _KeyProblem((*path, key), 'belongs to realised vol; add source = "realised" or leave it out')
+            raise KeyProblem((*path, key), 'belongs to realised vol; add source = "realised" or leave it out')
     made: ImpliedSeries | RealisedVolatility | None = None
     if source == "implied":
         made = ImpliedSeries()
@@ -274,17 +252,17 @@ def _volatility(value: Any) -> Volatility:
     return _build(path, Volatility, source=made, smile=smile, **quoted)
 
 
-def smile_from_value(value: Any, *, path: tuple[str | int, ...] = ("smile",)) -> FlatSmile | SSVISmile:
+def smile_from_value(value: Any, *, path: KeyPath = ("smile",)) -> FlatSmile | SSVISmile:
     """A smile from its word, or from a table of its three parameters."""
     if isinstance(value, str) and value in SMILE_LADDER:
         return SMILE_LADDER[value]
     words = ", ".join(SMILE_LADDER)
     if not isinstance(value, dict):
-        raise _KeyProblem(path, f"is {value!r}; it takes one of: {words}, or {{ rho = , eta = , gamma = }}")
-    _known_keys(path, value, SMILE_KEYS)
+        raise KeyProblem(path, f"is {value!r}; it takes one of: {words}, or {{ rho = , eta = , gamma = }}")
+    known_keys(path, value, SMILE_KEYS)
     missing = [key for key in SMILE_KEYS if key not in value]
     if missing:
-        raise _KeyProblem(path, f"lacks {', '.join(missing)}; a smile of one's own takes rho, eta and gamma")
+        raise KeyProblem(path, f"lacks {', '.join(missing)}; a smile of one's own takes rho, eta and gamma")
     return _build(path, SSVISmile, **value)
 
 
@@ -305,12 +283,12 @@ def smile_from_option(text: str) -> FlatSmile | SSVISmile:
             value = text
     try:
         return smile_from_value(value)
-    except _KeyProblem as problem:
+    except KeyProblem as problem:
         words = problem.problem.replace("{ rho = , eta = , gamma = }", "three numbers RHO,ETA,GAMMA")
         raise OverlayError(f"--smile {words}", field="smile") from None
 
 
-def _build(path: tuple[str | int, ...], make: Any, *args: Any, **kwargs: Any) -> Any:
+def _build(path: KeyPath, make: Any, *args: Any, **kwargs: Any) -> Any:
     """Make an object, turning its complaint into one that knows its place."""
     try:
         return make(*args, **kwargs)
@@ -318,76 +296,4 @@ def _build(path: tuple[str | int, ...], make: Any, *args: Any, **kwargs: Any) ->
         inside = (
             error.field is not None and error.field != (path[-1] if path else None) and error.field not in STRIKE_RULES
         )
-        raise _KeyProblem((*path, error.field) if inside and error.field else path, str(error)) from None
-
-
-def _table(path: tuple[str | int, ...], value: Any, keys: tuple[str, ...]) -> dict[str, Any]:
-    if not isinstance(value, dict):
-        raise _KeyProblem(path, f"is {value!r}; it takes a table with keys: {', '.join(keys)}")
-    _known_keys(path, value, keys)
-    return value
-
-
-def _known_keys(path: tuple[str | int, ...], table: Mapping[str, Any], keys: tuple[str, ...]) -> None:
-    for key in table:
-        if key not in keys:
-            near = difflib.get_close_matches(key, keys, n=1)
-            hint = f"; did you mean {near[0]}?" if near else "."
-            raise _KeyProblem((*path, key), f"unknown key{hint} Known here: {', '.join(keys)}")
-
-
-#: A value that spans more lines than this is not looked through for its place.
-LONGEST_VALUE_LINES = 200
-
-
-def _line_of(text: str, path: tuple[str | int, ...]) -> int | None:
-    """Line on which a key path is written, counted from 1; None if it cannot be told.
-
-    The parser itself is asked: the line is the first that names the key and after which the file, cut off
-    there, holds the path. So comments, quoted look-alikes and dotted keys need no grammar of our own.
-    """
-    lines = text.split("\n")
-    key = next((part for part in reversed(path) if isinstance(part, str)), None)
-    if key is None:
-        return None
-    for number, line in enumerate(lines):
-        if key not in line:
-            continue
-        for stop in range(number + 1, min(number + LONGEST_VALUE_LINES, len(lines)) + 1):
-            try:
-                table = tomllib.loads("\n".join(lines[:stop]))
-            except (ValueError, RecursionError):
-                continue  # cut off inside a value
-            if _holds(table, path):
-                return _within(lines, key, path, number, stop)
-            break
-    return None
-
-
-def _within(lines: list[str], key: str, path: tuple[str | int, ...], first: int, stop: int) -> int:
-    """Line inside a value of several lines: for the third table of a list, the third that names the key."""
-    naming = [number for number in range(first, stop) if key in lines[number]]
-    index = next((part for part in path if isinstance(part, int)), 0)
-    in_header = lines[first].lstrip().startswith("[") or len(naming) == 1
-    return naming[0 if in_header else min(index, len(naming) - 1)] + 1
-
-
-def _holds(table: Any, path: tuple[str | int, ...]) -> bool:
-    for part in path:
-        if isinstance(part, int):
-            if not isinstance(table, list) or part >= len(table):
-                return False
-        elif not isinstance(table, dict) or part not in table:
-            return False
-        table = table[part]
-    return True
-
-
-def _toml(value: Any) -> str:
-    if isinstance(value, dict):
-        return "{ " + ", ".join(f"{key} = {_toml(item)}" for key, item in value.items()) + " }"
-    if isinstance(value, str):
-        # JSON's escapes are TOML's, but for the delete character, which TOML wants escaped
-        return json.dumps(value, ensure_ascii=False).replace("\x7f", "\\u007f")
-    # a number of numpy's would write its type as well
-    return repr(value.item() if hasattr(value, "item") else value)
+        raise KeyProblem((*path, error.field) if inside and error.field else path, str(error)) from None

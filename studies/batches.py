@@ -1,0 +1,236 @@
+"""One batch of a study: overlays of one history and one window -> a row of figures each.
+
+A batch knows nothing of the other batches, and no figure depends on which overlays share it.
+"""
+
+from __future__ import annotations
+
+from collections.abc import Iterator, Sequence
+from dataclasses import dataclass
+from typing import Any
+
+import numpy as np
+import numpy.typing as npt
+
+from backtest import Market
+from backtest.analytics.block_length import optimal_block_length
+from backtest.analytics.headline import HEADLINE, headline_figures, same_beta_mixes
+from backtest.analytics.performance import TRADING_DAYS, daily_excess, years_between
+from backtest.analytics.reality_check import Draws, Partial, check_batch, combine
+from backtest.analytics.subperiods import block_edges, block_sums
+from backtest.engine.families import FamilyReplay, replay_families
+from backtest.engine.legs import PricedLegs
+
+from .expansion import Point
+
+Array = npt.NDArray[np.float64]
+Dates = npt.NDArray[np.datetime64]
+
+#: Columns of figures of an overlay, in their order; decimals.
+FIGURES = (
+    *HEADLINE,
+    "options_net_a_year",
+    "hold_annual_return",
+    "hold_volatility",
+    "hold_sharpe",
+    "hold_max_drawdown",
+    "mix_annual_return",
+    "mix_sharpe",
+    "return_less_hold",
+    "sharpe_less_hold",
+    "drawdown_removed",
+    "return_less_mix",
+    "sharpe_less_mix",
+    "information_ratio",
+)
+#: Columns of dates.
+SPAN = ("inception", "end")
+#: The comparison of C10 whose share of stock is the overlay's beta; the other is the hold.
+SAME_BETA = "same-beta mix"
+#: Sums kept for each block of days.
+BLOCK_COLUMNS = ("growth", "total", "square")
+#: Overlays whose differences are asked for a block length.
+ASKED = 12
+
+
+@dataclass(frozen=True, slots=True, kw_only=True, eq=False)
+class Span:
+    """The days on which all overlays of one history and one window live, and what is the same for all of them.
+
+    Attributes
+    ----------
+    first, last : datetime64
+        Common days: the last inception among the overlays, and the window's end.
+    edges : ndarray of int, shape (block + 1,)
+        Blocks of the daily returns of those days: cut into equal parts, and at every turn of a decade.
+    equal : ndarray of int, shape (part + 1,)
+        Where in ``edges`` the equal parts begin and end.
+    decades : tuple of (str, int, int)
+        Name of each decade, and where in ``edges`` it begins and ends.
+    block_length : float
+        Mean days in a row of the tests that allow for the search.
+    """
+
+    first: np.datetime64
+    last: np.datetime64
+    edges: npt.NDArray[np.intp]
+    equal: npt.NDArray[np.intp]
+    decades: tuple[tuple[str, int, int], ...]
+    block_length: float
+
+    @property
+    def days(self) -> int:
+        """Number of daily returns."""
+        return int(self.edges[-1])
+
+
+def common_span(market: Market, asked: Sequence[Point], *, comparison: str) -> Span:
+    """The span that overlays of one window have in common.
+
+    ``asked`` holds one overlay for each roll calendar and volatility among them, and some more.
+
+    Raises
+    ------
+    BacktestError
+        If one of them cannot be replayed on this market.
+    """
+    families = list(_families(market, asked, priced=None))
+    first = max(found.dates[0] for found in families)
+    last = families[0].dates[-1]
+    lengths = [1.0]
+    for found in families:
+        excess, beta = _excess_and_beta(found)
+        offset = int(np.searchsorted(found.dates, first))
+        for row in range(min(len(excess), ASKED)):
+            difference = _differences(found, excess[row : row + 1], beta[row : row + 1], comparison)[0, offset:]
+            if difference.size > 1 and np.isfinite(difference).all():
+                lengths.append(optimal_block_length(difference))
+    dates = families[0].dates[int(np.searchsorted(families[0].dates, first)) :]
+    days = max(len(dates) - 1, 1)
+    # an edge is the first return of a block: that over the first day of a decade
+    decade = dates[1:].astype("datetime64[Y]").astype(np.int64) // 10 * 10 + (1970 // 10 * 10)
+    turns = np.flatnonzero(decade[1:] != decade[:-1]) + 1
+    parts = block_edges(days)
+    edges = np.unique(np.concatenate([parts, turns]))
+    cuts = np.searchsorted(edges, np.concatenate([[0], turns, [days]]))
+    names = [f"{one}s" for one in decade[np.concatenate([[0], turns])]] if len(dates) > 1 else []
+    return Span(
+        first=first,
+        last=last,
+        edges=edges,
+        equal=np.searchsorted(edges, parts),
+        decades=tuple(zip(names, cuts[:-1].tolist(), cuts[1:].tolist(), strict=True)) if names else (),
+        block_length=float(min(np.nanmax(lengths), days)),
+    )
+
+
+def replay_batch(
+    market: Market,
+    points: Sequence[Point],
+    span: Span,
+    *,
+    comparison: str,
+    draws: Draws | None,
+    first_number: int = 0,
+    priced: PricedLegs | None = None,
+) -> tuple[dict[str, npt.NDArray[np.generic]], Partial | None]:
+    """Figures of a batch.
+
+    Parameters
+    ----------
+    points : sequence of Point
+        Overlays of one window.
+    comparison : {"same-beta mix", "hold"}
+        What the information ratio and the tests are against.
+    draws : Draws, optional
+        For the tests that allow for the search; none without.
+    first_number : int
+        Number of the first overlay in the whole study, by which the tests tell overlays apart.
+    priced : PricedLegs, optional
+        Legs priced before on this market.
+
+    Returns
+    -------
+    columns : dict of str to ndarray, shape (overlay,)
+        ``SPAN``, ``FIGURES``, and for each block ``growth_1``, ``total_1``, ``square_1``, ...
+    partial : Partial or None
+    """
+    count, blocks = len(points), len(span.edges) - 1
+    columns: dict[str, npt.NDArray[np.generic]] = {name: np.empty(count, dtype="datetime64[D]") for name in SPAN}
+    columns |= {name: np.full(count, np.nan) for name in FIGURES}
+    columns |= {f"{name}_{block + 1}": np.full(count, np.nan) for block in range(blocks) for name in BLOCK_COLUMNS}
+    parts: list[Partial] = []
+    for found in _families(market, points, priced=priced):
+        numbers = np.array(found.numbers)
+        figures = _figures(found, comparison=comparison)
+        for name in (*SPAN, *FIGURES):
+            columns[name][numbers] = figures[name]
+        offset = int(np.searchsorted(found.dates, span.first))
+        wealth = found.wealth[:, offset:]
+        sums = block_sums(wealth, rate_return=found.rate_return[offset:], edges=span.edges)
+        for name in BLOCK_COLUMNS:
+            for block in range(blocks):
+                columns[f"{name}_{block + 1}"][numbers] = getattr(sums, name)[:, block]
+        if draws is not None:
+            excess = daily_excess(found.wealth, found.rate_return)
+            differences = _differences(found, excess, figures["beta"].astype(np.float64), comparison)[:, offset:]
+            parts.append(check_batch(draws, differences.T, first_number + numbers))
+    return columns, combine(parts) if parts else None
+
+
+def _families(market: Market, points: Sequence[Point], *, priced: PricedLegs | None) -> Iterator[FamilyReplay]:
+    return replay_families(
+        market,
+        [point.overlay for point in points],
+        volatility=[point.volatility for point in points],
+        start=points[0].start,
+        end=points[0].end,
+        priced=priced,
+    )
+
+
+def _figures(found: FamilyReplay, *, comparison: str) -> dict[str, npt.NDArray[np.generic]]:
+    shared: dict[str, Any] = {"hold": found.hold, "rate_return": found.rate_return, "dates": found.dates}
+    made: dict[str, npt.NDArray[np.generic]] = {}
+    own = headline_figures(found.wealth, **shared)
+    hold = {name: float(values[0]) for name, values in headline_figures(found.hold[np.newaxis], **shared).items()}
+    mix = same_beta_mixes(own["beta"], **shared)
+    made |= own
+    made["options_net_a_year"] = found.options_net() / years_between(found.dates)
+    for name in ("annual_return", "volatility", "sharpe", "max_drawdown"):
+        made[f"hold_{name}"] = np.full(len(found.wealth), hold[name])
+    made |= {f"mix_{name}": values for name, values in mix.items()}
+    made["return_less_hold"] = own["annual_return"] - hold["annual_return"]
+    made["sharpe_less_hold"] = own["sharpe"] - hold["sharpe"]
+    made["drawdown_removed"] = own["max_drawdown"] - hold["max_drawdown"]
+    made["return_less_mix"] = own["annual_return"] - mix["annual_return"]
+    made["sharpe_less_mix"] = own["sharpe"] - mix["sharpe"]
+    made["information_ratio"] = _information_ratio(found, own, comparison)
+    made["inception"] = np.full(len(found.wealth), found.dates[0])
+    made["end"] = np.full(len(found.wealth), found.dates[-1])
+    return made
+
+
+def _information_ratio(found: FamilyReplay, own: dict[str, Array], comparison: str) -> Array:
+    """Mean of ``X - w e`` over its deviation, annual, from the moments at hand; ``w`` is beta, or 1 for the hold."""
+    market = daily_excess(found.hold, found.rate_return)
+    share = own["beta"] if comparison == SAME_BETA else np.ones(len(found.wealth))
+    mean = own["excess_mean"] - share * np.mean(market)
+    variation = own["excess_deviation"] ** 2
+    variance = variation + share * (share - 2.0 * own["beta"]) * np.var(market, ddof=1)
+    # what rounding leaves of an overlay that is its own comparison is no deviation
+    varies = variance > 1e-12 * variation
+    ratio = mean / np.sqrt(np.where(varies, variance, 1.0)) * np.sqrt(TRADING_DAYS)
+    return np.where(varies, ratio, np.nan)
+
+
+def _excess_and_beta(found: FamilyReplay) -> tuple[Array, Array]:
+    """Daily excess returns, shape ``(overlay, day - 1)``, and betas to the hold."""
+    own = headline_figures(found.wealth, hold=found.hold, rate_return=found.rate_return, dates=found.dates)
+    return daily_excess(found.wealth, found.rate_return), own["beta"]
+
+
+def _differences(found: FamilyReplay, excess: Array, beta: Array, comparison: str) -> Array:
+    """Daily returns less those of the comparison, shape ``(overlay, day - 1)``."""
+    market = daily_excess(found.hold, found.rate_return)
+    return excess - (beta[:, np.newaxis] if comparison == SAME_BETA else 1.0) * market
