@@ -106,20 +106,28 @@ def make_plans(
     PlanError, MarketError
         If the window is empty, holds no roll date of an anchor, or lacks a vol or a rate.
     """
-    bound = {volatility: volatility.on(market) for volatility in dict.fromkeys(volatilities)}
+    # a grid has few legs and many overlays: what was looked up for one object is found by the object itself after
+    # that, as to hash a leg or a volatility takes longer than all else that is done for an overlay here
+    seen = {id(volatility): volatility for volatility in volatilities}
+    bound = {volatility: volatility.on(market) for volatility in dict.fromkeys(seen.values())}
     last = _last_position(market, end)
     builders: dict[int, _PlanBuilder] = {}
     inceptions: dict[tuple[Volatility, ListedCycle], int] = {}
+    of_objects: dict[tuple[int, int], _PlanBuilder] = {}
     for number, (overlay, volatility) in enumerate(zip(overlays, volatilities, strict=True)):
-        key = (volatility, overlay.anchor.cycle)
-        if key not in inceptions:
-            inceptions[key] = _inception(
-                market, overlay, bound[volatility], start=start, last=last, inception=inception
-            )
-        first = inceptions[key]
-        if first not in builders:
-            builders[first] = _PlanBuilder(market, first, last, bound)
-        builders[first].add(number, overlay, volatility)
+        anchor = overlay.anchor
+        builder = of_objects.get((id(volatility), id(anchor)))
+        if builder is None:
+            key = (volatility, anchor.cycle)
+            if key not in inceptions:
+                inceptions[key] = _inception(
+                    market, overlay, bound[volatility], start=start, last=last, inception=inception
+                )
+            first = inceptions[key]
+            if first not in builders:
+                builders[first] = _PlanBuilder(market, first, last, bound)
+            builder = of_objects[id(volatility), id(anchor)] = builders[first]
+        builder.add(number, overlay, volatility, anchor)
     return [builder.plan for builder in builders.values()]
 
 
@@ -134,26 +142,40 @@ class _PlanBuilder:
         self._legs: dict[tuple[int, str, StrikeRule], int] = {}
         self._families: dict[tuple[ListedCycle, str], Family] = {}
         self._checked: set[Volatility] = set()
+        # by identity of the objects, all of which the caller holds
+        self._family_of: dict[tuple[int, str], Family] = {}
+        self._row_of: dict[tuple[int, int, int, int], int] = {}
 
-    def add(self, number: int, overlay: Overlay, volatility: Volatility) -> None:
+    def add(self, number: int, overlay: Overlay, volatility: Volatility, anchor: Leg) -> None:
+        family = self._family_of.get((id(anchor), overlay.account))
+        if family is None:
+            family = self._family_of[id(anchor), overlay.account] = self._family(anchor, overlay.account)
+        rows = []
+        for leg in overlay.legs:
+            key = (id(family), id(leg), id(volatility), id(overlay.costs))
+            row = self._row_of.get(key)
+            if row is None:
+                row = self._row_of[key] = self._row(family, leg, volatility, overlay.costs)
+            rows.append(row)
+        family.members.append(number)
+        family.holdings.append(tuple(rows))
+
+    def _family(self, anchor: Leg, account: str) -> Family:
+        key = (anchor.cycle, account)
+        if key not in self._families:
+            # the anchor's own term plays no part in when packages are resized
+            schedule = self._schedule(anchor.cycle, anchor.cycle.months)
+            self._families[key] = Family(anchor=schedule, account=account)
+            self.plan.families.append(self._families[key])
+        return self._families[key]
+
+    def _row(self, family: Family, leg: Leg, volatility: Volatility, costs: Costs) -> int:
+        """The row of a leg in the books of a family."""
         if volatility not in self._checked:
             _check_data(self.plan, self._bound[volatility])
             self._checked.add(volatility)
-        anchor = overlay.anchor
-        family_key = (anchor.cycle, overlay.account)
-        if family_key not in self._families:
-            # the anchor's own term plays no part in when packages are resized
-            schedule = self._schedule(anchor.cycle, anchor.cycle.months)
-            self._families[family_key] = Family(anchor=schedule, account=overlay.account)
-            self.plan.families.append(self._families[family_key])
-        family = self._families[family_key]
-        rows = []
-        for leg in overlay.legs:
-            group, row = self._leg(leg, volatility)
-            key = BookKey(group, row, leg.direction, overlay.costs)
-            rows.append(family.books.setdefault(key, len(family.books)))
-        family.members.append(number)
-        family.holdings.append(tuple(rows))
+        group, row = self._leg(leg, volatility)
+        return family.books.setdefault(BookKey(group, row, leg.direction, costs), len(family.books))
 
     def _leg(self, leg: Leg, volatility: Volatility) -> tuple[int, int]:
         vol_shift = volatility.shift(leg.right)
