@@ -33,8 +33,9 @@ if TYPE_CHECKING:
     from .page.health import DataHealth
 
 
-#: Folder of the CSV tables in a results folder.
+#: Folder of the CSV tables in a results folder, and its Parquet tables.
 TABLES = "tables"
+DAILY, ROLLS = "daily.parquet", "rolls.parquet"
 
 
 def whole_summary(report: Report) -> dict[str, Any]:
@@ -42,6 +43,13 @@ def whole_summary(report: Report) -> dict[str, Any]:
     made = summary(report.answer)
     notes = {key: made.pop(key) for key in ("warnings", "history_notes")}
     return plain(made | report_summary(report) | notes)
+
+
+def write_numbers(report: Report, folder: Path) -> None:
+    """Write what the manifest gives again to the last digit: daily values, rolls and summary."""
+    write_parquet(folder / DAILY, daily_frame(report.answer))
+    write_parquet(folder / ROLLS, report.answer.replay.rolls_frame())
+    write_json(folder / SUMMARY, whole_summary(report))
 
 
 def write_answer(
@@ -59,10 +67,8 @@ def write_answer(
     from .tables_csv import write_tables
 
     found = report.answer
-    write_parquet(folder / "daily.parquet", daily_frame(found))
-    write_parquet(folder / "rolls.parquet", found.replay.rolls_frame())
+    write_numbers(report, folder)
     _write_pictures(found, folder)
-    write_json(folder / SUMMARY, whole_summary(report))
     write_tables(report, folder / TABLES)
     page = build_report(
         found,
@@ -73,7 +79,7 @@ def write_answer(
         how_to_run=manifest["command"],
         data_health=data_health,
     )
-    (folder / "report.html").write_text(page, encoding="utf-8")
+    (folder / "report.html").write_text(page, encoding="utf-8", errors="backslashreplace")
     if pdf:
         write_pdf(report, folder / "report.pdf", history=history)
     write_json(folder / MANIFEST, manifest)
@@ -92,6 +98,87 @@ def _write_pictures(found: Answer, folder: Path) -> None:
         figure.savefig(folder / f"{name}.png", metadata={"Software": None})
 
 
+def versions() -> dict[str, str]:
+    """Versions of what decides the last digits."""
+    return {name: version(name) for name in ("numpy", "pandas", "pyarrow", "scipy")} | {
+        "python": platform.python_version()
+    }
+
+
+def replay_of(
+    frame: pd.DataFrame,
+    agreed: OverlayFile,
+    *,
+    label: str,
+    inputs: list[dict[str, Any]],
+    notes: tuple[str, ...] = (),
+    rate: float | None = None,
+    dividend_yield: float | None = None,
+    start: str | None = None,
+    end: str | None = None,
+    command: str = "",
+    source: dict[str, Any] | None = None,
+    seed: int = SEED,
+    resamples: int = RESAMPLES,
+) -> tuple[Answer, dict[str, Any]]:
+    """Replay one overlay on a history's frame; the answer, and the manifest that gives it again.
+
+    Parameters are those of :func:`make_answer_folder`.
+
+    Raises
+    ------
+    BacktestError
+    """
+    for option, value, least in (("--rate", rate, -99.0), ("--dividend-yield", dividend_yield, -49.0)):
+        if value is not None:
+            number(option, value, least=least, most=100.0, unit=" percent a year")
+    whole_number("--seed", seed, least=0, most=2**32 - 1)
+    whole_number("--resamples", resamples, least=100, most=1_000_000)
+    market = Market.from_frame(
+        frame,
+        rate=None if rate is None else rate / 100.0,
+        dividend_yield=None if dividend_yield is None else dividend_yield / 100.0,
+    )
+    found = answer(market, agreed.overlay, volatility=agreed.volatility, start=start, end=end, history_notes=notes)
+    manifest = {
+        "schema": SCHEMA,
+        "made_by": f"rollband {version('rollband')}",
+        "versions": versions(),
+        "command": command,
+        "history": label,
+        "source": source,
+        "inputs": inputs,
+        "settings": {
+            "overlay": overlay_to_table(agreed.overlay, agreed.volatility),
+            "from": start,
+            "to": end,
+            "rate": rate,
+            "dividend_yield": dividend_yield,
+            "resamples": resamples,
+            "history": {"first": str(frame.index[0].date()), "last": str(frame.index[-1].date()), "days": len(frame)},
+        },
+        "seed": seed,
+    }
+    return found, manifest
+
+
+def make_numbers_again(
+    frame: pd.DataFrame,
+    agreed: OverlayFile,
+    folder: Path,
+    *,
+    seed: int,
+    resamples: int,
+    progress: Callable[[str], None] = lambda step: None,
+    **rest: Any,
+) -> dict[str, Any]:
+    """Write the numbers of a results folder and nothing else; its manifest. ``rest`` is for :func:`replay_of`."""
+    progress("replaying")
+    found, manifest = replay_of(frame, agreed, seed=seed, resamples=resamples, **rest)
+    write_numbers(make_report(found, seed=seed, resamples=resamples, progress=progress), folder)
+    return manifest
+
+
 def make_answer_folder(
     frame: pd.DataFrame,
     agreed: OverlayFile,
@@ -106,6 +193,7 @@ def make_answer_folder(
     out: Path | None = None,
     results: Path = Path("results"),
     command: str = "",
+    source: dict[str, Any] | None = None,
     data_health: DataHealth | None = None,
     seed: int = SEED,
     resamples: int = RESAMPLES,
@@ -128,6 +216,9 @@ def make_answer_folder(
         The folder; a free one under ``results``, named after history and overlay, if not given.
     command : str
         What gives the same folder again, for manifest and page.
+    source : dict, optional
+        Where the history came from: ``history`` and ``store`` with the stored file's ``sha256``, or ``files`` by kind
+        and ``vol_unit``; paths as they were typed.
     seed, resamples : int
         Of the resampling.
     pdf : bool
@@ -141,37 +232,11 @@ def make_answer_folder(
     """
     if out is not None:
         check_replaceable(out)
-    for option, value, least in (("--rate", rate, -99.0), ("--dividend-yield", dividend_yield, -49.0)):
-        if value is not None:
-            number(option, value, least=least, most=100.0, unit=" percent a year")
-    whole_number("--seed", seed, least=0, most=2**32 - 1)
-    whole_number("--resamples", resamples, least=100, most=1_000_000)
     progress("replaying")
-    market = Market.from_frame(
-        frame,
-        rate=None if rate is None else rate / 100.0,
-        dividend_yield=None if dividend_yield is None else dividend_yield / 100.0,
-    )
-    found = answer(market, agreed.overlay, volatility=agreed.volatility, start=start, end=end, history_notes=notes)
-    manifest = {
-        "schema": SCHEMA,
-        "made_by": f"rollband {version('rollband')}",
-        "versions": {name: version(name) for name in ("numpy", "pandas", "pyarrow", "scipy")}
-        | {"python": platform.python_version()},
-        "command": command,
-        "history": label,
-        "inputs": inputs,
-        "settings": {
-            "overlay": overlay_to_table(agreed.overlay, agreed.volatility),
-            "from": start,
-            "to": end,
-            "rate": rate,
-            "dividend_yield": dividend_yield,
-            "resamples": resamples,
-            "history": {"first": str(frame.index[0].date()), "last": str(frame.index[-1].date()), "days": len(frame)},
-        },
-        "seed": seed,
-    }
+    found, manifest = replay_of(
+        frame, agreed, label=label, inputs=inputs, notes=notes, rate=rate, dividend_yield=dividend_yield, start=start,
+        end=end, command=command, source=source, seed=seed, resamples=resamples,
+    )  # fmt: skip
     folder = out if out is not None else free_folder(results, folder_name(label, agreed.overlay.name), manifest)
     report = make_report(found, seed=seed, resamples=resamples, progress=progress)
     progress("writing tables, pictures and page")

@@ -103,7 +103,8 @@ def warnings_of(found: Replay) -> list[str]:
     for leg in found.legs:
         settled = leg.close_value[~leg.schedule.live]
         if leg.leg.right == "put" and leg.leg.direction > 0 and not (settled > 0).any():
-            said.append(f"no {leg.label} paid off in this window: it says nothing about protection")
+            name = leg.label.replace("_", " ")
+            said.append(f"no {name} paid off in this window: it says nothing about protection")
         below = int(np.count_nonzero((leg.leg.direction < 0) & (leg.premium < leg.open_cost)))
         if below:
             said.append(

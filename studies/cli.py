@@ -5,6 +5,7 @@ Heavy imports are inside the commands, so that ``rollband --help`` answers at on
 
 from __future__ import annotations
 
+import io
 import shlex
 import sys
 from collections.abc import Iterator
@@ -21,6 +22,7 @@ from .wiring import (
     replay_and_write,
     say,
     show_summary_of,
+    source_of,
     store_option,
     tell_history,
     with_options,
@@ -159,7 +161,7 @@ def replay(
     replay_and_write(
         history, label, agreed, rate=rate, dividend_yield=dividend_yield, window=window, out=out, as_json=as_json,
         results=Path("results"), overlay_file=overlay, command=["rollband", *sys.argv[1:]], seed=seed,
-        resamples=resamples, pdf=pdf,
+        resamples=resamples, pdf=pdf, source=source_of(name, files, vol_unit=vol_unit, store=store),
     )  # fmt: skip
 
 
@@ -218,6 +220,7 @@ def demo(folder: Annotated[Path, typer.Argument(help="Where to put it.")] = Path
         history, "demo", parse_overlay(DEMO_OVERLAY, file=overlay_file.name), rate=None, dividend_yield=None,
         window={"start": None, "end": None}, out=folder / "results", as_json=False, results=folder,
         overlay_file=overlay_file, command=["rollband", "replay", *arguments],
+        source=source_of("demo", {}, vol_unit=None, store=store),
     )  # fmt: skip
     say("")
     say("Try next:")
@@ -229,6 +232,9 @@ def demo(folder: Annotated[Path, typer.Argument(help="Where to put it.")] = Path
 
 def main() -> None:
     """Run the command line; every error of ours becomes a sentence on standard error and an exit code."""
+    for stream in (sys.stdout, sys.stderr):
+        if isinstance(stream, io.TextIOWrapper):
+            stream.reconfigure(errors="backslashreplace")  # a file name need not be text
     with _errors_as_exit_codes():
         app()
 

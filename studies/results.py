@@ -131,7 +131,8 @@ def read_summary(folder: Path) -> dict[str, Any]:
 
 def write_json(path: Path, value: Any) -> None:
     """Write plain JSON, sorted as given; a figure that cannot be had is null."""
-    path.write_text(json_text(value) + "\n", encoding="utf-8")
+    # a file name that is no text is escaped, as JSON has it
+    path.write_text(json_text(value) + "\n", encoding="utf-8", errors="backslashreplace")
 
 
 def json_text(value: Any) -> str:

@@ -82,9 +82,9 @@ def tables_of(report: Report) -> dict[str, pd.DataFrame]:
             ]
         ),
         "contest": _contest(report.inference.comparisons),
-        "falls": pd.DataFrame([_flat(one) for one in findings.episodes]),
-        "rises": pd.DataFrame([_flat(one) for one in findings.rallies]),
-        "without_worst": pd.DataFrame([_without(one) for one in findings.without_worst]),
+        "falls": _table([_flat(one) for one in findings.episodes], "peak", "trough", "recovery"),
+        "rises": _table([_flat(one) for one in findings.rallies], "first", "last"),
+        "without_worst": _table([_without(one) for one in findings.without_worst], "left_out_from", "left_out_to"),
         "ledger": _ledger(findings.ledger),
         "ledger_by_year": _ledger(findings.ledger_by_year),
         "attribution": _attribution(report),
@@ -99,6 +99,11 @@ def tables_of(report: Report) -> dict[str, pd.DataFrame]:
         ),
         "verdict": pd.DataFrame([asdict(clause) for clause in report.clauses]),
     }  # fmt: skip
+
+
+def _table(rows: list[dict[str, Any]], *columns: str) -> pd.DataFrame:
+    """Rows as a frame; without any, the columns that name what there is none of."""
+    return pd.DataFrame(rows) if rows else pd.DataFrame(columns=list(columns), dtype=str)
 
 
 def _figures(figures: Mapping[str, Performance | None]) -> pd.DataFrame:

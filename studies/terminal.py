@@ -31,12 +31,17 @@ def percent(value: float | None, digits: int = 1) -> str:
     """A decimal as a percent; a dash when it cannot be had."""
     if value is None or not math.isfinite(value):
         return NOT_TO_BE_HAD
-    return f"{100 * value + 0.0:.{digits}f}%"
+    return _without_zero_sign(f"{100 * value:.{digits}f}%")
 
 
 def ratio(value: float | None) -> str:
     """A plain ratio with two digits."""
-    return NOT_TO_BE_HAD if value is None or not math.isfinite(value) else f"{value + 0.0:.2f}"
+    return NOT_TO_BE_HAD if value is None or not math.isfinite(value) else _without_zero_sign(f"{value:.2f}")
+
+
+def _without_zero_sign(text: str) -> str:
+    """No sign before what is shown as zero."""
+    return text if any(digit in text for digit in "123456789") else text.lstrip("+-")
 
 
 def show_summary(console: Console, told: Mapping[str, Any], *, history: str) -> None:
@@ -66,7 +71,7 @@ def show_summary(console: Console, told: Mapping[str, Any], *, history: str) -> 
         say(f"{label}: {leg['paid_off']} of {leg['rolls'] - leg['open_rolls']} settled or sold above zero")
     say("")
     say("The same overlay priced under other smiles, against its own same-beta mix", style="bold")
-    console.print(_ladder_table(told["smile_ladder"]))
+    console.print(_ladder_table(told["smile_ladder"], whole=told["years"] < 1))
     say(_ladder_reading(told["smile_ladder"]))
     say("")
     say("What this stands on", style="bold")
@@ -110,7 +115,9 @@ def _headline_table(told: Mapping[str, Any]) -> Table:
 
 
 def _fall(name: str, figures: Mapping[str, Any] | None) -> str:
-    if figures is None or figures["max_drawdown_peak"] is None:
+    if figures is None or figures["max_drawdown"] is None:
+        return f"{name}: no figures, its wealth is lost on the way"
+    if figures["max_drawdown_peak"] is None:
         return f"{name}: no fall from a peak"
     again = figures["max_drawdown_recovery"]
     recovered = "not recovered by the end" if again is None else f"recovered by {again}"
@@ -146,8 +153,15 @@ def _cost_table(costs: Mapping[str, Any]) -> Table:
     return table
 
 
-def _ladder_table(ladder: Mapping[str, Any]) -> Table:
-    table = _table("smile", "return a year", "Sharpe ratio", "mix: Sharpe ratio", "overlay less mix", "options net")
+def _ladder_table(ladder: Mapping[str, Any], *, whole: bool) -> Table:
+    table = _table(
+        "smile",
+        "return, whole" if whole else "return a year",
+        "Sharpe ratio",
+        "mix: Sharpe ratio",
+        "overlay less mix",
+        "options net",
+    )
     for name, rung in ladder.items():
         table.add_row(
             f"{name} (used)" if rung["used"] else name,
@@ -191,8 +205,12 @@ def sharpe_gain(rung: Mapping[str, Any]) -> float | None:
 
 
 def _signed(value: float | None) -> str:
-    return NOT_TO_BE_HAD if value is None or not math.isfinite(value) else f"{value + 0.0:+.2f}"
+    return NOT_TO_BE_HAD if value is None or not math.isfinite(value) else _without_zero_sign(f"{value:+.2f}")
 
 
 def _signed_percent(value: float | None) -> str:
-    return NOT_TO_BE_HAD if value is None or value == 0 or not math.isfinite(value) else f"{100 * value:+.2f}%"
+    return (
+        NOT_TO_BE_HAD
+        if value is None or value == 0 or not math.isfinite(value)
+        else _without_zero_sign(f"{100 * value:+.2f}%")
+    )

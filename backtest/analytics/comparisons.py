@@ -14,7 +14,7 @@ import numpy.typing as npt
 from scipy.optimize import brentq
 
 from .drawdowns import drawdown_path
-from .performance import daily_excess, regression_beta
+from .performance import SMALLEST_SPREAD, daily_excess, regression_beta
 
 Array = npt.NDArray[np.float64]
 
@@ -96,7 +96,7 @@ def _same_volatility(wealth: Array, excess: Array, cash: Array) -> float | None:
     covariance = np.cov(cash, excess, ddof=1)
     a, half_b, c = covariance[1, 1], covariance[0, 1], covariance[0, 0] - target
     discriminant = half_b * half_b - a * c
-    if not a > 0 or discriminant < 0:
+    if not a > SMALLEST_SPREAD**2 or discriminant < 0:
         return None
     return float((-half_b + np.sqrt(discriminant)) / a)
 

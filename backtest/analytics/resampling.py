@@ -347,7 +347,8 @@ def _comparison_inference(
 
 def _why_nothing(days: int, overlay: Array, market: Array, cash: Array) -> str | None:
     if days < FEWEST_DAYS:
-        return f"{days} days of returns are too few to resample; at least {FEWEST_DAYS} are needed"
+        counted = "1 day of returns is" if days == 1 else f"{days} days of returns are"
+        return f"{counted} too few to resample; at least {FEWEST_DAYS} are needed"
     if not (np.isfinite(overlay).all() and np.isfinite(market).all() and np.isfinite(cash).all()):
         return "some returns of the overlay, of the hold or of cash are missing"
     if (overlay <= -1.0).any():

@@ -20,7 +20,7 @@ holds without one crisis       yes: that difference keeps its sign when each of 
                                it changes
 =============================  ================================================================================
 
-A clause whose figures cannot be had is open, and says why.
+A clause whose figures cannot be had is open, and says why; so is one on a difference that is no more than rounding.
 """
 
 from __future__ import annotations
@@ -32,6 +32,8 @@ from dataclasses import dataclass
 from .robustness import BreakEven
 
 SURE = 0.95
+#: A difference no larger than this is none: rounding has no side.
+TIE = 1e-9
 MOST_ROLL_DAYS, FEW_ROLL_DAYS = 0.90, 0.50
 
 
@@ -95,7 +97,7 @@ def _protects(e: Evidence) -> Clause:
         return Clause(title=title, finding="open", sentence="No drawdown can be had for this replay.")
     gained = e.overlay_drawdown - e.hold_drawdown
     payoffs = _payoffs(e)
-    if gained <= 0:
+    if gained <= TIE:
         sentence = (
             f"Its deepest fall was {_percent(e.overlay_drawdown)}, the hold's {_percent(e.hold_drawdown)}.{payoffs}"
         )
@@ -128,13 +130,15 @@ def _costs(e: Evidence) -> Clause:
     if not math.isfinite(d.value):
         return Clause(title=title, finding="open", sentence="No return can be had for this replay.")
     less = "less" if d.value < 0 else "more"
-    sentence = f"It returned {_points(abs(d.value))} a year {less} than the hold"
+    sentence = f"It returned {_points(abs(d.value))}{_a_year(e)} {less} than the hold"
+    if abs(d.value) <= TIE:
+        sentence = "It returned as much as the hold"
     if not d.known:
         return Clause(title=title, finding="open", sentence=f"{sentence}; the history is too short for an interval.")
     sentence += f" (90% interval {_signed_points(d.low)} to {_signed_points(d.high)})"
-    if d.value < 0 and d.high < 0:
+    if d.value < -TIE and d.high < 0:
         return Clause(title=title, finding="yes", sentence=f"{sentence}.")
-    if d.value >= 0 and d.low > 0:
+    if d.value >= -TIE and d.low > 0:
         return Clause(title=title, finding="no", sentence=f"{sentence}.")
     return Clause(title=title, finding="open", sentence=f"{sentence}: the history does not settle it.")
 
@@ -143,11 +147,15 @@ def _beats(e: Evidence) -> Clause:
     title, d = "Beats holding less", e.sharpe_difference
     if not math.isfinite(d.value):
         return Clause(title=title, finding="open", sentence="No Sharpe ratio can be had for overlay and same-beta mix.")
+    if abs(d.value) <= TIE:
+        return Clause(
+            title=title, finding="open", sentence="Its Sharpe ratio was that of holding less stock at the same beta."
+        )
     side = "above" if d.value >= 0 else "below"
     sentence = f"Its Sharpe ratio was {abs(d.value):.2f} {side} that of holding less stock at the same beta"
     if not d.known:
         return Clause(title=title, finding="open", sentence=f"{sentence}; the history is too short for an interval.")
-    sentence += f" (90% interval {d.low:+.2f} to {d.high:+.2f})"
+    sentence += f" (90% interval {_signed(d.low, 2)} to {_signed(d.high, 2)})"
     if d.low > 0 and d.value > 0:
         return Clause(title=title, finding="yes", sentence=f"{sentence}.")
     if d.high < 0:
@@ -160,8 +168,10 @@ def _smiles(e: Evidence) -> Clause:
     known = {name: d for name, d in e.smile_differences.items() if math.isfinite(d)}
     if len(known) < 2:
         return Clause(title=title, finding="open", sentence="The overlay cannot be compared under several smiles.")
+    if all(abs(d) <= TIE for d in known.values()):
+        return Clause(title=title, finding="open", sentence="Under no smile is it told from holding less stock.")
     low, high = min(known, key=lambda n: known[n]), max(known, key=lambda n: known[n])
-    span = f"from {known[low]:+.2f} ({low}) to {known[high]:+.2f} ({high})"
+    span = f"from {_signed(known[low], 2)} ({low}) to {_signed(known[high], 2)} ({high})"
     turn = _turn(e.break_even)
     if known[low] < 0 < known[high]:
         sentence = f"The prices decide it: that difference in Sharpe ratio runs {span}; used: {e.used_smile}.{turn}"
@@ -172,7 +182,7 @@ def _smiles(e: Evidence) -> Clause:
 def _turn(at: BreakEven) -> str:
     if at.value is None or not math.isfinite(at.value):
         low, high = at.searched
-        return f" No error of all option vols from {low:+.0f} to {high:+.0f} points turns it."
+        return f" No error of all option vols from {_signed(low, 0)} to {_signed(high, 0)} points turns it."
     side = "higher" if at.value > 0 else "lower"
     return f" It turns where all option vols are {abs(at.value):.1f} points {side}."
 
@@ -184,11 +194,13 @@ def _roll_days(e: Evidence) -> Clause:
     if len(known) < 2 or not returns or not math.isfinite(e.roll_day_differences[0]):
         return Clause(title=title, finding="open", sentence="The overlay cannot be compared on other roll days.")
     own = e.roll_day_differences[0]
+    if abs(own) <= TIE:
+        return Clause(title=title, finding="open", sentence="On your roll day it is not told from holding less stock.")
     same = sum((d > 0) == (own > 0) for d in known) / len(known)
     finding = "yes" if same >= MOST_ROLL_DAYS else "no" if same <= FEW_ROLL_DAYS else "open"
     sentence = (
         f"On {100 * same:.0f}% of the {len(known)} possible roll days the Sharpe difference has the same sign; the "
-        f"return ran from {_percent(min(returns))} to {_percent(max(returns))} a year with the roll day alone."
+        f"return ran from {_percent(min(returns))} to {_percent(max(returns))}{_a_year(e)} with the roll day alone."
     )
     return Clause(title=title, finding=finding, sentence=sentence)
 
@@ -203,15 +215,22 @@ def _crises(e: Evidence) -> Clause:
         return Clause(
             title=title, finding="open", sentence="The overlay cannot be compared without the worst falls of the hold."
         )
+    if abs(own) <= TIE:
+        return Clause(title=title, finding="open", sentence="With all falls it is not told from holding less stock.")
     keeps = all((d > 0) == (own > 0) for d in known)
     changed = "keeps" if keeps else "changes"
     falls = "the worst fall is" if len(known) == 1 else f"each of the {len(known)} worst falls is"
     sentence = (
-        f"The Sharpe difference {changed} its sign when {falls} left out: {min(known):+.2f}"
-        + (f" to {max(known):+.2f}" if len(known) > 1 else "")
-        + f", {own:+.2f} with all of them."
+        f"The Sharpe difference {changed} its sign when {falls} left out: {_signed(min(known), 2)}"
+        + (f" to {_signed(max(known), 2)}" if len(known) > 1 else "")
+        + f", {_signed(own, 2)} with all of them."
     )
     return Clause(title=title, finding="yes" if keeps else "no", sentence=sentence)
+
+
+def _a_year(e: Evidence) -> str:
+    """Under a year returns are totals (C11)."""
+    return " a year" if e.years >= 1 else ""
 
 
 def _percent(value: float) -> str:
@@ -219,8 +238,14 @@ def _percent(value: float) -> str:
 
 
 def _points(value: float) -> str:
-    return f"{100 * value + 0.0:.1f} points"
+    return f"{round(100 * value, 1) + 0.0:.1f} points"
 
 
 def _signed_points(value: float) -> str:
-    return f"{100 * value + 0.0:+.1f}"
+    return _signed(100 * value, 1)
+
+
+def _signed(value: float, digits: int) -> str:
+    """With its sign, and none on what is shown as zero."""
+    text = f"{value:+.{digits}f}"
+    return text if any(digit in text for digit in "123456789") else text[1:]

@@ -1,4 +1,7 @@
-"""Charts of many overlays: heat map, frontier, boxes, and one part of the days against another."""
+"""Charts of many overlays: heat map, frontier, boxes, lines over an axis, and one part of the days against another.
+
+Colours fade into whatever lies behind them, so that a page may be light or dark; zero has no colour at all.
+"""
 
 from __future__ import annotations
 
@@ -8,17 +11,28 @@ from typing import TYPE_CHECKING
 import numpy as np
 import numpy.typing as npt
 
-from .style import HOLD, MIX, OVERLAY, PUT, bare, legend_above, plain, signed
+from .style import DASHES, HOLD, MIX, OVERLAY, PUT, bare, legend_above, plain_ink, signed
 
 if TYPE_CHECKING:
     from matplotlib.axes import Axes
+    from matplotlib.axis import Axis
+    from matplotlib.colors import LinearSegmentedColormap
 
 Array = npt.NDArray[np.float64]
+Positions = npt.NDArray[np.intp]
 
 #: More cells a side than this and their numbers are left out.
 MOST_NUMBERED = 12
-#: Ticks a side at most.
-MOST_TICKS = 11
+#: Ticks a side at most, letters of one at most, and letters that stand side by side without touching.
+MOST_TICKS, MOST_LETTERS, LETTERS_ACROSS = 11, 18, 54
+#: Dots closer than one part in so many of a side are drawn once.
+DOTS_ACROSS, DOTS_DOWN = 130, 90
+#: Above this share of full colour a cell's number is white.
+STRONG = 0.85
+ABOVE, BELOW, MISSING = "#005a92", "#b24a00", (0.46, 0.46, 0.46, 0.3)
+#: Lines of one chart are told apart by colour, dash and marker.
+LINES = ((OVERLAY, "o"), (MIX, "D"), (PUT, "s"))
+OWN, BEST = "your overlay", "best of all"
 
 
 def heat_map(
@@ -31,16 +45,16 @@ def heat_map(
     unit: str,
     scale: float = 1.0,
     digits: int = 2,
-    diverging: bool = True,
-    marked: tuple[int, int] | None = None,
+    own: tuple[int, int] | None = None,
+    best: tuple[int, int] | None = None,
 ) -> Axes:
-    """A figure over two axes of a study.
+    """A figure over two axes of a study: blue above zero, orange below, stronger the farther away; grey for none.
 
     Parameters
     ----------
     axes : matplotlib Axes
     across, down : sequence of str
-        Labels of the columns and the rows.
+        Labels of the columns and the rows; the first row is on top.
     values : ndarray, shape (down, across)
         NaN where there is no overlay.
     titles : (str, str)
@@ -51,38 +65,27 @@ def heat_map(
         Factor from the values to the unit.
     digits : int
         Of the numbers in the cells, where there are few enough.
-    diverging : bool
-        Whether zero is the middle of the colours, blue above and orange below it.
-    marked : (int, int), optional
-        Column and row of the reader's own overlay.
+    own, best : (int, int), optional
+        Column and row of the reader's own overlay and of the best one.
     """
     drawn = scale * values
-    known = drawn[np.isfinite(drawn)]
-    low, high = (float(known.min()), float(known.max())) if known.size else (0.0, 1.0)
-    if diverging:
-        reach = max(abs(low), abs(high), 1e-12)
-        low, high = -reach, reach
+    reach = max(float(np.max(np.abs(drawn), initial=0.0, where=np.isfinite(drawn))), 1e-12)
     image = axes.imshow(
-        np.ma.masked_invalid(drawn), cmap=_colours(diverging), vmin=low, vmax=max(high, low + 1e-12), aspect="auto",
-        interpolation="nearest",
+        np.ma.masked_invalid(drawn), cmap=_colours(), vmin=-reach, vmax=reach, aspect="auto", interpolation="nearest",
     )  # fmt: skip
-    for position, labels, place in ((0, across, axes.xaxis), (1, down, axes.yaxis)):
-        step = max(1, int(np.ceil(len(labels) / MOST_TICKS)))
-        place.set_ticks(range(0, len(labels), step), list(labels)[::step])
-        place.set_label_text(titles[position])
+    _ticks(axes.xaxis, across, titles[0])
+    _ticks(axes.yaxis, down, titles[1])
     if max(drawn.shape) <= MOST_NUMBERED:
-        for row, column in zip(*np.nonzero(np.isfinite(drawn)), strict=True):
+        for row, column in np.argwhere(np.isfinite(drawn)).tolist():
             value = float(drawn[row, column])
-            text = signed(value, digits) if diverging else plain(value, digits)
-            # dark words on light cells, light ones on dark
-            share = (value - low) / (high - low)
-            dark = abs(share - 0.5) > 0.33 if diverging else share > 0.62
-            axes.text(column, row, text, ha="center", va="center", color="#ffffff" if dark else "#1d2329")
-    if marked is not None:
-        axes.plot(marked[0], marked[1], "s", markersize=13, markerfacecolor="none", markeredgecolor="#1d2329", mew=1.8)
-        axes.plot([], [], "s", markersize=8, markerfacecolor="none", markeredgecolor="#1d2329", label="your overlay")
-        legend_above(axes)
-    axes.figure.colorbar(image, ax=axes, label=unit, shrink=0.9)
+            colour = "#ffffff" if abs(value) > STRONG * reach else plain_ink()
+            axes.text(column, row, signed(value, digits), ha="center", va="center", color=colour)
+    _mark(axes, own, "s", OWN, size=13 if max(drawn.shape) <= MOST_NUMBERED else 9)
+    _mark(axes, best, "o", BEST, size=17 if max(drawn.shape) <= MOST_NUMBERED else 9)
+    bar = axes.figure.colorbar(image, ax=axes, label=unit, shrink=0.9, pad=0.02)
+    bar.solids.set_rasterized(True)  # type: ignore[union-attr]  # of an image there is one
+    bar.outline.set_visible(False)
+    axes.spines[:].set_visible(False)
     return axes
 
 
@@ -93,10 +96,13 @@ def frontier(
     *,
     mix_cost: Array,
     mix_removed: Array,
-    best: Array,
-    own: tuple[float, float] | None,
+    own: int | None = None,
+    best: int | None = None,
+    each_year: bool = True,
 ) -> Axes:
     """Annual cost against drawdown removed, with the mixes of stock and cash as the line to beat.
+
+    Dots that would lie on one another are drawn once.
 
     Parameters
     ----------
@@ -104,75 +110,174 @@ def frontier(
         Points of return a year less than the hold, and points off its deepest fall.
     mix_cost, mix_removed : ndarray, shape (share,)
         The same of mixes with less and less stock.
-    best : ndarray of int
-        Overlays on the frontier, in order of their cost.
-    own : (float, float), optional
-        The reader's own.
+    own, best : int, optional
+        Positions of the reader's own overlay and of the best one.
+    each_year : bool
+        Whether returns are annual; totals under one year (C11).
     """
-    axes.plot(removed, cost, "o", markersize=2.6, color=HOLD, alpha=0.6, markeredgewidth=0, label="overlays")
-    axes.plot(
-        removed[best], cost[best], "-o", color=OVERLAY, linewidth=1.2, markersize=3.4, label="cheapest for as much"
-    )
-    axes.plot(mix_removed, mix_cost, color=MIX, linewidth=1.6, dashes=(5, 1.5), label="less stock, more cash")
-    if own is not None:
-        axes.plot(own[1], own[0], "D", markersize=7, color=PUT, label="your overlay")
-    axes.set_xlabel("points off the hold's deepest fall")
-    axes.set_ylabel("points of return a year given up")
+    shown, line = distinct_dots(removed, cost), cheapest(cost, removed)
     axes.axhline(0.0, color=HOLD, linewidth=0.8)
-    legend_above(axes)
+    axes.plot(
+        removed[shown], cost[shown], "o", markersize=2.6, color=HOLD, alpha=0.6, markeredgewidth=0, label="overlays"
+    )
+    axes.plot(
+        removed[line], cost[line], "-o", color=OVERLAY, linewidth=1.2, markersize=2.8, drawstyle="steps-pre",
+        label="least cost for as much",
+    )  # fmt: skip
+    axes.plot(mix_removed, mix_cost, color=MIX, linewidth=1.6, dashes=DASHES[MIX][1], label="less stock, more cash")
+    for number, marker, name in ((best, "o", BEST), (own, "s", OWN)):
+        at = None if number is None else (float(removed[number]), float(cost[number]))
+        _mark(axes, at, marker, name, size=9)
+    axes.set_xlabel("points off the hold's deepest fall")
+    axes.set_ylabel("points of return given up" + (" a year" if each_year else ""))
+    legend_above(axes, columns=3)
     return bare(axes, keep=("left", "bottom"))
 
 
 def boxes(axes: Axes, groups: Mapping[str, Array], *, title: str, unit: str, scale: float = 1.0) -> Axes:
-    """How a figure is spread over the overlays of each value of one axis: median, middle half, and range."""
-    drawn = {label: scale * values[np.isfinite(values)] for label, values in groups.items()}
-    shown = {label: values for label, values in drawn.items() if values.size}
-    axes.boxplot(
-        list(shown.values()), orientation="horizontal", whis=(0, 100), widths=0.55, patch_artist=True,
-        boxprops={"facecolor": OVERLAY, "alpha": 0.35, "edgecolor": OVERLAY},
-        medianprops={"color": OVERLAY, "linewidth": 1.8}, whiskerprops={"color": HOLD}, capprops={"color": HOLD},
-    )  # fmt: skip
-    axes.set_yticks(range(1, len(shown) + 1), [f"{label} ({values.size})" for label, values in shown.items()])
-    axes.invert_yaxis()
+    """How a figure is spread over the overlays of each value of one axis: median, middle half, and range.
+
+    A value whose overlays have no figure keeps its row, and says so.
+    """
+    for row, values in enumerate(groups.values()):
+        known = scale * values[np.isfinite(values)]
+        if not known.size:
+            axes.annotate(
+                "none has this figure", (0.5, row), xycoords=("axes fraction", "data"), ha="center", va="center"
+            )
+            continue
+        low, first, middle, third, high = np.quantile(known, (0.0, 0.25, 0.5, 0.75, 1.0))
+        axes.plot([low, high], [row, row], color=HOLD, linewidth=1.0, solid_capstyle="butt")
+        axes.barh(row, third - first, left=first, height=0.56, facecolor=OVERLAY, alpha=0.4)
+        axes.plot([middle, middle], [row - 0.28, row + 0.28], color=OVERLAY, linewidth=2.0, solid_capstyle="butt")
+    axes.set_yticks(range(len(groups)), [clipped(label) for label in groups])
+    axes.set_ylim(len(groups) - 0.5, -0.5)
     axes.axvline(0.0, color=HOLD, linewidth=0.8)
     axes.set_xlabel(unit)
-    axes.set_ylabel(title)
+    axes.set_ylabel(clipped(title, 3 * MOST_LETTERS))
+    axes.locator_params(axis="x", nbins=6)
     return bare(axes, keep=("bottom",))
 
 
 def one_against_other(
-    axes: Axes, first: Array, second: Array, *, names: tuple[str, str], marked: Sequence[int] = ()
+    axes: Axes, first: Array, second: Array, *, names: tuple[str, str], own: int | None = None, best: int | None = None
 ) -> Axes:
-    """The same overlays in two parts of the days; on the slanted line both say the same."""
-    known = np.isfinite(first) & np.isfinite(second)
-    axes.plot(first[known], second[known], "o", markersize=2.6, color=OVERLAY, alpha=0.5, markeredgewidth=0)
-    ends = np.array(
-        [np.concatenate([first[known], second[known]]).min(), np.concatenate([first[known], second[known]]).max()]
-    )
-    axes.plot(ends, ends, color=HOLD, linewidth=0.8, dashes=(1.5, 1.0))
-    for position in marked:
-        if known[position]:
-            axes.plot(first[position], second[position], "D", markersize=6, color=MIX)
+    """The same overlays in two parts of the days; on the slanted line both say the same.
+
+    Dots that would lie on one another are drawn once.
+    """
+    shown = distinct_dots(first, second)
+    axes.axhline(0.0, color=HOLD, linewidth=0.8)
+    axes.axvline(0.0, color=HOLD, linewidth=0.8)
+    axes.plot(first[shown], second[shown], "o", markersize=2.6, color=OVERLAY, alpha=0.5, markeredgewidth=0)
+    if shown.size:
+        both = np.concatenate([first[shown], second[shown]])
+        ends = [float(both.min()), float(both.max())]
+        axes.plot(ends, ends, color=HOLD, linewidth=0.9, dashes=DASHES[HOLD][1], label="the same in both")
+    for number, marker, name in ((best, "o", BEST), (own, "s", OWN)):
+        at = None if number is None else (float(first[number]), float(second[number]))
+        _mark(axes, at, marker, name, size=9)
     axes.set_xlabel(names[0])
     axes.set_ylabel(names[1])
-    return bare(axes, keep=("left", "bottom"))
-
-
-def lines_over_axis(axes: Axes, labels: Sequence[str], series: Mapping[str, Array], *, title: str, unit: str) -> Axes:
-    """Median of a figure over one axis of a study, a line each, with dots at its values."""
-    places = np.arange(len(labels))
-    for (name, values), colour in zip(series.items(), (OVERLAY, MIX, PUT), strict=False):
-        axes.plot(places, values, "-o", color=colour, linewidth=1.2, markersize=3.0, label=name)
-    step = max(1, int(np.ceil(len(labels) / MOST_TICKS)))
-    axes.set_xticks(places[::step], list(labels)[::step])
-    axes.set_xlabel(title)
-    axes.set_ylabel(unit)
-    axes.axhline(0.0, color=HOLD, linewidth=0.8)
     legend_above(axes)
     return bare(axes, keep=("left", "bottom"))
 
 
-def cheapest(cost: Array, removed: Array) -> npt.NDArray[np.intp]:
+def lines_over_axis(
+    axes: Axes,
+    labels: Sequence[str],
+    series: Mapping[str, Array],
+    *,
+    title: str,
+    unit: str,
+    scale: float = 1.0,
+    own: int | None = None,
+) -> Axes:
+    """A figure over one axis of a study, up to three lines with dots at its values.
+
+    Parameters
+    ----------
+    axes : matplotlib Axes
+    labels : sequence of str
+        Of the axis.
+    series : mapping
+        Name of a line to its values, shape ``(label,)``; a gap where one is NaN.
+    title, unit : str
+    scale : float
+        Factor from the values to the unit.
+    own : int, optional
+        Position of the reader's own overlay.
+    """
+    axes.axhline(0.0, color=HOLD, linewidth=0.8)
+    places = np.arange(len(labels))
+    if own is not None:
+        axes.axvline(own, color=plain_ink(), linewidth=0.9, dashes=(1.5, 1.5), label=OWN)
+    for (name, values), (colour, marker) in zip(series.items(), LINES, strict=False):
+        axes.plot(
+            places, scale * values, color=colour, linewidth=1.2, marker=marker, markersize=3.2, label=name,
+            linestyle=DASHES.get(colour, (0, (4.0, 1.0, 1.0, 1.0))),
+        )  # fmt: skip
+    axes.set_xlim(-0.5, len(labels) - 0.5)
+    axes.set_ylabel(unit)
+    bare(axes, keep=("left", "bottom"))
+    _ticks(axes.xaxis, labels, title)
+    if own is not None or len(series) > 1:
+        legend_above(axes)
+    return axes
+
+
+def spread_over_axis(
+    axes: Axes,
+    labels: Sequence[str],
+    values: Array,
+    *,
+    title: str,
+    unit: str,
+    scale: float = 1.0,
+    own: Array | None = None,
+    own_name: str = OWN,
+) -> Axes:
+    """How a figure moves along one axis, over all settings of the others: median, middle half, and range.
+
+    Parameters
+    ----------
+    axes : matplotlib Axes
+    labels : sequence of str
+        Of the axis.
+    values : ndarray, shape (setting, label)
+        NaN where there is none.
+    title, unit : str
+    scale : float
+        Factor from the values to the unit.
+    own : ndarray, shape (label,), optional
+        One setting drawn as a line of its own, named ``own_name``.
+    """
+    axes.axhline(0.0, color=HOLD, linewidth=0.8)
+    known = np.isfinite(values).any(axis=0)
+    places = np.flatnonzero(known)
+    if places.size:
+        low, first, middle, third, high = scale * np.nanquantile(values[:, known], (0.0, 0.25, 0.5, 0.75, 1.0), axis=0)
+        if len(values) > 1:
+            axes.vlines(places, low, high, color=HOLD, linewidth=0.9, alpha=0.7, label="all settings")
+            axes.vlines(places, first, third, color=OVERLAY, linewidth=4.0, alpha=0.35, label="middle half")
+        axes.plot(
+            places, middle, "o", color=OVERLAY, markersize=3.2, label="median" if len(values) > 1 else "_one setting"
+        )
+    if own is not None:
+        axes.plot(
+            np.arange(len(labels)), scale * own, color=MIX, linewidth=1.2, dashes=DASHES[MIX][1], marker="D",
+            markersize=2.6, label=own_name,
+        )  # fmt: skip
+    axes.set_xlim(-0.5, len(labels) - 0.5)
+    axes.set_ylabel(unit)
+    bare(axes, keep=("left", "bottom"))
+    _ticks(axes.xaxis, labels, title)
+    if len(values) > 1 or own is not None:
+        legend_above(axes)
+    return axes
+
+
+def cheapest(cost: Array, removed: Array) -> Positions:
     """Overlays that none other beats in both: removing as much for less; in order of drawdown removed.
 
     Examples
@@ -181,16 +286,69 @@ def cheapest(cost: Array, removed: Array) -> npt.NDArray[np.intp]:
     [2, 1]
     """
     known = np.flatnonzero(np.isfinite(cost) & np.isfinite(removed))
+    if not known.size:
+        return known
     # from the most removed down; of equals the cheapest first
     order = known[np.lexsort((cost[known], -removed[known]))]
-    least = np.minimum.accumulate(cost[order]) if order.size else cost[order]
-    first = np.concatenate([[True], cost[order][1:] < least[:-1]]) if order.size else np.zeros(0, dtype=bool)
+    least = np.minimum.accumulate(cost[order])
+    first = np.concatenate([[True], cost[order][1:] < least[:-1]])
     return order[first][::-1]
 
 
-def _colours(diverging: bool):  # type: ignore[no-untyped-def]
-    from matplotlib.colors import LinearSegmentedColormap
+def distinct_dots(first: Array, second: Array) -> Positions:
+    """Positions to draw dots by, one of those that would lie on one another; the rims are kept.
 
-    if diverging:
-        return LinearSegmentedColormap.from_list("both sides", ["#b24a00", "#f6d3b8", "#f7f7f5", "#bcdcef", "#005a92"])
-    return LinearSegmentedColormap.from_list("one side", ["#f7f7f5", "#bcdcef", "#005a92"])
+    Examples
+    --------
+    >>> distinct_dots(np.array([0.0, 0.001, 1.0, np.nan]), np.array([0.0, 0.001, 1.0, 1.0])).tolist()
+    [0, 2]
+    """
+    known = np.flatnonzero(np.isfinite(first) & np.isfinite(second))
+    if not known.size:
+        return known
+    across, down = (
+        np.floor((part - part.min()) / max(np.ptp(part), 1e-300) * (parts - 1e-9)).astype(np.int64)
+        for part, parts in ((first[known], DOTS_ACROSS), (second[known], DOTS_DOWN))
+    )
+    _, chosen = np.unique(across * DOTS_DOWN + down, return_index=True)
+    return known[np.sort(chosen)]
+
+
+def clipped(label: str, most: int = MOST_LETTERS) -> str:
+    """A label short enough for a tick."""
+    return label if len(label) <= most else f"{label[: most - 1]}…"
+
+
+def _ticks(place: Axis, labels: Sequence[str], title: str) -> None:
+    """Few labels, and slanted where they would touch."""
+    step = max(1, int(np.ceil(len(labels) / MOST_TICKS)))
+    shown = [clipped(label) for label in list(labels)[::step]]
+    place.set_ticks(range(0, len(labels), step), shown)
+    place.set_label_text(clipped(title, 3 * MOST_LETTERS))
+    if place is place.axes.xaxis and sum(len(label) + 2 for label in shown) > LETTERS_ACROSS:
+        for text in place.get_ticklabels():
+            text.set(rotation=40, ha="right", rotation_mode="anchor")
+
+
+def _mark(axes: Axes, at: tuple[float, float] | None, marker: str, name: str, *, size: float) -> None:
+    """A hollow sign around one overlay, named over the axes."""
+    if at is None or not np.isfinite(at).all():
+        return
+    axes.plot(
+        [at[0]], [at[1]], marker, markersize=size, markerfacecolor="none", markeredgecolor=plain_ink(),
+        markeredgewidth=1.5, label="_" + name, zorder=5.0,
+    )  # fmt: skip
+    axes.plot(
+        [], [], marker, markersize=7, markerfacecolor="none", markeredgecolor=plain_ink(), markeredgewidth=1.5,
+        label=name,
+    )  # fmt: skip
+    legend_above(axes)
+
+
+def _colours() -> LinearSegmentedColormap:
+    from matplotlib.colors import LinearSegmentedColormap, to_rgba
+
+    ends = [to_rgba(BELOW, 1.0), to_rgba(BELOW, 0.0), to_rgba(ABOVE, 0.0), to_rgba(ABOVE, 1.0)]
+    made = LinearSegmentedColormap.from_list("both sides", list(zip((0.0, 0.5, 0.5, 1.0), ends, strict=True)))
+    made.set_bad(MISSING)
+    return made

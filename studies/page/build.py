@@ -15,7 +15,7 @@ from backtest.analytics.verdict import Clause
 
 from ..findings import Findings
 from ..replay_history import Answer
-from . import sections
+from . import sections, tables
 from .blocks import Section
 from .health import DataHealth
 from .luck import bootstrap_blocks, contest_of
@@ -55,6 +55,7 @@ def build_report(
     """
     replay = answer.replay
     key_figures = sections.key_figures(answer)
+    why_missing = tables.dash_means(answer, "cannot be had from this history")
     return _template().render(
         title=replay.overlay.name or "overlay",
         history=history,
@@ -63,7 +64,7 @@ def build_report(
         length=span(replay.dates[0], replay.dates[-1]),
         clauses=[(clause.title, FINDING_WORDS[clause.finding], typographic(clause.sentence)) for clause in verdict],
         key_figures=key_figures,
-        dash=DASH if any(DASH in figures for figures in key_figures) else "",
+        dash=f"A dash ({DASH}): {why_missing}." if any(DASH in figures for figures in key_figures) else "",
         cautions=len(answer.warnings),
         sections=sections_of(answer, findings, inference, history, how_to_run, data_health),
         style=Markup(_style()),  # our own file
@@ -84,7 +85,7 @@ def sections_of(
         sections.figures(answer),
         sections.growth(answer),
         sections.band(answer),
-        sections.contest(contest_of(answer, inference), inference),
+        sections.contest(answer, contest_of(answer, inference), inference),
         sections.episodes(answer, findings),
         sections.ledger(answer, findings),
         sections.attribution(answer),

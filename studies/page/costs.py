@@ -16,6 +16,7 @@ from backtest.volatility.realised import TRADING_DAYS
 from ..findings import Findings
 from ..replay_history import Answer
 from .blocks import Table
+from .tables import under_a_year
 from .words import DASH, counted, date, known, number, percent, points
 
 Array = npt.NDArray[np.float64]
@@ -124,11 +125,14 @@ def price_of_protection(found: Answer) -> list[tuple[str, str]]:
     if not known(cost):
         return [("Cost", "cannot be had: the overlay's wealth ends before the history does")]
     less = "less" if cost >= 0 else "more"
-    items = [("Annual cost", f"{number(abs(1e4 * cost), 0)} basis points of wealth a year {less} than the hold")]
+    whole_span = under_a_year(found)
+    each_year = "" if whole_span else " a year"
+    what = "Cost, whole span" if whole_span else "Annual cost"
+    items = [(what, f"{number(abs(1e4 * cost), 0)} basis points of wealth{each_year} {less} than the hold")]
     items.append(("Drawdown removed", f"{points(removed)} points off the deepest fall of the hold"))
     if removed > 0 and cost > 0:
         each = number(1e4 * cost / (100 * removed), 1)
-        items.append(("Cost per point", f"{each} basis points a year for each point of drawdown removed"))
+        items.append(("Cost per point", f"{each} basis points{each_year} for each point of drawdown removed"))
     elif removed <= 0:
         items.append(("Cost per point", "there is none: no drawdown was removed"))
     else:

@@ -9,13 +9,14 @@ import numpy.typing as npt
 
 from backtest import charts
 from backtest.analytics.periods import Rolling
+from backtest.analytics.resampling import TIE
 from backtest.analytics.verdict import Difference
 
 from ..findings import Findings
 from ..replay_history import Answer
 from .costs import Part, attribution_parts, steps, yearly_flows
 from .pictures import COMPARED, Picture, decimated, new_figure, page_style, picture_of
-from .words import PATHS, counted, date, known, listed, number, percent, points, ratio
+from .words import PATHS, counted, date, known, listed, number, percent, points, ratio, upper_first
 
 Array = npt.NDArray[np.float64]
 
@@ -33,7 +34,12 @@ CONTEST = (
 )
 
 
-def contest_picture(contest: Mapping[str, Mapping[str, Difference]]) -> Picture | None:
+def contest_figures(*, whole_span: bool) -> tuple[tuple[str, str, str, float], ...]:
+    """As :data:`CONTEST`; under a year returns are totals."""
+    return (("annual_return", "return, whole span", "points", 100.0), *CONTEST[1:]) if whole_span else CONTEST
+
+
+def contest_picture(contest: Mapping[str, Mapping[str, Difference]], *, whole_span: bool) -> Picture | None:
     """Overlay less each comparison, in four figures."""
     names = [name for name, row in contest.items() if any(known(d.value) for d in row.values())]
     if not names:
@@ -44,7 +50,7 @@ def contest_picture(contest: Mapping[str, Mapping[str, Difference]]) -> Picture 
     with page_style():
         figure = new_figure(2 * (0.75 + ROW_INCHES * len(names)))
         axes = figure.subplots(2, 2, sharey=True)
-        for one, (field, name, unit, scale) in zip(axes.flat, CONTEST, strict=True):
+        for one, (field, name, unit, scale) in zip(axes.flat, contest_figures(whole_span=whole_span), strict=True):
             values, lows, highs = (
                 np.array([getattr(contest[other][field], side) for other in names]) for side in ("value", "low", "high")
             )
@@ -92,7 +98,7 @@ def _spans_reading(findings: Findings, *, falls: bool) -> str:
     what = counted(len(spans), "fall" if falls else "rise")
     if "overlay" not in spans[0].returns:
         return f"{what} of the hold; the overlay's wealth ends before the history does."
-    beaten = sum(s.returns["overlay"] > s.returns["hold"] for s in spans)
+    beaten = sum(s.returns["overlay"] > s.returns["hold"] + TIE for s in spans)
     gaps = [s.returns["overlay"] - s.returns["hold"] for s in spans]
     mean = float(np.mean(gaps))
     said = (
@@ -100,7 +106,7 @@ def _spans_reading(findings: Findings, *, falls: bool) -> str:
         f"{'better' if mean >= 0 else 'worse'} on average)"
     )
     if "mix_same_beta" in spans[0].returns:
-        mixed = sum(s.returns["overlay"] > s.returns["mix_same_beta"] for s in spans)
+        mixed = sum(s.returns["overlay"] > s.returns["mix_same_beta"] + TIE for s in spans)
         said += f", and better than holding less stock at the same beta in {mixed}"
     return f"{said}."
 
@@ -127,11 +133,12 @@ def waterfall_picture(found: Answer, findings: Findings) -> Picture | None:
             f"The hold gained {percent(float(values[0]))} of starting wealth, the overlay "
             f"{percent(float(findings.ledger.overlay[0]))}"
         )
-        if len(values) > 1:
-            said += (
-                f". Most was lost by {made.labels[worst]} ({percent(float(values[worst]), sign=True)}), most brought "
-                f"by {made.labels[best]} ({percent(float(values[best]), sign=True)})"
-            )
+        turns = []
+        if values[worst] < -TIE and worst:
+            turns.append(f"Most was lost by {made.labels[worst]} ({percent(float(values[worst]), sign=True)})")
+        if values[best] > TIE and best:
+            turns.append(f"most brought by {made.labels[best]} ({percent(float(values[best]), sign=True)})")
+        said = ". ".join([said, *([upper_first(", ".join(turns))] if turns else [])])
         return picture_of(figure, "waterfall", "From the hold to the overlay", f"{said}.")
 
 
@@ -206,12 +213,15 @@ def ladder_picture(found: Answer, findings: Findings) -> Picture | None:
 
 def ladder_reading(gains: Mapping[str, float]) -> str:
     """Does the smile turn the comparison?"""
-    ahead = [f"{name} ({ratio(gain, sign=True)})" for name, gain in gains.items() if gain > 0]
-    behind = [f"{name} ({ratio(gain, sign=True)})" for name, gain in gains.items() if gain < 0]
+    ahead = [f"{name} ({ratio(gain, sign=True)})" for name, gain in gains.items() if gain > TIE]
+    behind = [f"{name} ({ratio(gain, sign=True)})" for name, gain in gains.items() if gain < -TIE]
     if ahead and behind:
         return f"The smile decides it: the overlay is ahead under {listed(ahead)} and behind under {listed(behind)}."
+    if not (ahead or behind):
+        return "Overlay and same-beta mix are level, whatever the smile."
     side = "ahead of" if ahead else "behind"
-    return f"The overlay is {side} its same-beta mix under every smile: {listed(ahead or behind)}."
+    under = "under every smile" if len(ahead or behind) == len(gains) else "and under no smile on the other side"
+    return f"The overlay is {side} its same-beta mix {under}: {listed(ahead or behind)}."
 
 
 def luck_picture(found: Answer, findings: Findings) -> Picture | None:
@@ -277,7 +287,7 @@ def _rolling_reading(rolling: Mapping[str, Rolling], words: str) -> str:
         return "The overlay's wealth ends before the history does."
     own, hold = (rolling[name].annual_return for name in ("overlay", "hold"))
     both = np.isfinite(own) & np.isfinite(hold)
-    more = float(np.mean(own[both] > hold[both]))
+    more = float(np.mean(own[both] > hold[both] + TIE))
     return (
         f"Over {words} the overlay returned more than the hold on {percent(more, 0)} of days; its worst such stretch "
         f"was {percent(float(own[both].min()))} a year, the hold's {percent(float(hold[both].min()))}."

@@ -7,13 +7,14 @@ from typing import TypeAlias
 
 import numpy as np
 
-from backtest.analytics.resampling import Inference, Interval, independent_payoffs
+from backtest.analytics.resampling import TIE, Inference, Interval, independent_payoffs
 from backtest.analytics.roll_costs import payoffs_at_close
 from backtest.analytics.verdict import Difference
 
 from ..replay_history import Answer
 from .blocks import Block, Prose, Table
-from .drawn import CONTEST
+from .drawn import CONTEST, contest_figures
+from .tables import return_title
 from .words import DASH, PATHS, counted, known, number, percent, ratio, typographic, upper_first
 
 #: By comparison, then by figure of the contest.
@@ -37,14 +38,17 @@ def contest_of(found: Answer, inference: Inference | None) -> Contest:
         for field, _, _, _ in CONTEST:
             interval = None if drawn is None else getattr(drawn, DRAWN_NAMES.get(field, field))
             if interval is not None and known(interval.value):
-                row[field] = Difference(value=interval.value, low=interval.low, high=interval.high)
+                ends = (interval.value, interval.low, interval.high)
             else:
-                row[field] = Difference(value=getattr(own, field) - getattr(other, field), low=NAN, high=NAN)
+                ends = (getattr(own, field) - getattr(other, field), NAN, NAN)
+            # rounding is no difference: it would count as one clear of zero
+            value, low, high = (0.0 if abs(end) < TIE else end for end in ends)
+            row[field] = Difference(value=value, low=low, high=high)
         made[name] = row
     return made
 
 
-def contest_table(contest: Contest, inference: Inference | None) -> Table | None:
+def contest_table(contest: Contest, inference: Inference | None, *, whole_span: bool) -> Table | None:
     """Each difference with its interval."""
     if not any(known(d.value) for row in contest.values() for d in row.values()):
         return None
@@ -65,8 +69,8 @@ def contest_table(contest: Contest, inference: Inference | None) -> Table | None
         )
     return Table(
         caption=f"Overlay less each comparison{between}",
-        head=("", *(title if unit == title else f"{title}, points" for _, title, unit, _ in CONTEST)), rows=rows,
-        notes=notes, dense=True,
+        head=("", *(t if unit == t else f"{t}, points" for _, t, unit, _ in contest_figures(whole_span=whole_span))),
+        rows=rows, notes=notes, dense=True,
     )  # fmt: skip
 
 
@@ -90,7 +94,7 @@ def bootstrap_blocks(found: Answer, inference: Inference | None) -> list[Block]:
     if not known(inference.block_length):
         return blocks
     blocks.append(Prose(_how_drawn(inference)))
-    return [*blocks, _chances(inference), _own_intervals(inference)]
+    return [*blocks, _chances(inference), _own_intervals(inference, return_title(found))]
 
 
 def payoff_words(found: Answer) -> str | None:
@@ -103,21 +107,24 @@ def payoff_words(found: Answer) -> str | None:
         settled = payoffs_at_close(found.replay, leg)
         times = independent_payoffs(settled)
         name = "bought put" if len(puts) == 1 else leg.label.replace("_", " ")
+        if not len(settled):
+            said.append(f"the {name} finished no roll")
+            continue
         if not times:
-            said.append(f"The {name} never paid off in {counted(len(settled), 'finished roll')}")
+            said.append(f"the {name} never paid off in {counted(len(settled), 'finished roll')}")
             continue
         rolls = counted(int(np.count_nonzero(settled > 0)), "roll")
         said.append(
-            f"The {name} paid off in {rolls} of {len(settled)}, {counted(times, 'separate time')} when rolls in a row "
+            f"the {name} paid off in {rolls} of {len(settled)}, {counted(times, 'separate time')} when rolls in a row "
             "count once"
         )
-    return "; ".join(said) + ": protection can be judged on no more evidence than that."
+    return upper_first("; ".join(said)) + ": protection can be judged on no more evidence than that."
 
 
 def _how_drawn(inference: Inference) -> str:
     said = (
         f"{inference.resamples:,} histories of {inference.days:,} days were drawn from the days of this one, overlay "
-        f"and comparisons together, in runs of {inference.block_length:.0f} days on average"
+        f"and comparisons together, in runs of {counted(round(inference.block_length), 'day')} on average"
     )
     lengths = {name: length for name, length in inference.block_lengths.items() if known(length)}
     if lengths:
@@ -158,11 +165,11 @@ def _chances(inference: Inference) -> Table:
     )  # fmt: skip
 
 
-def _own_intervals(inference: Inference) -> Table:
+def _own_intervals(inference: Inference, return_words: str) -> Table:
     own = inference.overlay
     rows: list[list[str]] = []
     for title, interval, written in (
-        ("return a year", own.annual_return, percent), ("volatility a year", own.volatility, percent),
+        (return_words, own.annual_return, percent), ("volatility a year", own.volatility, percent),
         ("Sharpe ratio", own.sharpe, ratio), ("maximum drawdown", own.max_drawdown, percent),
         ("mean of the worst 5% of 21-day stretches", own.shortfall_21_day, percent),
         ("beta to the hold", own.beta, ratio),

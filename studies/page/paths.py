@@ -10,7 +10,7 @@ from backtest import charts
 
 from ..replay_history import Answer
 from .pictures import COMPARED, Picture, decimated, new_figure, page_style, picture_of
-from .words import PATHS, counted, known, listed, number, percent
+from .words import PATHS, known, listed, number, percent
 
 
 def growth_pictures(found: Answer) -> Iterator[Picture]:
@@ -46,7 +46,8 @@ def band_pictures(found: Answer) -> Iterator[Picture]:
 
 def _growth_reading(found: Answer) -> str:
     paths = found.paths
-    ends = [f"{number(float(paths[name][-1]))} in the {PATHS[name]}" for name in COMPARED if name in paths]
+    grown = {name: float(paths[name][-1]) for name in COMPARED if name in paths}
+    ends = [f"{number(end) if known(end) else 'nothing'} in the {PATHS[name]}" for name, end in grown.items()]
     return f"1.00 became {listed(ends)}."
 
 
@@ -64,9 +65,7 @@ def _band_reading(found: Answer) -> str:
     said = []
     for leg in found.replay.legs:
         settled = leg.schedule.settles & ~leg.schedule.live
-        name = f"{'bought' if leg.signed_ratio > 0 else 'sold'} {leg.label.replace('_', ' ')}"
+        name = f"{'bought' if leg.leg.direction > 0 else 'sold'} {leg.label.replace('_', ' ')}"
         ended = int(np.count_nonzero(settled & (leg.close_value > 0)))
-        said.append(
-            f"{ended} of {counted(int(np.count_nonzero(settled)), f'{name} that settled', f'{name}s that settled')}"
-        )
-    return f"A line an option, from its roll to its end. In the money ended {listed(said)}." if said else "No options."
+        said.append(f"{ended} of {int(np.count_nonzero(settled)):,} of the {name}")
+    return f"A line an option, from its roll to its end. Of those that settled, in the money ended {listed(said)}."

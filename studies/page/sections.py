@@ -103,9 +103,13 @@ def band(found: Answer) -> Section:
     )  # fmt: skip
 
 
-def contest(differences: Contest, inference: Inference | None) -> Section:
+def contest(found: Answer, differences: Contest, inference: Inference | None) -> Section:
     """Overlay against the mixes."""
-    blocks = _blocks(drawn.contest_picture(differences), contest_table(differences, inference))
+    whole_span = tables.under_a_year(found)
+    blocks = _blocks(
+        drawn.contest_picture(differences, whole_span=whole_span),
+        contest_table(differences, inference, whole_span=whole_span),
+    )
     return Section(
         anchor="contest", title="Same-risk contest", question="Is it better than holding less stock?",
         blocks=blocks or [Prose("No comparison can be had: the overlay's wealth ends before the history does.")],

@@ -56,7 +56,8 @@ def return_title(found: Answer) -> str:
     return "return, whole span" if under_a_year(found) else "return a year"
 
 
-def _dash_means(found: Answer, ordinary: str) -> str:
+def dash_means(found: Answer, ordinary: str) -> str:
+    """Why figures of the overlay are missing: ``ordinary``, unless its wealth ended."""
     if np.isfinite(found.replay.wealth).all():
         return ordinary
     return "the overlay's wealth ends before the history does, so neither it nor its mixes can be measured"
@@ -91,7 +92,7 @@ def headline_table(found: Answer) -> Table:
     return Table(
         caption="Overlay, hold and what holding less stock would have done", head=head, rows=rows, notes=notes,
         strong=frozenset({0}),
-        dash_means=_dash_means(found, "no such mix, or too few months or no variation to measure"),
+        dash_means=dash_means(found, "no such mix, or too few months or no variation to measure"),
     )  # fmt: skip
 
 
@@ -114,7 +115,7 @@ def full_table(found: Answer) -> Table:
     return Table(
         caption="All figures", head=("", *(PATHS[name] for name in columns)), rows=rows, dense=True,
         notes=["Alpha, beta and the capture ratios are against the hold. Monthly figures use whole calendar months."],
-        dash_means=_dash_means(
+        dash_means=dash_means(
             found, "no fall, not recovered by the end, or too few months or no variation to measure"
         ),
     )  # fmt: skip

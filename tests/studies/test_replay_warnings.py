@@ -171,7 +171,7 @@ def test_warning_of_no_payoff(demo_history: History) -> None:
     # sold puts protect nobody, and calls are no protection
     assert NO_PAYOFF not in warned(frame, Overlay(legs=(Leg(position="short", right="put", strike=PercentOfSpot(40)),)))
     two = Overlay(legs=(PUT, Leg(position="long", right="put", strike=PercentOfSpot(40))))
-    assert "no put_2 paid off in this window: it says nothing about protection" in warned(frame, two)
+    assert "no put 2 paid off in this window: it says nothing about protection" in warned(frame, two)
 
 
 def test_warning_of_proceeds_below_costs(demo_history: History) -> None:
