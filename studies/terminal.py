@@ -11,20 +11,9 @@ from rich.table import Table
 from rich.text import Text
 
 from .assumptions import CAUTION
+from .path_names import PATHS
 
 NOT_TO_BE_HAD = "–"
-
-ROW_TITLES = {
-    "overlay": "overlay",
-    "hold": "hold",
-    "mix_same_beta": "same-beta mix",
-    "mix_same_volatility": "same-volatility mix",
-    "mix_same_return": "same-return mix",
-    "mix_same_drawdown": "same-drawdown mix",
-    "mix_same_delta": "same-delta mix",
-    "put_only": "put only",
-    "call_only": "call only",
-}
 
 
 def percent(value: float | None, digits: int = 1) -> str:
@@ -97,7 +86,7 @@ def _headline_table(told: Mapping[str, Any]) -> Table:
         "worst 5% of months",
         "beta",
     )
-    for name, title in ROW_TITLES.items():
+    for name, title in PATHS.items():
         figures = told.get(name)
         if figures is None:
             continue

@@ -13,10 +13,11 @@ from backtest.analytics.resampling import TIE
 from backtest.analytics.verdict import Difference
 
 from ..findings import Findings
+from ..path_names import PATHS
 from ..replay_history import Answer
 from .costs import Part, attribution_parts, steps, yearly_flows
 from .pictures import COMPARED, Picture, decimated, new_figure, page_style, picture_of
-from .words import PATHS, counted, date, known, listed, number, percent, points, ratio, upper_first
+from .words import counted, date, known, listed, number, percent, points, ratio, upper_first
 
 Array = npt.NDArray[np.float64]
 

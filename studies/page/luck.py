@@ -11,11 +11,12 @@ from backtest.analytics.resampling import TIE, Inference, Interval, independent_
 from backtest.analytics.roll_costs import payoffs_at_close
 from backtest.analytics.verdict import Difference
 
+from ..path_names import PATHS
 from ..replay_history import Answer
 from .blocks import Block, Prose, Table
 from .drawn import CONTEST, contest_figures
 from .tables import return_title
-from .words import DASH, PATHS, counted, known, number, percent, ratio, typographic, upper_first
+from .words import DASH, counted, known, number, percent, ratio, typographic, upper_first
 
 #: By comparison, then by figure of the contest.
 Contest: TypeAlias = "Mapping[str, Mapping[str, Difference]]"

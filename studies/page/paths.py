@@ -8,9 +8,10 @@ import numpy as np
 
 from backtest import charts
 
+from ..path_names import PATHS
 from ..replay_history import Answer
 from .pictures import COMPARED, Picture, decimated, new_figure, page_style, picture_of
-from .words import PATHS, known, listed, number, percent
+from .words import known, listed, number, percent
 
 
 def growth_pictures(found: Answer) -> Iterator[Picture]:

@@ -11,13 +11,14 @@ from backtest.overlay import Leg
 
 from ..assumptions import CAUTION
 from ..findings import Findings
+from ..path_names import PATHS
 from ..replay_history import Answer
 from . import costs, drawn, paths, tables
 from .blocks import Block, Command, Definitions, Fold, Listing, Prose, Section, Shown, Table
 from .health import DataHealth, health_blocks
 from .luck import Contest, contest_table
 from .pictures import Picture
-from .words import PATHS, counted, date, number, typographic, upper_first
+from .words import counted, date, number, typographic, upper_first
 from .words import span as length
 
 TITLES = {

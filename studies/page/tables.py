@@ -11,9 +11,10 @@ from backtest.analytics.periods import CalendarTable
 from backtest.analytics.robustness import BreakEven
 
 from ..findings import Findings
+from ..path_names import PATHS
 from ..replay_history import Answer
 from .blocks import Cell, Table
-from .words import DASH, PATHS, date, days, number, percent, points, ratio
+from .words import DASH, date, days, number, percent, points, ratio
 
 Array = npt.NDArray[np.float64]
 

@@ -13,19 +13,6 @@ from backtest.analytics.performance import DAYS_IN_CALENDAR_YEAR
 DASH = "–"
 MINUS = "−"
 
-#: What every figure set is called on the page, in the order of its tables.
-PATHS = {
-    "overlay": "overlay",
-    "hold": "hold",
-    "mix_same_beta": "same-beta mix",
-    "mix_same_volatility": "same-volatility mix",
-    "mix_same_return": "same-return mix",
-    "mix_same_drawdown": "same-drawdown mix",
-    "mix_same_delta": "same-delta mix",
-    "put_only": "put only",
-    "call_only": "call only",
-}
-
 # a hyphen is a minus before a digit, unless a letter, a digit or a hyphen stands in front of it
 _HYPHEN_MINUS = re.compile(r"(?<![\w.\-])-(?=[\d.])")
 
