@@ -85,8 +85,9 @@ class Axis:
             if twice is not None:
                 hint = "" if labels else "; give labels that tell the values apart"
                 raise KeyProblem(("labels",), f"has {toml(known[twice])} twice{hint}")
+            words = {value for value in values if isinstance(value, str)}
             for number, label in enumerate(known):
-                if label in values and values[number] != label:
+                if label in words and values[number] != label:
                     raise KeyProblem(
                         ("labels",), f"has {toml(label)} for {toml(values[number])}, and it is a value too"
                     )

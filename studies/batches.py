@@ -16,8 +16,8 @@ from backtest import Market
 from backtest.analytics.block_length import optimal_block_length
 from backtest.analytics.headline import HEADLINE, headline_figures, same_beta_mixes
 from backtest.analytics.performance import TRADING_DAYS, daily_excess, years_between
-from backtest.analytics.reality_check import Draws, Partial, check_batch, combine
-from backtest.analytics.subperiods import block_edges, block_sums
+from backtest.analytics.reality_check import OVERLAYS_AT_ONCE, Draws, Partial, check_batch, combine
+from backtest.analytics.subperiods import BlockSums, block_edges, empty_sums
 from backtest.engine.families import FamilyReplay, replay_families
 from backtest.engine.legs import PricedLegs
 
@@ -51,6 +51,8 @@ SAME_BETA = "same-beta mix"
 BLOCK_COLUMNS = ("growth", "total", "square")
 #: Overlays whose differences are asked for a block length.
 ASKED = 12
+#: Overlays replayed together for the common span.
+ASKED_AT_ONCE = 500
 
 
 @dataclass(frozen=True, slots=True, kw_only=True, eq=False)
@@ -84,6 +86,12 @@ class Span:
         return int(self.edges[-1])
 
 
+def columns_of(span: Span) -> tuple[str, ...]:
+    """Columns of a batch of this span, in their order."""
+    blocks = range(1, len(span.edges))
+    return (*SPAN, *FIGURES, *(f"{name}_{block}" for block in blocks for name in BLOCK_COLUMNS))
+
+
 def common_span(market: Market, asked: Sequence[Point], *, comparison: str) -> Span:
     """The span that overlays of one window have in common.
 
@@ -94,18 +102,22 @@ def common_span(market: Market, asked: Sequence[Point], *, comparison: str) -> S
     BacktestError
         If one of them cannot be replayed on this market.
     """
-    families = list(_families(market, asked, priced=None))
-    first = max(found.dates[0] for found in families)
-    last = families[0].dates[-1]
+    differences: list[Array] = []
+    dates: Dates | None = None
+    for begin in range(0, len(asked), ASKED_AT_ONCE):
+        for found in _families(market, asked[begin : begin + ASKED_AT_ONCE], priced=None):
+            # a few paths of each, not all of them
+            differences += list(_some_differences(found, comparison))
+            if dates is None or found.dates[0] > dates[0]:
+                dates = found.dates
+    assert dates is not None
+    first, last = dates[0], dates[-1]
     lengths = [1.0]
-    for found in families:
-        excess, beta = _excess_and_beta(found)
-        offset = int(np.searchsorted(found.dates, first))
-        for row in range(min(len(excess), ASKED)):
-            difference = _differences(found, excess[row : row + 1], beta[row : row + 1], comparison)[0, offset:]
-            if difference.size > 1 and np.isfinite(difference).all():
-                lengths.append(optimal_block_length(difference))
-    dates = families[0].dates[int(np.searchsorted(families[0].dates, first)) :]
+    for difference in differences:
+        # all end on the same day
+        common = difference[len(difference) - (len(dates) - 1) :]
+        if common.size > 1 and np.isfinite(common).all():
+            lengths.append(optimal_block_length(common))
     days = max(len(dates) - 1, 1)
     # an edge is the first return of a block: that over the first day of a decade
     decade = dates[1:].astype("datetime64[Y]").astype(np.int64) // 10 * 10 + (1970 // 10 * 10)
@@ -156,25 +168,28 @@ def replay_batch(
     partial : Partial or None
     """
     count, blocks = len(points), len(span.edges) - 1
-    columns: dict[str, npt.NDArray[np.generic]] = {name: np.empty(count, dtype="datetime64[D]") for name in SPAN}
-    columns |= {name: np.full(count, np.nan) for name in FIGURES}
-    columns |= {f"{name}_{block + 1}": np.full(count, np.nan) for block in range(blocks) for name in BLOCK_COLUMNS}
+    columns: dict[str, npt.NDArray[np.generic]] = {name: np.full(count, np.nan) for name in columns_of(span)}
+    columns |= {name: np.empty(count, dtype="datetime64[D]") for name in SPAN}
     parts: list[Partial] = []
     for found in _families(market, points, priced=priced):
         numbers = np.array(found.numbers)
-        figures = _figures(found, comparison=comparison)
+        sums = empty_sums(len(numbers), span.edges)
+        figures = _figures(found, comparison=comparison, blocks=sums)
         for name in (*SPAN, *FIGURES):
             columns[name][numbers] = figures[name]
+        if found.dates[0] > span.first:
+            raise AssertionError(f"an overlay begins on {found.dates[0]}, after the common days do, on {span.first}")
         offset = int(np.searchsorted(found.dates, span.first))
         wealth = found.wealth[:, offset:]
-        sums = block_sums(wealth, rate_return=found.rate_return[offset:], edges=span.edges)
         for name in BLOCK_COLUMNS:
             for block in range(blocks):
                 columns[f"{name}_{block + 1}"][numbers] = getattr(sums, name)[:, block]
         if draws is not None:
-            excess = daily_excess(found.wealth, found.rate_return)
-            differences = _differences(found, excess, figures["beta"].astype(np.float64), comparison)[:, offset:]
-            parts.append(check_batch(draws, differences.T, first_number + numbers))
+            beta = figures["beta"].astype(np.float64)
+            for begin in range(0, len(wealth), OVERLAYS_AT_ONCE):
+                some = slice(begin, begin + OVERLAYS_AT_ONCE)
+                differences = _differences(found, wealth[some], beta[some], comparison, offset=offset)
+                parts.append(check_batch(draws, differences.T, first_number + numbers[some]))
     return columns, combine(parts) if parts else None
 
 
@@ -189,10 +204,10 @@ def _families(market: Market, points: Sequence[Point], *, priced: PricedLegs | N
     )
 
 
-def _figures(found: FamilyReplay, *, comparison: str) -> dict[str, npt.NDArray[np.generic]]:
+def _figures(found: FamilyReplay, *, comparison: str, blocks: BlockSums) -> dict[str, npt.NDArray[np.generic]]:
     shared: dict[str, Any] = {"hold": found.hold, "rate_return": found.rate_return, "dates": found.dates}
     made: dict[str, npt.NDArray[np.generic]] = {}
-    own = headline_figures(found.wealth, **shared)
+    own = headline_figures(found.wealth, blocks=blocks, **shared)
     hold = {name: float(values[0]) for name, values in headline_figures(found.hold[np.newaxis], **shared).items()}
     mix = same_beta_mixes(own["beta"], **shared)
     made |= own
@@ -224,13 +239,20 @@ def _information_ratio(found: FamilyReplay, own: dict[str, Array], comparison: s
     return np.where(varies, ratio, np.nan)
 
 
-def _excess_and_beta(found: FamilyReplay) -> tuple[Array, Array]:
-    """Daily excess returns, shape ``(overlay, day - 1)``, and betas to the hold."""
-    own = headline_figures(found.wealth, hold=found.hold, rate_return=found.rate_return, dates=found.dates)
-    return daily_excess(found.wealth, found.rate_return), own["beta"]
+def _some_differences(found: FamilyReplay, comparison: str) -> Array:
+    """Differences of the first few overlays of a family, shape ``(overlay, day - 1)``."""
+    wealth = found.wealth[:ASKED]
+    own = headline_figures(wealth, hold=found.hold, rate_return=found.rate_return, dates=found.dates)
+    return _differences(found, wealth, own["beta"], comparison)
 
 
-def _differences(found: FamilyReplay, excess: Array, beta: Array, comparison: str) -> Array:
-    """Daily returns less those of the comparison, shape ``(overlay, day - 1)``."""
-    market = daily_excess(found.hold, found.rate_return)
-    return excess - (beta[:, np.newaxis] if comparison == SAME_BETA else 1.0) * market
+def _differences(found: FamilyReplay, wealth: Array, beta: Array, comparison: str, *, offset: int = 0) -> Array:
+    """Daily returns less those of the comparison, from the day ``offset`` on, shape ``(overlay, day - 1)``.
+
+    ``wealth`` begins on that day.
+    """
+    rate_return = found.rate_return[offset:]
+    market = daily_excess(found.hold[offset:], rate_return)
+    excess = daily_excess(wealth, rate_return)
+    excess -= (beta[:, np.newaxis] if comparison == SAME_BETA else 1.0) * market
+    return excess

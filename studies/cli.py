@@ -191,12 +191,56 @@ def study(
     workers: Annotated[
         int | None, typer.Option("--workers", help="Processes; as many as there are cores if not given.")
     ] = None,
+    scheduler: Annotated[
+        str | None,
+        typer.Option("--scheduler", help="Address of a Dask scheduler, whose workers are used: tcp://HOST:PORT."),
+    ] = None,
     resume: Annotated[bool, typer.Option("--resume", help="Go on with a run that was stopped.")] = False,
+    against: Annotated[
+        Path | None, typer.Option("--against", help="Results folder of another study: say what has changed since.")
+    ] = None,
 ) -> None:
     """Replay the many overlays of a study file, and say how far the search alone explains the best of them."""
     from .wiring_study import study_and_write
 
-    study_and_write(file, store=store, out=out, workers=workers, resume=resume, command=["rollband", *sys.argv[1:]])
+    study_and_write(
+        file, store=store, out=out, workers=workers, scheduler=scheduler, resume=resume, against=against,
+        command=["rollband", *sys.argv[1:]],
+    )  # fmt: skip
+
+
+@app.command()
+def audit(
+    folder: Annotated[Path, typer.Argument(help="A results folder of a replay or a study.")],
+    store: Annotated[
+        Path | None, typer.Option("--store", help="Folder of stored histories, if not the one of then.")
+    ] = None,
+    inputs: Annotated[
+        Path | None, typer.Option("--inputs", help="Folder in which to look for input files that have moved.")
+    ] = None,
+    anyway: Annotated[bool, typer.Option("--anyway", help="Make it again even from inputs that have changed.")] = False,
+    sample: Annotated[
+        int | None, typer.Option("--sample", min=1, help="Of a study, make only so many rows again, drawn at random.")
+    ] = None,
+    seed: Annotated[
+        int | None, typer.Option("--seed", min=0, help="Of the rows that are drawn; 1 if not given.")
+    ] = None,
+    workers: Annotated[
+        int | None, typer.Option("--workers", help="Processes, for a study; as many as there are cores if not given.")
+    ] = None,
+    as_json: Annotated[
+        bool, typer.Option("--json", help="Print the verdict as JSON on standard output, and nothing else there.")
+    ] = False,
+) -> None:
+    """Make a results folder again from its manifest and say whether it comes out the same.
+
+    Exit code: 0 the same, 4 different or of other data, 5 it cannot be had.
+    """
+    from .wiring_audit import audit_and_tell
+
+    audit_and_tell(
+        folder, store=store, inputs=inputs, anyway=anyway, sample=sample, seed=seed, workers=workers, as_json=as_json
+    )
 
 
 @app.command()

@@ -7,38 +7,48 @@ the order in which batches come back, and an interruption with a later ``resume`
 from __future__ import annotations
 
 import os
-import signal
-from collections.abc import Callable, Iterator, Sequence
-from concurrent.futures import FIRST_COMPLETED, Executor, Future, ProcessPoolExecutor, wait
-from concurrent.futures.process import BrokenProcessPool
+from collections import deque
+from collections.abc import Callable, Generator, Iterable, Iterator, Sequence
+from concurrent.futures import FIRST_COMPLETED, BrokenExecutor, CancelledError, Executor, Future, wait
+from contextlib import closing
 from dataclasses import dataclass
-from functools import lru_cache
+from importlib.metadata import version
 from pathlib import Path
+from time import perf_counter
 from typing import Any
 
 import numpy as np
 import numpy.typing as npt
 
 from backtest import Market
-from backtest.analytics.reality_check import Draws, Partial, combine
-from backtest.engine.legs import PricedLegs
+from backtest.analytics.reality_check import Partial, combine
 from backtest.errors import BacktestError
 from data_loaders.store import read_history
 
-from .batches import ASKED, Span, common_span, replay_batch
+from .batches import ASKED, SPAN, Span, columns_of, common_span
 from .errors import StudyError
 from .expansion import Expansion, points
+from .jobs import Columns, Context, Job, forget, frozen, history_file, market_at, of_history, run_job
+from .local_workers import LocalWorkers
 from .results import sha256_of
-from .study import Study, study_from_table, study_to_table
+from .study import Study, study_to_table
 from .working_folder import WorkingFolder
 
-Columns = dict[str, npt.NDArray[np.generic]]
+__all__ = ["Group", "Progress", "Rows", "StudyPlan", "default_workers", "history_file", "plan_study", "run_plan"]
+
 Progress = Callable[[int, int], None]
+Batch = tuple[Columns, Partial | None]
 
 #: Overlays of one batch. Part of the plan: a run that is resumed has the same batches.
 BATCH = 1_000
 #: Batches handed out for each worker: one at work and one to go on with.
 IN_HAND = 2
+#: Batches handed out to an executor of which we do not know how many workers it has.
+IN_HAND_ELSEWHERE = 64
+#: Seconds of work left for which it is worth while to start worker processes, which takes about one.
+WORTH_STARTING = 3.0
+#: Fields of a leg and of the volatility on which the first day of an overlay depends; a ratio by whether it is zero.
+DECIDES_THE_FIRST_DAY = ("roll", "phase", "shift_days", "ratio", "source", "window")
 
 
 @dataclass(frozen=True, slots=True, kw_only=True)
@@ -72,6 +82,7 @@ class StudyPlan:
     def as_table(self) -> dict[str, Any]:
         """Plain values that are the same exactly when the batches and their inputs are."""
         return {
+            "program": f"rollband {version('rollband')}, numpy {np.__version__}",
             "study": study_to_table(self.study),
             "inputs": list(self.inputs),
             "batch": BATCH,
@@ -101,8 +112,8 @@ def plan_study(study: Study, *, store: Path) -> StudyPlan:
 
     Raises
     ------
-    StudyError, LoadError, BacktestError
-        If a history is missing, or an overlay cannot be replayed on one.
+    LoadError, BacktestError, StudyError
+        If a history is missing, or an overlay cannot be replayed on one; the message names the history.
     """
     expansion = Expansion(study)
     wanted = points(study)
@@ -112,14 +123,19 @@ def plan_study(study: Study, *, store: Path) -> StudyPlan:
     inputs: list[dict[str, str]] = []
     row = 0
     for history in study.histories:
-        market = _market(str(store), history)
-        inputs.append({"history": history, "sha256": sha256_of(history_file(store, history))})
+        try:
+            sha256 = sha256_of(history_file(store, history))
+        except OSError:
+            read_history(store, history)  # which says what is wrong with it
+            raise
+        market = market_at(store, history, sha256)
+        inputs.append({"history": history, "sha256": sha256})
         for window in range(len(windows)):
             chosen = wanted[np.ravel(window_of) == window]
             try:
                 span = common_span(market, expansion.many(_asked(study, chosen)), comparison=study.comparison)
             except BacktestError as error:
-                raise StudyError(f"history '{history}': {error}") from error
+                raise of_history(error, history) from error
             groups.append(Group(history=history, points=chosen, first_row=row, span=span))
             row += len(chosen)
     batches = tuple(
@@ -132,12 +148,12 @@ def plan_study(study: Study, *, store: Path) -> StudyPlan:
 
 def market_of(plan: StudyPlan, group: Group) -> Market:
     """The market of a group, read once."""
-    return _market(str(plan.store), group.history)
+    return market_at(plan.store, group.history, _sums(plan)[group.history])
 
 
-def history_file(store: Path, name: str) -> Path:
-    """The Parquet file of a stored history."""
-    return store / f"{name}.parquet"
+def _sums(plan: StudyPlan) -> dict[str, str]:
+    """The sum of each history's file."""
+    return {entry["history"]: entry["sha256"] for entry in plan.inputs}
 
 
 def run_plan(
@@ -153,164 +169,165 @@ def run_plan(
     Parameters
     ----------
     workers : int
-        Local processes; one works in this process.
+        Local processes; one works in this process, and so does a study that is soon done.
     executor : Executor, optional
-        Anything that has ``submit`` as :class:`concurrent.futures.Executor`, instead of local processes.
+        Anything that has ``submit`` as :class:`concurrent.futures.Executor`, instead of local processes. Its workers
+        read the histories from the store, unless it brings them (as :mod:`studies.cluster` does).
     folder : WorkingFolder, optional
-        Where batches are kept; in memory without.
+        Where batches are kept; in memory alone without.
     progress : callable
         Called with the overlays done and to do.
 
     Raises
     ------
     StudyError
-        If a worker is lost; what was done is in ``folder``.
+        If a worker is lost or memory runs out, or ``folder`` cannot be written; what was done is in ``folder``.
     """
-    kept: dict[int, tuple[Columns, Partial | None]] = {}
-    missing = list(range(len(plan.batches)))
-    if folder is not None:
-        missing = [number for number in missing if not folder.has(number)]
-    sizes = [rows.stop - rows.start for _, rows in plan.batches]
-    done = plan.overlays - sum(sizes[number] for number in missing)
-    progress(done, plan.overlays)
-    for number, (columns, part) in _worked(plan, missing, workers=workers, executor=executor):
-        if folder is None:
-            kept[number] = (columns, part)
+    collected = _Collected(plan)
+    missing = []
+    for number in range(len(plan.batches)):
+        kept = folder.read(number) if folder is not None else None
+        if kept is None or not collected.fits(number, kept):
+            missing.append(number)
         else:
-            folder.keep(number, columns, part)
-        done += sizes[number]
-        progress(done, plan.overlays)
-    found = [folder.read(number) if folder is not None else kept[number] for number in range(len(plan.batches))]
-    partials: list[Partial | None] = []
-    for group in range(len(plan.groups)):
-        parts = [
-            part for (of, _), (_, part) in zip(plan.batches, found, strict=True) if of == group and part is not None
-        ]
-        partials.append(combine(parts) if parts else None)
-    # a group of fewer days has fewer blocks
-    names = list(dict.fromkeys(name for columns, _ in found for name in columns))
-    return Rows(
-        columns={name: _column(name, [columns for columns, _ in found]) for name in names},
-        partials=tuple(partials),
-    )
+            collected.add(number, kept)
+    progress(collected.done, plan.overlays)
+    try:
+        # closed before an error goes up, so that no worker outlives the run
+        with closing(_worked(plan, missing, workers=workers, executor=executor)) as worked:
+            for number, batch in worked:
+                if folder is not None:
+                    folder.keep(number, *batch)
+                collected.add(number, batch)
+                progress(collected.done, plan.overlays)
+    except (BrokenExecutor, CancelledError, MemoryError) as error:
+        raise StudyError(_lost(error, kept=folder is not None)) from error
+    finally:
+        forget()
+    return collected.rows()
 
 
-def _column(name: str, batches: Sequence[Columns]) -> npt.NDArray[np.generic]:
-    return np.concatenate(
-        [columns[name] if name in columns else np.full(len(columns["inception"]), np.nan) for columns in batches]
-    )
+def _lost(error: BaseException, *, kept: bool) -> str:
+    """What to say of a run that lost a worker."""
+    said = str(error)
+    if isinstance(error, MemoryError):
+        said = "memory ran out"
+    elif isinstance(error, CancelledError):
+        said = "the executor gave a batch up" + (f" ({said})" if said else "")
+    again = "what was done is kept: go on with --resume" if kept else "run it again"
+    few = "" if isinstance(error, CancelledError) else ", if memory is short with fewer --workers"
+    return f"{said or 'a worker was lost'}; {again}{few}"
+
+
+class _Collected:
+    """The whole study's columns, filled as batches come, in whatever order."""
+
+    def __init__(self, plan: StudyPlan) -> None:
+        self.done = 0
+        self._plan = plan
+        self._partials: list[Partial | None] = [None] * len(plan.groups)
+        # a group of fewer days has fewer blocks
+        most = max((group.span for group in plan.groups), key=lambda span: len(span.edges))
+        self._columns: Columns = {name: np.full(plan.overlays, np.nan) for name in columns_of(most)}
+        self._columns |= {name: np.empty(plan.overlays, dtype="datetime64[D]") for name in SPAN}
+
+    def fits(self, number: int, batch: Batch) -> bool:
+        """Whether this can be the batch of that number, for one that comes from a disk."""
+        columns, part = batch
+        group, rows = self._plan.batches[number]
+        span, count = self._plan.groups[group].span, rows.stop - rows.start
+        if set(columns) != set(columns_of(span)) or any(len(values) != count for values in columns.values()):
+            return False
+        if self._plan.study.resamples == 0 or span.days < 2:
+            return part is None
+        return part is not None and part.tried == count
+
+    def add(self, number: int, batch: Batch) -> None:
+        """Put a batch in its place."""
+        columns, part = batch
+        group, rows = self._plan.batches[number]
+        first = self._plan.groups[group].first_row
+        for name, values in columns.items():
+            self._columns[name][first + rows.start : first + rows.stop] = values
+        if part is not None:
+            before = self._partials[group]
+            self._partials[group] = combine([part] if before is None else [before, part])
+        self.done += rows.stop - rows.start
+
+    def rows(self) -> Rows:
+        return Rows(columns=self._columns, partials=tuple(self._partials))
 
 
 def _worked(
     plan: StudyPlan, numbers: Sequence[int], *, workers: int, executor: Executor | None
-) -> Iterator[tuple[int, tuple[Columns, Partial | None]]]:
-    """Batches as they are done, never more than a few in hand."""
-    context = _Context(study=_frozen(study_to_table(plan.study)), store=str(plan.store))
+) -> Generator[tuple[int, Batch], None, None]:
+    """Batches as they are done."""
+    context, sums = Context(study=frozen(study_to_table(plan.study)), store=str(plan.store)), _sums(plan)
+    waiting = deque(numbers)
 
-    def job(number: int) -> _Job:
+    def next_job() -> tuple[int, Job]:
+        number = waiting.popleft()
         group, rows = plan.batches[number]
         of = plan.groups[group]
-        return _Job(
-            history=of.history, span=of.span, points=of.points[rows], first_number=of.first_row + int(rows.start)
+        first_number = of.first_row + int(rows.start)
+        return number, Job(
+            history=of.history, sha256=sums[of.history], span=of.span, points=of.points[rows], first_number=first_number
         )
 
-    if executor is None and workers == 1:
-        for number in numbers:
-            yield number, run_batch(context, job(number))
+    def jobs() -> Iterator[tuple[int, Job]]:
+        while waiting:
+            yield next_job()
+
+    if executor is not None:
+        yield from _handed_out(context, jobs(), executor, most=getattr(executor, "in_hand", IN_HAND_ELSEWHERE))
         return
-    own = executor is None
-    pool = executor or ProcessPoolExecutor(max_workers=workers, initializer=_leave_interrupts_to_the_parent)
-    most = IN_HAND * max(workers, 1)
-    waiting = list(reversed(numbers))
-    running: dict[Future[tuple[Columns, Partial | None]], int] = {}
+    started = perf_counter()
+    for done, (number, job) in enumerate(jobs(), start=1):
+        yield number, run_job(context, job)
+        if workers > 1 and (perf_counter() - started) / done * len(waiting) > WORTH_STARTING:
+            break
+    if not waiting:
+        return
+    with LocalWorkers(min(workers, len(waiting)), modules=[run_job.__module__]) as pool:
+        yield from _handed_out(context, jobs(), pool, most=IN_HAND * workers, until=lambda: pool.up)
+
+
+def _handed_out(
+    context: Context,
+    jobs: Iterable[tuple[int, Job]],
+    executor: Executor,
+    *,
+    most: int,
+    until: Callable[[], bool] = lambda: True,
+) -> Iterator[tuple[int, Batch]]:
+    """Batches as an executor has done them, never more than ``most`` in hand; done here ``until`` it is up.
+
+    What is done comes before an error.
+    """
+    waiting = iter(jobs)
+    running: dict[Future[Batch], int] = {}
     try:
-        while waiting or running:
-            while waiting and len(running) < most:
-                number = waiting.pop()
-                running[pool.submit(run_batch, context, job(number))] = number
+        while True:
+            while len(running) < most and (taken := next(waiting, None)) is not None:
+                number, job = taken
+                running[executor.submit(run_job, context, job)] = number
+            if not until() and (taken := next(waiting, None)) is not None:
+                number, job = taken
+                yield number, run_job(context, job)
+                continue
+            if not running:
+                return
             finished, _ = wait(running, return_when=FIRST_COMPLETED)
-            for future in finished:
+            for future in sorted(finished, key=lambda future: future.cancelled() or future.exception() is not None):
                 yield running.pop(future), future.result()
-    except BrokenProcessPool:
-        raise StudyError(
-            "a worker was lost (killed, or out of memory): start again with --resume, and perhaps with fewer --workers"
-        ) from None
+    except BrokenExecutor:
+        for future, number in list(running.items()):
+            if future.done() and not future.cancelled() and future.exception() is None:
+                yield number, future.result()
+        raise
     finally:
         for future in running:
             future.cancel()
-        if own:
-            pool.shutdown(wait=True, cancel_futures=True)
-
-
-# ---------------------------------------------------------------- in a worker
-
-
-@dataclass(frozen=True, slots=True)
-class _Context:
-    """What all batches of a study share; small, and the same object of a worker's caches."""
-
-    study: str
-    store: str
-
-
-@dataclass(frozen=True, slots=True, kw_only=True)
-class _Job:
-    history: str
-    span: Span
-    points: npt.NDArray[np.int32]
-    first_number: int
-
-
-def run_batch(context: _Context, job: _Job) -> tuple[Columns, Partial | None]:
-    """Replay one batch; histories, priced legs and draws are read or made once in each worker."""
-    expansion = _expansion(context.study)
-    study = expansion.study
-    market = _market(context.store, job.history)
-    draws = None
-    if study.resamples > 0 and job.span.days > 1:
-        draws = _draws(job.span.days, job.span.block_length, study.resamples, study.seed)
-    return replay_batch(
-        market,
-        expansion.many(job.points),
-        job.span,
-        comparison=study.comparison,
-        draws=draws,
-        first_number=job.first_number,
-        priced=_priced(context.store, job.history),
-    )
-
-
-@lru_cache(maxsize=2)
-def _expansion(frozen: str) -> Expansion:
-    import json
-
-    return Expansion(study_from_table(json.loads(frozen)))
-
-
-@lru_cache(maxsize=4)
-def _market(store: str, name: str) -> Market:
-    return Market.from_frame(read_history(Path(store), name).frame)
-
-
-@lru_cache(maxsize=1)
-def _priced(store: str, name: str) -> PricedLegs:
-    return PricedLegs(_market(store, name))
-
-
-@lru_cache(maxsize=2)
-def _draws(days: int, block_length: float, resamples: int, seed: int) -> Draws:
-    return Draws(days, block_length, resamples, seed)
-
-
-def _leave_interrupts_to_the_parent() -> None:
-    """Ctrl-C reaches every process of a terminal; only the parent may act on it."""
-    signal.signal(signal.SIGINT, signal.SIG_IGN)
-
-
-def _frozen(table: dict[str, Any]) -> str:
-    import json
-
-    return json.dumps(table, sort_keys=True)
 
 
 def default_workers() -> int:
@@ -319,16 +336,15 @@ def default_workers() -> int:
 
 
 def _asked(study: Study, chosen: npt.NDArray[np.int32]) -> npt.NDArray[np.int32]:
-    """An overlay for each roll calendar and volatility of the study, and a few more spread over all."""
-    deciding = [
-        number
-        for number, axis in enumerate(study.axes)
-        if any(f.startswith("volatility") or f.rsplit(".", 1)[-1] in DECIDES_THE_FIRST_DAY for f in axis.fields)
-    ]
-    _, one_each = np.unique(chosen[:, deciding], axis=0, return_index=True)
+    """An overlay for each first day that the study may have, and a few more spread over all."""
+    deciding = []
+    for number, axis in enumerate(study.axes):
+        last = {field.rsplit(".", 1)[-1] for field in axis.fields}
+        if last & set(DECIDES_THE_FIRST_DAY):
+            column = chosen[:, number]
+            if last & set(DECIDES_THE_FIRST_DAY) == {"ratio"}:
+                column = np.array([value == 0 for value in axis.values])[column]
+            deciding.append(column)
+    _, one_each = np.unique(np.column_stack([np.zeros(len(chosen)), *deciding]), axis=0, return_index=True)
     spread = np.linspace(0, len(chosen) - 1, min(ASKED, len(chosen))).astype(np.intp)
     return chosen[np.unique(np.concatenate([one_each, spread]))]
-
-
-#: Fields of a leg on which the first day of an overlay depends: that of its longest roll.
-DECIDES_THE_FIRST_DAY = ("roll", "phase", "shift_days", "ratio")

@@ -7,7 +7,7 @@ from collections.abc import Callable, Sequence
 from concurrent.futures import Executor
 from importlib.metadata import version
 from pathlib import Path
-from typing import Any
+from typing import TYPE_CHECKING, Any
 
 from backtest.analytics.reality_check import RealityCheck
 
@@ -18,8 +18,15 @@ from .study import Study, study_to_table
 from .study_answer import GroupAnswer, StudyAnswer, answer_study, overlay_names, sentence_of
 from .working_folder import discard, working_folder
 
+if TYPE_CHECKING:
+    from .against import Other
+
 #: Tables of a study's results folder.
 OVERLAYS, PERIODS = "overlays.parquet", "periods.parquet"
+#: The page of a study.
+PAGE = "study.html"
+#: How a study compares with another, where it was asked to.
+AGAINST = "against.json"
 #: Overlays named in the summary, from the best down.
 BEST_NAMED = 10
 
@@ -68,6 +75,7 @@ def make_study_folder(
     executor: Executor | None = None,
     resume: bool = False,
     command: str = "",
+    against: Other | None = None,
     progress: Progress = lambda done, of: None,
     telling: Callable[[str], None] = lambda step: None,
 ) -> StudyAnswer:
@@ -81,6 +89,8 @@ def make_study_folder(
         Go on with an unfinished run of the same study.
     command : str
         For manifest and page.
+    against : Other, optional
+        Another study, from :func:`studies.against.read_other`; how this one compares is written beside the tables.
     telling : callable
         Told what is being done before and after the batches.
 
@@ -99,16 +109,28 @@ def make_study_folder(
         telling("judging")
         found = answer_study(plan, rows)
         telling("writing tables, pictures and page")
-        write_folder(out, lambda fresh: write_study(found, fresh, command=command))
+
+        def write(fresh: Path) -> None:
+            write_study(found, fresh, command=command)
+            if against is not None:
+                from .against import compare
+
+                write_json(fresh / AGAINST, compare(found, against))
+
+        write_folder(out, write)
         discard(folder)
     return found
 
 
 def write_study(found: StudyAnswer, folder: Path, *, command: str) -> None:
-    """Write all files of a study into an existing empty folder."""
+    """Write all files of a study into an existing empty folder: tables, summary, page, pictures and manifest."""
+    from .page.study import build_study_page, save_figures, study_figures
+
     write_parquet(folder / OVERLAYS, found.overlays)
     write_parquet(folder / PERIODS, found.periods)
     write_json(folder / SUMMARY, study_summary(found))
+    (folder / PAGE).write_text(build_study_page(found, command=command), encoding="utf-8")
+    save_figures(study_figures(found), folder)
     write_json(folder / MANIFEST, study_manifest(found, command=command))
 
 

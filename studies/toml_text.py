@@ -23,6 +23,7 @@ DEEPEST = 20
 #: A value that spans more lines than this is not looked through for its place.
 LONGEST_VALUE_LINES = 200
 
+_TOO_LARGE = 10**MOST_DIGITS
 _BARE_KEY = re.compile(r"[A-Za-z0-9_-]+")
 
 
@@ -176,7 +177,7 @@ def _check_size(path: KeyPath, value: Any) -> None:
     waiting: list[tuple[KeyPath, Any]] = [(path, value)]
     while waiting:
         at, found = waiting.pop()
-        if isinstance(found, int) and abs(found) >= 10**MOST_DIGITS:
+        if isinstance(found, int) and abs(found) >= _TOO_LARGE:
             raise KeyProblem(at, f"is a whole number of more than {MOST_DIGITS:,} digits")
         if isinstance(found, dict | list):
             if len(at) > DEEPEST:

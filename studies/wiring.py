@@ -109,6 +109,19 @@ def history_of(
     return history, prices.stem
 
 
+def source_of(
+    name: str | None, files: dict[str, Path | None], *, vol_unit: VolUnit | None, store: Path
+) -> dict[str, Any]:
+    """Where :func:`history_of` has the history from, for the manifest: paths as they were typed."""
+    from .results import sha256_of
+    from .runner import history_file
+
+    if name is not None:
+        return {"history": name, "store": str(store), "sha256": sha256_of(history_file(store, name))}
+    given = {kind: str(path) for kind, path in files.items() if path is not None}
+    return {"files": given, "vol_unit": vol_unit.value if vol_unit else None}
+
+
 def replay_and_write(
     history: History, label: str, agreed: OverlayFile, *, rate: float | None, dividend_yield: float | None,
     window: dict[str, str | None], out: Path | None, as_json: bool, results: Path, overlay_file: Path | None,

@@ -5,16 +5,19 @@ from __future__ import annotations
 import shlex
 import sys
 from collections.abc import Callable, Iterator
-from contextlib import contextmanager
+from contextlib import contextmanager, nullcontext
 from pathlib import Path
 
 import typer
 
-from .errors import StudyError
+from .against import read_other
+from .against_terminal import show_against
+from .cluster import cluster
+from .differences import read_table
 from .results import folder_name
 from .runner import default_workers
 from .study import read_study
-from .study_folder import make_study_folder
+from .study_folder import AGAINST, PAGE, make_study_folder
 from .study_terminal import show_study
 from .wiring import say
 
@@ -24,29 +27,38 @@ MOST_WORKERS = 256
 
 
 def study_and_write(
-    file: Path, *, store: Path, out: Path | None, workers: int | None, resume: bool, command: list[str]
-) -> None:
+    file: Path, *, store: Path, out: Path | None, workers: int | None, resume: bool, command: list[str],
+    scheduler: str | None = None, against: Path | None = None,
+) -> None:  # fmt: skip
     """Run a study file, write its results folder and tell what it found."""
-    asked = read_study(file)
+    if workers is not None and scheduler is not None:
+        raise typer.BadParameter("the scheduler has its own workers; leave --workers out", param_hint="--scheduler")
     if workers is not None and not 1 <= workers <= MOST_WORKERS:
-        raise StudyError(f"--workers is {workers}; it takes a whole number from 1 to {MOST_WORKERS}")
+        raise typer.BadParameter(f"{workers} is not a number from 1 to {MOST_WORKERS}", param_hint="--workers")
+    asked = read_study(file)
+    other = None if against is None else read_other(against)
     folder = out if out is not None else Path("results") / folder_name(file.stem)
-    with _progress(asked.question) as (progress, telling):
+    with study_progress() as (progress, telling):
         try:
-            found = make_study_folder(
-                asked, folder, store=store, workers=workers or default_workers(), resume=resume,
-                command=shlex.join(command), progress=progress, telling=telling,
-            )  # fmt: skip
+            with cluster(scheduler) if scheduler is not None else nullcontext() as executor:
+                found = make_study_folder(
+                    asked, folder, store=store, workers=workers or default_workers(), executor=executor, resume=resume,
+                    command=shlex.join(command), progress=progress, telling=telling, against=other,
+                )  # fmt: skip
         except KeyboardInterrupt:
             typer.echo("\nrollband: stopped; what was done is kept: go on with --resume", err=True)
             raise SystemExit(STOPPED) from None
     show_study(found)
+    if other is not None:
+        show_against(read_table(folder / AGAINST))
     say("")
-    say(f"Results in {folder}: summary.json, overlays.parquet, periods.parquet, manifest.json")
+    more = "" if other is None else f", {AGAINST}"
+    say(f"Read {folder / PAGE}")
+    say(f"Results in {folder}: {PAGE}, pictures, summary.json, overlays.parquet, periods.parquet, manifest.json{more}")
 
 
 @contextmanager
-def _progress(question: str) -> Iterator[tuple[Callable[[int, int], None], Callable[[str], None]]]:
+def study_progress() -> Iterator[tuple[Callable[[int, int], None], Callable[[str], None]]]:
     """A bar with the time left on standard error, where a person looks on."""
     if not sys.stderr.isatty():
         yield (lambda done, of: None), (lambda step: None)

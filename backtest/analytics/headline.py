@@ -15,12 +15,12 @@ from .performance import (
     FEWEST_MONTHS,
     SMALLEST_SPREAD,
     TAIL,
-    annual_return,
     daily_excess,
     month_ends,
     sharpe_ratio,
     years_between,
 )
+from .subperiods import BlockSums
 
 Array = npt.NDArray[np.float64]
 Dates = npt.NDArray[np.datetime64]
@@ -49,7 +49,9 @@ NODES = 48
 LEAST_ELLIPSE = 2.3
 
 
-def headline_figures(wealth: Array, *, hold: Array, rate_return: Array, dates: Dates) -> dict[str, Array]:
+def headline_figures(
+    wealth: Array, *, hold: Array, rate_return: Array, dates: Dates, blocks: BlockSums | None = None
+) -> dict[str, Array]:
     """Figures of many paths over the same days.
 
     Parameters
@@ -59,6 +61,9 @@ def headline_figures(wealth: Array, *, hold: Array, rate_return: Array, dates: D
     hold, rate_return : ndarray, shape (day,)
         Growth of 1 of the hold, and the return on cash over each day (the first is not used).
     dates : ndarray of datetime64, shape (day,)
+    blocks : BlockSums, optional
+        Made by :func:`~backtest.analytics.subperiods.empty_sums`: filled with the sums over its blocks of the last
+        days, as :func:`~backtest.analytics.subperiods.block_sums` has them, without a further pass.
 
     Returns
     -------
@@ -73,12 +78,10 @@ def headline_figures(wealth: Array, *, hold: Array, rate_return: Array, dates: D
     step = max(1, BLOCK_VALUES // days)
     for first in range(0, overlays, step):
         block = slice(first, first + step)
-        for name, values in passes.figures(wealth[block]).items():
+        for name, values in passes.figures(wealth[block], None if blocks is None else blocks.rows(block)).items():
             made[name][block] = values
-    years = years_between(dates)
-    total = wealth[:, -1] / wealth[:, 0]
     with np.errstate(invalid="ignore", divide="ignore"):
-        made["annual_return"] = total ** (1.0 / years) - 1.0 if years >= 1.0 else total - 1.0
+        made["annual_return"] = _annual(wealth[:, -1] / wealth[:, 0], dates)
         falls = made["max_drawdown"] < 0
         np.divide(made["annual_return"], -made["max_drawdown"], out=made["calmar"], where=falls)
     return made
@@ -101,13 +104,15 @@ class _Passes:
         rows = max(1, BLOCK_VALUES // days)
         self._excess, self._other = np.empty((rows, self._count)), np.empty((rows, days))
 
-    def figures(self, wealth: Array) -> dict[str, Array]:
-        """Figures of one block, shape ``(row,)`` each."""
+    def figures(self, wealth: Array, blocks: BlockSums | None) -> dict[str, Array]:
+        """Figures of one block of paths, shape ``(row,)`` each; the sums of its blocks of days on the way."""
         rows, count = len(wealth), self._count
         excess, other = self._excess[:rows], self._other[:rows]
         np.divide(wealth[:, 1:], wealth[:, :-1], out=excess)
         excess -= self._growth_of_cash
         below = other[:, :count]
+        if blocks is not None:
+            blocks.fill(wealth, excess, below)
         np.minimum(excess, 0.0, out=below)
         downside = np.sqrt(np.einsum("ij,ij->i", below, below) / count)
         mean = excess.mean(axis=1)
@@ -174,8 +179,13 @@ def _mix_returns(share: Array, *, cash: Array, excess: Array, dates: Dates) -> A
         inside[:] = False
     rest = np.isfinite(share) & ~inside
     log_growth[rest] = [_log_growth(float(one), cash, excess) for one in share[rest]]
-    grown = np.exp(log_growth)
-    return np.array([annual_return(np.array([1.0, one]), dates[[0, -1]]) for one in grown])
+    return _annual(np.exp(log_growth), dates)
+
+
+def _annual(total: Array, dates: Dates) -> Array:
+    """Annual return of a growth over all days; under a year the total (C11)."""
+    years = years_between(dates)
+    return total ** (1.0 / years) - 1.0 if years >= 1.0 else total - 1.0
 
 
 def _log_growth(share: float, cash: Array, excess: Array) -> float:

@@ -12,13 +12,11 @@ import numpy as np
 import numpy.typing as npt
 
 from ..volatility.realised import TRADING_DAYS
-from .performance import SMALLEST_SPREAD
+from .performance import SMALLEST_SPREAD, daily_excess
 
 Array = npt.NDArray[np.float64]
 
 BLOCKS = 8
-#: Values worked on at once, so that the working copies stay in a core's second cache.
-BLOCK_VALUES = 32_768
 
 
 def block_edges(days: int, blocks: int = BLOCKS) -> npt.NDArray[np.intp]:
@@ -48,6 +46,29 @@ class BlockSums:
     square: Array
     returns: npt.NDArray[np.intp]
 
+    def rows(self, rows: slice) -> BlockSums:
+        """Some of the paths, as views."""
+        return BlockSums(
+            growth=self.growth[rows], total=self.total[rows], square=self.square[rows], returns=self.returns
+        )
+
+    def fill(self, wealth: Array, excess: Array, working: Array) -> None:
+        """Write the sums of some paths, over as many of their last days as the blocks have.
+
+        Parameters
+        ----------
+        wealth, excess : ndarray, shapes (overlay, day) and (overlay, day - 1)
+        working : ndarray, shape (overlay, day - 1)
+            Is overwritten.
+        """
+        edges = np.concatenate([[0], np.cumsum(self.returns)])
+        last, working = excess[:, -edges[-1] :], working[:, -edges[-1] :]
+        np.add.reduceat(last, edges[:-1], axis=1, out=self.total)
+        np.multiply(last, last, out=working)
+        np.add.reduceat(working, edges[:-1], axis=1, out=self.square)
+        at_edge = wealth[:, wealth.shape[1] - 1 - edges[-1] + edges]
+        np.divide(at_edge[:, 1:], at_edge[:, :-1], out=self.growth)
+
     def sharpe(self, chosen: slice | npt.NDArray[np.intp]) -> Array:
         """Sharpe ratio over the chosen blocks together, shape ``(overlay,)``; NaN without variation (C11)."""
         count = int(self.returns[chosen].sum())
@@ -62,6 +83,12 @@ class BlockSums:
         return np.where(varies, mean / spread, np.nan) * np.sqrt(TRADING_DAYS)
 
 
+def empty_sums(overlays: int, edges: npt.NDArray[np.intp]) -> BlockSums:
+    """Sums to be filled, for blocks between ``edges`` as :func:`block_edges` gives them."""
+    growth, total, square = np.full((3, overlays, len(edges) - 1), np.nan)
+    return BlockSums(growth=growth, total=total, square=square, returns=np.diff(edges))
+
+
 def block_sums(wealth: Array, *, rate_return: Array, edges: npt.NDArray[np.intp]) -> BlockSums:
     """Growth and sums over blocks of days.
 
@@ -74,19 +101,7 @@ def block_sums(wealth: Array, *, rate_return: Array, edges: npt.NDArray[np.intp]
     edges : ndarray of int, shape (block + 1,)
         As :func:`block_edges` gives them for ``day - 1`` returns.
     """
-    overlays, days = wealth.shape
-    growth_of_cash = 1.0 + rate_return[1:]
-    total, square = np.empty((2, overlays, len(edges) - 1))
-    step = max(1, BLOCK_VALUES // days)
-    buffer = np.empty((min(step, overlays), days - 1))
-    for first in range(0, overlays, step):
-        block = wealth[first : first + step]
-        rows = slice(first, first + len(block))
-        excess = buffer[: len(block)]
-        np.divide(block[:, 1:], block[:, :-1], out=excess)
-        excess -= growth_of_cash
-        np.add.reduceat(excess, edges[:-1], axis=1, out=total[rows])
-        np.multiply(excess, excess, out=excess)
-        np.add.reduceat(excess, edges[:-1], axis=1, out=square[rows])
-    at_edge = wealth[:, edges]
-    return BlockSums(growth=at_edge[:, 1:] / at_edge[:, :-1], total=total, square=square, returns=np.diff(edges))
+    sums = empty_sums(len(wealth), edges)
+    excess = daily_excess(wealth, rate_return)
+    sums.fill(wealth, excess, np.empty_like(excess))
+    return sums

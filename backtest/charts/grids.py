@@ -6,7 +6,7 @@ Colours fade into whatever lies behind them, so that a page may be light or dark
 from __future__ import annotations
 
 from collections.abc import Mapping, Sequence
-from typing import TYPE_CHECKING
+from typing import TYPE_CHECKING, Any, TypeAlias
 
 import numpy as np
 import numpy.typing as npt
@@ -16,20 +16,25 @@ from .style import DASHES, HOLD, MIX, OVERLAY, PUT, bare, legend_above, plain_in
 if TYPE_CHECKING:
     from matplotlib.axes import Axes
     from matplotlib.axis import Axis
-    from matplotlib.colors import LinearSegmentedColormap
+    from matplotlib.colors import Colormap
 
 Array = npt.NDArray[np.float64]
 Positions = npt.NDArray[np.intp]
+Dashes: TypeAlias = str | tuple[float, tuple[float, float]]
 
 #: More cells a side than this and their numbers are left out.
 MOST_NUMBERED = 12
 #: Ticks a side at most, letters of one at most, and letters that stand side by side without touching.
 MOST_TICKS, MOST_LETTERS, LETTERS_ACROSS = 11, 18, 54
+#: Values of an axis beyond which ranges are drawn as bands, not as bars.
+MOST_BARS = 30
 #: Dots closer than one part in so many of a side are drawn once.
 DOTS_ACROSS, DOTS_DOWN = 130, 90
 #: Above this share of full colour a cell's number is white.
-STRONG = 0.85
+STRONG = 0.72
 ABOVE, BELOW, MISSING = "#005a92", "#b24a00", (0.46, 0.46, 0.46, 0.3)
+#: Around signs that may stand on dark cells; as good as white, and told apart from it by pages of another colour.
+RIM = "#fefdfc"
 #: Lines of one chart are told apart by colour, dash and marker.
 LINES = ((OVERLAY, "o"), (MIX, "D"), (PUT, "s"))
 OWN, BEST = "your overlay", "best of all"
@@ -80,8 +85,12 @@ def heat_map(
             value = float(drawn[row, column])
             colour = "#ffffff" if abs(value) > STRONG * reach else plain_ink()
             axes.text(column, row, signed(value, digits), ha="center", va="center", color=colour)
-    _mark(axes, own, "s", OWN, size=13 if max(drawn.shape) <= MOST_NUMBERED else 9)
-    _mark(axes, best, "o", BEST, size=17 if max(drawn.shape) <= MOST_NUMBERED else 9)
+    if max(drawn.shape) <= MOST_NUMBERED:
+        _outline(axes, own, "-", OWN)
+        _outline(axes, best, (0.0, (1.2, 1.2)), BEST)
+    else:
+        _mark(axes, own, "s", OWN)
+        _mark(axes, best, "o", BEST)
     bar = axes.figure.colorbar(image, ax=axes, label=unit, shrink=0.9, pad=0.02)
     bar.solids.set_rasterized(True)  # type: ignore[union-attr]  # of an image there is one
     bar.outline.set_visible(False)
@@ -127,7 +136,7 @@ def frontier(
     axes.plot(mix_removed, mix_cost, color=MIX, linewidth=1.6, dashes=DASHES[MIX][1], label="less stock, more cash")
     for number, marker, name in ((best, "o", BEST), (own, "s", OWN)):
         at = None if number is None else (float(removed[number]), float(cost[number]))
-        _mark(axes, at, marker, name, size=9)
+        _mark(axes, at, marker, name)
     axes.set_xlabel("points off the hold's deepest fall")
     axes.set_ylabel("points of return given up" + (" a year" if each_year else ""))
     legend_above(axes, columns=3)
@@ -176,7 +185,7 @@ def one_against_other(
         axes.plot(ends, ends, color=HOLD, linewidth=0.9, dashes=DASHES[HOLD][1], label="the same in both")
     for number, marker, name in ((best, "o", BEST), (own, "s", OWN)):
         at = None if number is None else (float(first[number]), float(second[number]))
-        _mark(axes, at, marker, name, size=9)
+        _mark(axes, at, marker, name)
     axes.set_xlabel(names[0])
     axes.set_ylabel(names[1])
     legend_above(axes)
@@ -257,16 +266,21 @@ def spread_over_axis(
     places = np.flatnonzero(known)
     if places.size:
         low, first, middle, third, high = scale * np.nanquantile(values[:, known], (0.0, 0.25, 0.5, 0.75, 1.0), axis=0)
-        if len(values) > 1:
+        dense = len(labels) > MOST_BARS
+        if len(values) > 1 and dense:
+            axes.fill_between(places, low, high, color=HOLD, linewidth=0, alpha=0.25, label="all settings")
+            axes.fill_between(places, first, third, color=OVERLAY, linewidth=0, alpha=0.3, label="middle half")
+        elif len(values) > 1:
             axes.vlines(places, low, high, color=HOLD, linewidth=0.9, alpha=0.7, label="all settings")
             axes.vlines(places, first, third, color=OVERLAY, linewidth=4.0, alpha=0.35, label="middle half")
         axes.plot(
-            places, middle, "o", color=OVERLAY, markersize=3.2, label="median" if len(values) > 1 else "_one setting"
-        )
+            places, middle, "-" if dense and len(values) > 1 else "o", color=OVERLAY, markersize=3.2, linewidth=1.8,
+            label="median" if len(values) > 1 else "_one setting",
+        )  # fmt: skip
     if own is not None:
         axes.plot(
-            np.arange(len(labels)), scale * own, color=MIX, linewidth=1.2, dashes=DASHES[MIX][1], marker="D",
-            markersize=2.6, label=own_name,
+            np.arange(len(labels)), scale * own, color=MIX, linewidth=1.3, dashes=DASHES[MIX][1],
+            marker="" if len(labels) > MOST_BARS else "D", markersize=2.8, label=own_name,
         )  # fmt: skip
     axes.set_xlim(-0.5, len(labels) - 0.5)
     axes.set_ylabel(unit)
@@ -320,35 +334,53 @@ def clipped(label: str, most: int = MOST_LETTERS) -> str:
 
 
 def _ticks(place: Axis, labels: Sequence[str], title: str) -> None:
-    """Few labels, and slanted where they would touch."""
-    step = max(1, int(np.ceil(len(labels) / MOST_TICKS)))
-    shown = [clipped(label) for label in list(labels)[::step]]
-    place.set_ticks(range(0, len(labels), step), shown)
+    """Few labels, and slanted where all are wanted and would touch."""
+    across = place is place.axes.xaxis
+    cut = [clipped(label) for label in labels]
+    step = max(1, int(np.ceil(len(cut) / MOST_TICKS)))
+    while across and step > 1 and _letters(cut[::step]) > LETTERS_ACROSS and len(cut) > 2 * step:
+        step += 1
+    place.set_ticks(range(0, len(cut), step), cut[::step])
     place.set_label_text(clipped(title, 3 * MOST_LETTERS))
-    if place is place.axes.xaxis and sum(len(label) + 2 for label in shown) > LETTERS_ACROSS:
+    if across and _letters(cut[::step]) > LETTERS_ACROSS:
         for text in place.get_ticklabels():
             text.set(rotation=40, ha="right", rotation_mode="anchor")
 
 
-def _mark(axes: Axes, at: tuple[float, float] | None, marker: str, name: str, *, size: float) -> None:
-    """A hollow sign around one overlay, named over the axes."""
-    if at is None or not np.isfinite(at).all():
+def _letters(labels: Sequence[str]) -> int:
+    return sum(len(label) + 2 for label in labels)
+
+
+def _outline(axes: Axes, at: tuple[int, int] | None, style: Dashes, name: str) -> None:
+    """A line around one cell, inside its edges, named over the axes; a rim keeps it clear of dark cells."""
+    from matplotlib.patches import Rectangle
+
+    if at is None:
         return
-    axes.plot(
-        [at[0]], [at[1]], marker, markersize=size, markerfacecolor="none", markeredgecolor=plain_ink(),
-        markeredgewidth=1.5, label="_" + name, zorder=5.0,
-    )  # fmt: skip
-    axes.plot(
-        [], [], marker, markersize=7, markerfacecolor="none", markeredgecolor=plain_ink(), markeredgewidth=1.5,
-        label=name,
-    )  # fmt: skip
+    corner = (at[0] - 0.47, at[1] - 0.45)
+    axes.add_patch(Rectangle(corner, 0.94, 0.9, fill=False, edgecolor=RIM, linewidth=3.2))
+    axes.add_patch(
+        Rectangle(corner, 0.94, 0.9, fill=False, edgecolor=plain_ink(), linewidth=1.6, linestyle=style, label=name)
+    )
     legend_above(axes)
 
 
-def _colours() -> LinearSegmentedColormap:
+def _mark(axes: Axes, at: tuple[float, float] | None, marker: str, name: str) -> None:
+    """A hollow sign around one overlay, named over the axes."""
+    if at is None or not np.isfinite(at).all():
+        return
+    shape: dict[str, Any] = {"marker": marker, "linestyle": "none", "markerfacecolor": "none"}
+    ink: dict[str, Any] = {"markeredgecolor": plain_ink(), "markeredgewidth": 1.5}
+    over: dict[str, Any] = {"markersize": 9, "zorder": 5.0, "clip_on": False}
+    axes.plot([at[0]], [at[1]], markeredgecolor=RIM, markeredgewidth=3.2, label="_rim", **shape, **over)
+    axes.plot([at[0]], [at[1]], label=f"_{name}", **shape, **ink, **over)
+    axes.plot([], [], label=name, markersize=7, **shape, **ink)
+    legend_above(axes)
+
+
+def _colours() -> Colormap:
     from matplotlib.colors import LinearSegmentedColormap, to_rgba
 
     ends = [to_rgba(BELOW, 1.0), to_rgba(BELOW, 0.0), to_rgba(ABOVE, 0.0), to_rgba(ABOVE, 1.0)]
     made = LinearSegmentedColormap.from_list("both sides", list(zip((0.0, 0.5, 0.5, 1.0), ends, strict=True)))
-    made.set_bad(MISSING)
-    return made
+    return made.with_extremes(bad=MISSING)

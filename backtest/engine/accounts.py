@@ -65,6 +65,7 @@ class FamilyState:
 
     anchor_day: Days  # (anchor roll,)
     anchor_of_day: Days  # (day,)
+    days_held: Days  # (anchor roll,), days from each anchor roll to the next
     spot: Array  # (day,)
     cash_growth: Array  # (day,)
     share_growth: Array  # (day,)
@@ -81,7 +82,8 @@ def family_state(plan: Plan, family: Family) -> FamilyState:
     market = plan.market
     anchor_day = family.anchor.opened - plan.start
     days = plan.end - plan.start + 1
-    anchor_of_day = np.repeat(np.arange(len(anchor_day)), np.diff(anchor_day, append=days))
+    days_held = np.diff(anchor_day, append=days)
+    anchor_of_day = np.repeat(np.arange(len(anchor_day)), days_held)
     share_growth = market.share_growth[window] / market.share_growth[plan.start]
     cash_growth = market.cash_growth[window] / market.cash_growth[plan.start]
     spot = market.spot[window]
@@ -89,6 +91,7 @@ def family_state(plan: Plan, family: Family) -> FamilyState:
     return FamilyState(
         anchor_day=anchor_day,
         anchor_of_day=anchor_of_day,
+        days_held=days_held,
         spot=spot,
         cash_growth=cash_growth,
         share_growth=share_growth,
@@ -243,7 +246,7 @@ def settle_accounts(
         for slot in range(rows.shape[1]):
             value += _weighted(books.path.take(rows[block, slot], axis=0), ratio[block, slot])
         if account == "resize":
-            value *= units[block].take(state.anchor_of_day, axis=1)
+            value *= np.repeat(units[block], state.days_held, axis=1)
         else:
             value /= state.spot[0]
     wealth[:, 0] = 1.0
@@ -279,6 +282,8 @@ def _chain_units(state: FamilyState, books: Books, rows: Days, ratio: Array, sto
 
 def _weighted(rows: Array, ratio: Array) -> Array:
     """Each row times its ratio, in place; what is held at ratio zero counts for nothing, even without a price."""
+    if (ratio == 1.0).all():
+        return rows
     rows *= ratio[:, np.newaxis]
     rows[ratio == 0.0] = 0.0
     return rows

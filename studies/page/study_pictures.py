@@ -5,11 +5,12 @@ from __future__ import annotations
 import warnings
 from collections.abc import Iterator, Sequence
 from contextlib import contextmanager
+from typing import Any
 
 import numpy as np
 import numpy.typing as npt
 from matplotlib import rc_context
-from matplotlib.figure import Figure
+from matplotlib.figure import Figure, FigureBase
 
 from backtest.charts import grids
 
@@ -37,7 +38,7 @@ FEW_VALUES, MOST_BOXES = 12, 24
 SHIFTED = "shift_days"
 #: Pixels an inch of what is drawn as pixels in a page: cells of large maps keep their edges.
 CELL_DPI = 200
-FILE_STYLE = {"text.parse_math": False, "font.size": 10.0, "axes.titlesize": 10.0}
+FILE_STYLE: dict[Any, object] = {"text.parse_math": False, "font.size": 10.0, "axes.titlesize": 10.0}
 
 
 @contextmanager
@@ -87,7 +88,7 @@ def _map_height(view: View) -> float:
     return float(np.clip(1.5 + 0.27 * len(view.axes[1].values), 2.3, 4.3))
 
 
-def _map(drawn: Figure, view: View, figure: FigureWords) -> None:
+def _map(drawn: FigureBase, view: View, figure: FigureWords) -> None:
     """A heat map, or a line where there is one axis."""
     values, unit = view.figure(figure.field), figure_unit(figure, view)
     axes = drawn.subplots()
@@ -95,7 +96,7 @@ def _map(drawn: Figure, view: View, figure: FigureWords) -> None:
         line, _ = view.by_setting(0, values)
         own = None if view.own is None else int(view.positions[view.own, 0])
         grids.lines_over_axis(
-            axes, view.axes[0].labels, {figure.title: line[0]}, title=view.axes[0].name, unit=unit,
+            axes, view.axes[0].labels, {"overlays": line[0]}, title=view.axes[0].name, unit=unit,
             scale=figure.scale, own=own,
         )  # fmt: skip
         return
@@ -144,7 +145,7 @@ def frontier_picture(view: View, line: MixLine, prefix: str) -> Picture | None:
         )  # fmt: skip
 
 
-def _frontier(drawn: Figure, view: View, line: MixLine) -> None:
+def _frontier(drawn: FigureBase, view: View, line: MixLine) -> None:
     grids.frontier(
         drawn.subplots(), -100 * view.figure("return_less_hold"), 100 * view.figure("drawdown_removed"),
         mix_cost=100 * line.cost, mix_removed=100 * line.removed, own=view.own, best=view.best,
@@ -157,6 +158,8 @@ def _frontier_reading(view: View, line: MixLine) -> str:
     said = (
         "Lower is cheaper, farther right is safer. Under the dashed line an overlay costs less than holding less "
         f"stock with as mild a deepest fall: {under:,} of the {of:,} that removed any drawdown"
+        if of
+        else "Lower is cheaper, farther right is safer; no overlay removed any drawdown"
     )
     if view.own is None:
         return f"{said}."
@@ -164,10 +167,8 @@ def _frontier_reading(view: View, line: MixLine) -> str:
     if not np.isfinite(removed + cost):
         return f"{said}. Yours has no figures."
     each = "" if view.under_a_year else " a year"
-    said += (
-        f". Yours gave up {number(100 * cost)} points{each} and took {number(100 * removed, 1)} points off the fall"
-    )
-    mix = float(line.cost_of(removed))
+    said += f". Yours gave up {number(100 * cost)} points{each} and took {number(100 * removed, 1)} points off the fall"
+    mix = float(line.cost_of(np.array(removed)))
     return f"{said}; a mix that takes off as much gave up {number(100 * mix)}." if np.isfinite(mix) else f"{said}."
 
 
@@ -205,7 +206,7 @@ def axis_pictures(view: View, prefix: str) -> list[Picture]:
     return made
 
 
-def _boxes(drawn: Figure, view: View, place: int) -> None:
+def _boxes(drawn: FigureBase, view: View, place: int) -> None:
     panels = drawn.subplots(1, 2, sharey=True)
     for axes, figure in zip(panels, (SHARPE_GAIN, RETURN_GAIN), strict=True):
         title = view.axes[place].name if axes is panels[0] else ""
@@ -231,9 +232,10 @@ def _axis_reading(view: View, place: int) -> str:
     groups = by_value(view, place, values)
     middle = np.array([np.median(part[np.isfinite(part)]) if any_known(part) else np.nan for part in groups.values()])
     top, low = int(np.nanargmax(middle)), int(np.nanargmin(middle))
-    said = "Line the median, box the middle half, thin line the range" if place in boxed_axes(view) else (
-        "Dot the median, thick line the middle half, thin line the range"
-    )  # fmt: skip
+    said = "Line the median, box the middle half, thin line the range"
+    if place not in boxed_axes(view):
+        dense = len(labels) > grids.MOST_BARS
+        said = f"{'Line' if dense else 'Dot'} the median, {'bands' if dense else 'bars'} the middle half and the range"
     sizes = sorted({len(part) for part in groups.values() if len(part)})
     each = f"{sizes[0]:,}" if len(sizes) == 1 else f"{sizes[0]:,} to {sizes[-1]:,}"
     said += f", of {each} {'overlay' if sizes == [1] else 'overlays'} each"
@@ -270,7 +272,7 @@ def roll_day_pictures(view: View, place: int, prefix: str) -> list[Picture]:
     return made
 
 
-def _spread(drawn: Figure, view: View, place: int, figure: FigureWords) -> None:
+def _spread(drawn: FigureBase, view: View, place: int, figure: FigureWords) -> None:
     axis: Axis = view.axes[place]
     values, setting = view.by_setting(place, view.figure(figure.field))
     shown = view.own if view.own is not None else view.best
@@ -282,9 +284,9 @@ def _spread(drawn: Figure, view: View, place: int, figure: FigureWords) -> None:
 
 
 def _roll_day_reading(view: View, place: int, figure: FigureWords) -> str:
-    values, setting = view.by_setting(place, view.figure(figure.field))
+    values, _ = view.by_setting(place, view.figure(figure.field))
     scaled = figure.scale * values
-    widths = np.nanmax(scaled, axis=1) - np.nanmin(scaled, axis=1) if len(scaled) == 1 else _widths(scaled)
+    widths, across = _widths(scaled), _widths(scaled.T)
     unit = "points" if figure.scale != 1 else "of Sharpe ratio"
     if len(values) == 1:
         days = int(np.count_nonzero(np.isfinite(values)))
@@ -293,14 +295,10 @@ def _roll_day_reading(view: View, place: int, figure: FigureWords) -> str:
             f"{number(float(widths[0]))} {unit}, and nobody knew beforehand which it would be."
         )
     said = (
-        f"With everything else the same, from the unluckiest to the luckiest roll day lie {number(float(np.median(widths)))} "
-        f"{unit} (median of {counted(len(widths), 'setting')})"
+        "With everything else the same, from the unluckiest to the luckiest roll day lie "
+        f"{number(float(np.median(widths)))} {unit} (median of {counted(len(widths), 'setting')}); on one and the same "
+        f"roll day, from the worst to the best setting lie {number(float(np.median(across)))}"
     )
-    across = _widths(scaled.T)
-    if across.size:
-        said += (
-            f"; on one and the same roll day, from the worst to the best setting lie {number(float(np.median(across)))}"
-        )
     return f"{said}."
 
 
@@ -324,7 +322,7 @@ def halves_picture(view: View, prefix: str) -> Picture | None:
         return picture_of(drawn, f"{prefix}halves", "First half of the days against the second", _halves_reading(view))
 
 
-def _halves(drawn: Figure, view: View) -> None:
+def _halves(drawn: FigureBase, view: View) -> None:
     halves = view.group.halves
     grids.one_against_other(
         drawn.subplots(), halves.first, halves.second, own=view.own, best=view.best,

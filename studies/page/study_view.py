@@ -31,10 +31,14 @@ MIX_SHARES = np.linspace(1.0, 0.0, 101)
 
 @dataclass(frozen=True, slots=True, kw_only=True)
 class FigureWords:
-    """A figure of an overlay, and how it is written: title, unit on an axis, factor to the unit, digits, sign."""
+    """A figure of an overlay, and how it is written.
+
+    ``head`` is its title over a column, ``unit`` what it is drawn in, ``scale`` the factor to that unit.
+    """
 
     field: str
     title: str
+    head: str
     unit: str
     scale: float = 1.0
     digits: int = 2
@@ -45,26 +49,39 @@ class FigureWords:
         return number(self.scale * value, self.digits, sign=self.sign, unit="%" if self.unit == "percent" else "")
 
 
-SHARPE_GAIN = FigureWords(field="sharpe_less_mix", title="Sharpe ratio less the same-beta mix's", unit="Sharpe ratio")
+SHARPE_GAIN = FigureWords(
+    field="sharpe_less_mix", title="Sharpe ratio less the same-beta mix's", head="Sharpe less mix's",
+    unit="Sharpe ratio",
+)  # fmt: skip
 RETURN_GAIN = FigureWords(
-    field="return_less_hold", title="return a year less the hold's", unit="points a year", scale=100.0
+    field="return_less_hold", title="return a year less the hold's", head="return less hold's, points",
+    unit="points a year", scale=100.0,
+)  # fmt: skip
+RETURN_MIX = FigureWords(
+    field="return_less_mix", title="return a year less the same-beta mix's", head="return less mix's, points",
+    unit="points a year", scale=100.0,
+)  # fmt: skip
+REMOVED = FigureWords(
+    field="drawdown_removed", title="drawdown removed", head="drawdown removed, points", unit="points", scale=100.0,
+    digits=1,
+)  # fmt: skip
+INFORMATION = FigureWords(
+    field="information_ratio", title="information ratio", head="information ratio", unit="information ratio"
 )
-REMOVED = FigureWords(field="drawdown_removed", title="drawdown removed", unit="points", scale=100.0, digits=1)
-INFORMATION = FigureWords(field="information_ratio", title="information ratio", unit="information ratio")
 RETURN = FigureWords(
-    field="annual_return", title="return a year", unit="percent", scale=100.0, digits=1, sign=False
+    field="annual_return", title="return a year", head="return a year", unit="percent", scale=100.0, digits=1,
+    sign=False,
 )  # fmt: skip
 VOLATILITY = FigureWords(
-    field="volatility", title="volatility a year", unit="percent", scale=100.0, digits=1, sign=False
+    field="volatility", title="volatility a year", head="volatility a year", unit="percent", scale=100.0, digits=1,
+    sign=False,
 )  # fmt: skip
-SHARPE = FigureWords(field="sharpe", title="Sharpe ratio", unit="Sharpe ratio", sign=False)
+SHARPE = FigureWords(field="sharpe", title="Sharpe ratio", head="Sharpe ratio", unit="Sharpe ratio", sign=False)
 DRAWDOWN = FigureWords(
-    field="max_drawdown", title="maximum drawdown", unit="percent", scale=100.0, digits=1, sign=False
+    field="max_drawdown", title="maximum drawdown", head="maximum drawdown", unit="percent", scale=100.0, digits=1,
+    sign=False,
 )  # fmt: skip
-BETA = FigureWords(field="beta", title="beta to the hold", unit="beta", sign=False)
-RETURN_MIX = FigureWords(
-    field="return_less_mix", title="return a year less the same-beta mix's", unit="points a year", scale=100.0
-)
+BETA = FigureWords(field="beta", title="beta to the hold", head="beta", unit="beta", sign=False)
 
 
 @dataclass(frozen=True, slots=True, kw_only=True, eq=False)
@@ -199,10 +216,10 @@ class MixLine:
     cost: Array
     removed: Array
 
-    def cost_of(self, removed: float | Array) -> Array:
+    def cost_of(self, removed: Array) -> Array:
         """What a mix costs that removes as much; NaN outside the mixes from all stock to none."""
         order = np.argsort(self.removed, kind="stable")
-        return np.interp(removed, self.removed[order], self.cost[order], left=np.nan, right=np.nan)
+        return np.asarray(np.interp(removed, self.removed[order], self.cost[order], left=np.nan, right=np.nan))
 
 
 def mix_line(found: Replay, first: np.datetime64) -> MixLine | None:
@@ -226,7 +243,12 @@ def better_than_mixes(view: View, line: MixLine) -> tuple[int, int]:
     return int(np.count_nonzero(cost[both] < mixes[both] - TIE)), int(np.count_nonzero(both))
 
 
+def median(values: Array) -> float:
+    """Median of the finite values; NaN without any."""
+    there = values[np.isfinite(values)]
+    return float(np.median(there)) if there.size else float("nan")
+
+
 def any_known(values: Array) -> bool:
     """Whether there is a finite value."""
     return bool(np.isfinite(values).any())
-

@@ -10,8 +10,9 @@ from itertools import pairwise
 import numpy as np
 import pytest
 
+from backtest.analytics.headline import headline_figures
 from backtest.analytics.performance import daily_excess, sharpe_ratio
-from backtest.analytics.subperiods import block_edges, block_sums
+from backtest.analytics.subperiods import block_edges, block_sums, empty_sums
 from tests.backtest.test_headline import made
 
 
@@ -69,3 +70,16 @@ def test_it_does_not_matter_which_paths_stand_beside_it() -> None:
     together, alone = (block_sums(w, rate_return=rate, edges=edges) for w in (wealth, wealth[41:42]))
     np.testing.assert_array_equal(together.total[41], alone.total[0])
     np.testing.assert_array_equal(together.square[41], alone.square[0])
+
+
+@pytest.mark.parametrize("offset", [0, 130])
+def test_sums_on_the_way_of_the_headline_figures_are_the_same(offset: int) -> None:
+    wealth, hold, rate, dates = made(900, overlays=97)
+    edges = block_edges(899 - offset)
+    sums = empty_sums(97, edges)
+    headline_figures(wealth, hold=hold, rate_return=rate, dates=dates, blocks=sums)
+    apart = block_sums(wealth[:, offset:], rate_return=rate[offset:], edges=edges)
+    np.testing.assert_array_equal(sums.growth, apart.growth)
+    # excess is return less (1 + cash) there, return less 1 less cash here
+    np.testing.assert_allclose(sums.total, apart.total, rtol=0, atol=1e-13)
+    np.testing.assert_allclose(sums.square, apart.square, rtol=1e-11)
