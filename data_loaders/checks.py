@@ -19,8 +19,9 @@ from .schema import FILES, RATE_PERCENT_RANGE, VOL_PERCENT_RANGE
 
 Unit = Literal["percent", "decimal"]
 
-#: A median vol above the first can only be percent, below the second only decimal (2 would be 200% a year).
-PERCENT_MEDIAN, DECIMAL_MEDIAN = 2.0, 1.5
+#: A median vol above the first can only be percent, below the second only decimal: in between it may be 100% a year
+#: and more, or 1% of something else.
+PERCENT_MEDIAN, DECIMAL_MEDIAN = 2.0, 1.0
 #: In a percent file no value is below the first, in a decimal file none above the second.
 LEAST_PERCENT, LARGEST_DECIMAL = 1.5, 3.0
 #: Share of values that must agree for the unit to be plain; the others are then problems of their own.
@@ -103,7 +104,7 @@ def vol_unit(values: npt.ArrayLike) -> Unit | None:
     """Unit of a file's vols where it is plain, else None.
 
     Of the positive values: percent if the median is above 2 (a typical vol of 200% is absurd) and at least 90%
-    of them are 1.5 or more; decimal if the median is below 1.5 and at least 90% are 3 or less. The few that
+    of them are 1.5 or more; decimal if the median is below 1 and at least 90% are 3 or less. The few that
     do not fit are left to :func:`judge`.
 
     >>> vol_unit([17.2, 18.1, 150.2]), vol_unit([0.172, 0.181, 1.502]), vol_unit([1.6, 1.8, 1.9])

@@ -17,7 +17,6 @@ from .overlay_files import OverlayFile, overlay_to_table
 from .replay_history import Answer, answer, daily_frame, summary
 from .report import RESAMPLES, SEED, Report, make_report, report_summary
 from .results import (
-    MANIFEST,
     SCHEMA,
     SUMMARY,
     check_replaceable,
@@ -26,6 +25,7 @@ from .results import (
     plain,
     write_folder,
     write_json,
+    write_manifest,
     write_parquet,
 )
 
@@ -82,7 +82,7 @@ def write_answer(
     (folder / "report.html").write_text(page, encoding="utf-8", errors="backslashreplace")
     if pdf:
         write_pdf(report, folder / "report.pdf", history=history)
-    write_json(folder / MANIFEST, manifest)
+    write_manifest(folder, manifest)
 
 
 def _write_pictures(found: Answer, folder: Path) -> None:

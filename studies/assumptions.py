@@ -72,6 +72,15 @@ def _span(values: Array) -> str:
     return f"{low} throughout" if low == high else f"{low} to {high} a year"
 
 
+def _crossed_days(found: Replay) -> int:
+    """Days on which the highest put bought lies above the lowest call sold: a band turned inside out."""
+    puts = [leg.daily_strike for leg in found.legs if leg.leg.right == "put" and leg.signed_ratio > 0]
+    calls = [leg.daily_strike for leg in found.legs if leg.leg.right == "call" and leg.signed_ratio < 0]
+    if not puts or not calls:
+        return 0
+    return int(np.count_nonzero(np.max(puts, axis=0) > np.min(calls, axis=0)))
+
+
 def warnings_of(found: Replay) -> list[str]:
     """Plain sentences about what may mislead."""
     market, volatility, overlay = found.market, found.volatility, found.overlay
@@ -110,6 +119,8 @@ def warnings_of(found: Replay) -> list[str]:
             said.append(
                 f"{below} of {len(leg.premium)} sold options ({leg.label}) brought less than they cost to trade"
             )
+    if (crossed := _crossed_days(found)) > 0:
+        said.append(f"on {crossed} of {len(found)} days the bought put's strike lies above the sold call's")
     if not np.isfinite(found.wealth).all():
         lost = found.dates[int(np.argmax(~np.isfinite(found.wealth)))]
         said.append(f"the overlay loses everything on {lost}: figures after that day do not exist")

@@ -237,8 +237,10 @@ class Audited:
         found = list(different_keys(then, now))
         for key, problem, old, new in found[:KEYS_TOLD]:
             self.differences.append(Difference(file=file, where=key, problem=problem, then=old, now=new))
-        if len(found) > KEYS_TOLD:
-            self.differences.append(Difference(file=file, problem=f"{len(found) - KEYS_TOLD:,} more values differ"))
+        more = len(found) - KEYS_TOLD
+        if more > 0:
+            words = f"{more:,} more value{' differs' if more == 1 else 's differ'}"
+            self.differences.append(Difference(file=file, problem=words))
 
     def compare_summary(self, again: Path) -> None:
         """Compare the summary with the one in ``again``, value by value."""

@@ -56,7 +56,7 @@ def cluster(address: str) -> Iterator[Cluster]:
         raise StudyError(f"--scheduler is {address!r}; it takes an address such as tcp://10.0.0.5:8786")
     try:
         client = Client(address, timeout=PATIENCE, set_as_default=False)
-    except (OSError, ValueError, TypeError, RuntimeError) as error:
+    except Exception as error:  # what answers there may be anything
         raise StudyError(
             f"the scheduler {address} cannot be reached within {PATIENCE:g} seconds: {_first_line(error)}; check that "
             "it runs, and its address, such as tcp://10.0.0.5:8786"

@@ -297,8 +297,7 @@ def table_difference(file: str, then: pd.DataFrame, now: pd.DataFrame, row_words
 
 def unequal(one: npt.NDArray[Any], other: npt.NDArray[Any]) -> npt.NDArray[np.bool_]:
     """Where two columns differ; what is missing in both does not."""
-    missing, lacking = pd.isna(one), pd.isna(other)
-    return np.asarray(((one != other) & ~(missing & lacking)) | (missing != lacking), dtype=np.bool_)
+    return np.asarray((one != other) & ~(pd.isna(one) & pd.isna(other)), dtype=np.bool_)
 
 
 def _cell(value: Any) -> Any:

@@ -95,6 +95,7 @@ def evidence_of(found: Answer, findings: Findings, inference: Inference) -> Evid
         probability_shallower=NAN if against_hold is None else against_hold.probability_shallower,
         return_difference=_difference(against_hold, "annual_return", headline_return),
         sharpe_difference=_difference(against_mix, "sharpe", findings.ladder_gains.get(found.used_smile, NAN)),
+        same_delta_difference=_difference(inference.comparisons.get("mix_same_delta"), "sharpe", NAN),
         smile_differences=findings.ladder_gains,
         used_smile=found.used_smile,
         break_even=findings.break_evens.sharpe_all_legs,

@@ -57,8 +57,19 @@ def check_replaceable(out: Path) -> None:
         raise ResultsError(f"{out} is the folder you stand in: give a new folder as --out")
     if out.is_symlink() or (out.exists() and not out.is_dir()):
         raise ResultsError(f"{out} is not a folder: give another --out")
-    if out.is_dir() and any(out.iterdir()) and not (out / MANIFEST).is_file():
-        raise ResultsError(f"{out} holds other files and no {MANIFEST}: give an empty or a new folder as --out")
+    if not out.is_dir() or not any(out.iterdir()):
+        return
+    manifest = read_manifest(out)
+    if manifest is None or not str(manifest.get("made_by", "")).startswith("rollband "):
+        raise ResultsError(f"{out} holds other files and no {MANIFEST} of ours: give an empty or a new folder as --out")
+    written = manifest.get("files")
+    ours = {MANIFEST, *(written if isinstance(written, list) else [])}
+    others = sorted(path.name for path in out.iterdir() if path.name not in ours)
+    if others:
+        raise ResultsError(
+            f"{out} holds results, and also {', '.join(others[:5])}{' ...' if len(others) > 5 else ''}, which would be "
+            "lost: move that away, or give a new folder as --out"
+        )
 
 
 @contextmanager
@@ -127,6 +138,12 @@ def read_summary(folder: Path) -> dict[str, Any]:
     if schema != SCHEMA:
         raise ResultsError(f"{file} is of schema {schema!r}; this version reads {SCHEMA}")
     return found
+
+
+def write_manifest(folder: Path, manifest: dict[str, Any]) -> None:
+    """Write the manifest of a folder that is otherwise complete, with the names of all files in it."""
+    files = sorted({path.name for path in folder.iterdir()} | {MANIFEST})
+    write_json(folder / MANIFEST, manifest | {"files": files})
 
 
 def write_json(path: Path, value: Any) -> None:

@@ -25,13 +25,14 @@ from backtest.analytics.reality_check import Partial, combine
 from backtest.errors import BacktestError
 from data_loaders.store import read_history
 
-from .batches import ASKED, SPAN, Span, columns_of, common_span
-from .errors import StudyError
+from .batches import ASKED, FIGURES, SPAN, Span, columns_of, common_span
+from .errors import StudyError, StudyFileError
 from .expansion import Expansion, points
 from .jobs import Columns, Context, Job, forget, frozen, history_file, market_at, of_history, run_job
 from .local_workers import LocalWorkers
 from .results import sha256_of
 from .study import Study, study_to_table
+from .toml_text import KeyPath, key_words
 from .working_folder import WorkingFolder
 
 __all__ = ["Group", "Progress", "Rows", "StudyPlan", "default_workers", "history_file", "plan_study", "run_plan"]
@@ -47,6 +48,8 @@ IN_HAND = 2
 IN_HAND_ELSEWHERE = 64
 #: Seconds of work left for which it is worth while to start worker processes, which takes about one.
 WORTH_STARTING = 3.0
+#: Columns of the results before those of the axes.
+SETTINGS = ("number", "history")
 #: Fields of a leg and of the volatility on which the first day of an overlay depends; a ratio by whether it is zero.
 DECIDES_THE_FIRST_DAY = ("roll", "phase", "shift_days", "ratio", "source", "window")
 
@@ -113,8 +116,10 @@ def plan_study(study: Study, *, store: Path) -> StudyPlan:
     Raises
     ------
     LoadError, BacktestError, StudyError
-        If a history is missing, or an overlay cannot be replayed on one; the message names the history.
+        If a history is missing, or an overlay cannot be replayed on one (the message names the history), or an axis
+        has the name of a column of the results.
     """
+    _check_names(study)
     expansion = Expansion(study)
     wanted = points(study)
     window_axes = [number for number, axis in enumerate(study.axes) if any(f.startswith("window") for f in axis.fields)]
@@ -144,6 +149,15 @@ def plan_study(study: Study, *, store: Path) -> StudyPlan:
         for first in range(0, len(group.points), BATCH)
     )
     return StudyPlan(study=study, store=store, groups=tuple(groups), batches=batches, inputs=tuple(inputs))
+
+
+def _check_names(study: Study) -> None:
+    """Each axis becomes a column beside those of the figures."""
+    for number, axis in enumerate(study.axes):
+        if axis.name in (*SETTINGS, *SPAN, *FIGURES):
+            path: KeyPath = ("axis", number, "name")
+            problem = f"{axis.name} is the name of a column of the results; give the axis another"
+            raise StudyFileError(file="study", line=None, key=key_words(path), problem=problem, path=path)
 
 
 def market_of(plan: StudyPlan, group: Group) -> Market:

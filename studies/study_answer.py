@@ -16,12 +16,13 @@ from backtest import Replay, replay
 from backtest.analytics.headline import headline_figures
 from backtest.analytics.performance import TRADING_DAYS, daily_excess
 from backtest.analytics.reality_check import RealityCheck, p_values
+from backtest.analytics.resampling import FEWEST_DAYS
 from backtest.analytics.selection import DeflatedSharpe, deflated_sharpe
 from backtest.analytics.subperiods import BlockSums, block_sums
 
 from .batches import BLOCK_COLUMNS, FIGURES, SAME_BETA, SPAN
 from .expansion import Expansion
-from .runner import Group, Rows, StudyPlan, market_of
+from .runner import SETTINGS, Group, Rows, StudyPlan, market_of
 
 Array = npt.NDArray[np.float64]
 
@@ -87,9 +88,11 @@ class GroupAnswer:
 
     @property
     def distinguished(self) -> bool | None:
-        """Whether the best can be told from luck after so many trials; None where no test can be had."""
+        """Whether the best can be told from luck after so many trials; None where a test cannot be had."""
         said = []
-        if self.check is not None and np.isfinite(self.check.spa_consistent):
+        if self.check is not None:
+            if not np.isfinite(self.check.spa_consistent):
+                return None
             said.append(self.check.spa_consistent <= LEVEL)
         if np.isfinite(self.deflated.probability):
             said.append(self.deflated.probability >= 1.0 - LEVEL)
@@ -113,7 +116,7 @@ def answer_study(plan: StudyPlan, rows: Rows) -> StudyAnswer:
     histories = np.repeat([group.history for group in plan.groups], [len(group.points) for group in plan.groups])
     overlays = pd.concat(
         [
-            pd.DataFrame({"number": np.arange(plan.overlays), "history": histories}),
+            pd.DataFrame(dict(zip(SETTINGS, (np.arange(plan.overlays), histories), strict=True))),
             settings,
             pd.DataFrame({name: rows.columns[name] for name in (*SPAN, *FIGURES)}),
         ],
@@ -187,6 +190,8 @@ def _deflated(plan: StudyPlan, expansion: Expansion, group: Group, ratios: Array
         shared: dict[str, Any] = {"hold": found.hold, "rate_return": found.rate_return, "dates": found.dates}
         share = float(headline_figures(found.wealth[np.newaxis], **shared)["beta"][0])
     difference = daily_excess(found.wealth, found.rate_return) - share * market
+    if len(difference) < FEWEST_DAYS:
+        return DeflatedSharpe(hurdle=float("nan"), probability=float("nan"))
     daily = ratios[np.isfinite(ratios)] / np.sqrt(TRADING_DAYS)
     return deflated_sharpe(
         float(ratios[best] / np.sqrt(TRADING_DAYS)),
@@ -278,19 +283,26 @@ def sentence_of(found: GroupAnswer, names: Sequence[str]) -> str:
     best = f"The best of {found.tried:,} ({names[found.best]})"
     if found.tried == 1:
         best = f"The only overlay ({names[found.best]})"
+    if found.distinguished is None:
+        return f"{best} cannot be tested: the days are too few."
     said = []
-    if found.check is not None and np.isfinite(found.check.spa_consistent):
-        said.append(f"a search as wide as this finds one as good by luck with a chance of {_chance(found.check)}")
+    if found.check is not None:
+        least = 1.0 / found.check.resamples
+        chance = _share(found.check.spa_consistent, LEVEL) if found.check.spa_consistent else f"under {least:.1%}"
+        said.append(f"a search as wide as this finds one as good by luck with a chance of {chance}")
     if np.isfinite(found.deflated.probability):
         said.append(
-            f"after so many trials the probability that it has any advantage at all is {found.deflated.probability:.0%}"
+            "after so many trials the probability that it has any advantage at all is "
+            f"{_share(found.deflated.probability, 1.0 - LEVEL)}"
         )
-    if not said:
-        return f"{best} cannot be tested: the days are too few."
     verdict = "can be told from luck" if found.distinguished else "cannot be told from luck"
     return f"{best} {verdict}: {' and '.join(said)}."
 
 
-def _chance(check: RealityCheck) -> str:
-    least = 1.0 / check.resamples
-    return f"under {least:.1%}" if check.spa_consistent < least else f"{check.spa_consistent:.0%}"
+def _share(value: float, limit: float) -> str:
+    """In percent; never rounded to certainty, nor on to the limit it is held against."""
+    if value > 0.995:
+        return "over 99%"
+    if value < 0.01 or (abs(value - limit) < 0.005 and value != limit):
+        return "under 0.1%" if value < 0.0005 else f"{value:.1%}"
+    return f"{value:.0%}"

@@ -12,7 +12,7 @@ from typing import TYPE_CHECKING, Any
 from backtest.analytics.reality_check import RealityCheck
 
 from .assumptions import CAUTION
-from .results import MANIFEST, SCHEMA, SUMMARY, check_replaceable, write_folder, write_json, write_parquet
+from .results import SCHEMA, SUMMARY, check_replaceable, write_folder, write_json, write_manifest, write_parquet
 from .runner import Progress, plan_study, run_plan
 from .study import Study, study_to_table
 from .study_answer import GroupAnswer, StudyAnswer, answer_study, overlay_names, sentence_of
@@ -111,11 +111,12 @@ def make_study_folder(
         telling("writing tables, pictures and page")
 
         def write(fresh: Path) -> None:
-            write_study(found, fresh, command=command)
             if against is not None:
                 from .against import compare
 
                 write_json(fresh / AGAINST, compare(found, against))
+            # the manifest is last: it names all files
+            write_study(found, fresh, command=command)
 
         write_folder(out, write)
         discard(folder)
@@ -131,7 +132,7 @@ def write_study(found: StudyAnswer, folder: Path, *, command: str) -> None:
     write_json(folder / SUMMARY, study_summary(found))
     (folder / PAGE).write_text(build_study_page(found, command=command), encoding="utf-8")
     save_figures(study_figures(found), folder)
-    write_json(folder / MANIFEST, study_manifest(found, command=command))
+    write_manifest(folder, study_manifest(found, command=command))
 
 
 def study_manifest(found: StudyAnswer, *, command: str) -> dict[str, Any]:

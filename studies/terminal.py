@@ -13,6 +13,8 @@ from rich.text import Text
 from .assumptions import CAUTION
 from .path_names import PATHS
 
+#: Notes on the history that are printed; the others are counted.
+MOST_NOTES = 5
 NOT_TO_BE_HAD = "–"
 
 
@@ -70,8 +72,11 @@ def show_summary(console: Console, told: Mapping[str, Any], *, history: str) -> 
         say("Mind", style="bold")
     for warning in told["warnings"]:
         say(f"  {warning}")
-    if told["history_notes"]:
-        say(f"  {len(told['history_notes'])} notes on the history itself are in summary.json")
+    notes = told["history_notes"]
+    for note in notes[:MOST_NOTES]:
+        say(f"  {note}")
+    if len(notes) > MOST_NOTES:
+        say(f"  and {len(notes) - MOST_NOTES} more on the history itself, in summary.json")
     console.print()
     console.print(CAUTION, style="dim", highlight=False, markup=False)
 

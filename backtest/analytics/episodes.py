@@ -58,7 +58,8 @@ class Episode:
     ``returns`` from peak to trough by name. ``put_profit`` and ``call_profit`` are the profits at mid of those
     legs over the same days, ``call_profit_in_recovery`` those of the calls from trough to recovery (or the end),
     each over the overlay's wealth at the start of its stretch. ``days_under_water`` counts calendar days until
-    a path is back at its level of the hold's peak, None if it does not get there.
+    a path is back for good (as far as the hold's recovery) at its level of the hold's peak, None if it does not get
+    there.
     """
 
     peak: np.datetime64
@@ -166,13 +167,18 @@ def _leg_profit(found: Replay, right: str, start: int, stop: int) -> float:
 
 
 def _days_under(path: Array, dates: Dates, fall: Fall) -> int | None:
-    """Calendar days from the hold's peak until the path is back at its level of that day; 0 if never under it."""
-    after = path[fall.peak + 1 :]
-    below = np.flatnonzero(after < path[fall.peak])
-    if below.size == 0:
+    """Calendar days from the hold's peak until the path is back for good at its level of that day.
+
+    For good means until the hold itself has recovered: a touch of the old level on the way down ends nothing. 0 if
+    never under it; None if not back by the end.
+    """
+    below = path[fall.peak + 1 :] < path[fall.peak]
+    within = below[: (len(path) if fall.recovery is None else fall.recovery + 1) - fall.peak - 1]
+    if not within.any():
         return 0
-    back = np.flatnonzero(after[below[0] :] >= path[fall.peak])
+    last = int(np.flatnonzero(within)[-1])
+    back = np.flatnonzero(~below[last:])
     if back.size == 0:
         return None
-    day = fall.peak + 1 + int(below[0]) + int(back[0])
+    day = fall.peak + 1 + last + int(back[0])
     return int((dates[day] - dates[fall.peak]) / np.timedelta64(1, "D"))

@@ -11,9 +11,9 @@ costs                          yes: it returned less a year than the hold, and a
                                difference lies below zero; no: it returned as much or more and all of the
                                interval lies above zero; open: otherwise
 beats the same-risk mix        yes: its Sharpe ratio is above the same-beta mix's and so is all of the 90%
-                               interval of the difference; no: all of the interval lies below zero; open: otherwise
-holds under other smiles       yes: the Sharpe difference to the same-beta mix has one sign under every smile of
-                               the ladder; no: it has both
+                               interval of the difference; no: both lie below; open: otherwise
+holds under other smiles       yes: the overlay is ahead of the same-beta mix in Sharpe ratio under every smile of
+                               the ladder, or behind under every one; no: ahead under one and behind under another
 holds on other roll days       yes: that difference has the sign of the user's own roll day on at least 90% of
                                the roll days; no: on at most half; open: between
 holds without one crisis       yes: that difference keeps its sign when each of the worst falls is left out; no:
@@ -34,6 +34,10 @@ from .robustness import BreakEven
 SURE = 0.95
 #: A difference no larger than this is none: rounding has no side.
 TIE = 1e-9
+#: The same for Sharpe ratios, which are shown with two digits.
+SHARPE_TIE = 0.005
+WORDS = {"ahead": "ahead of", "behind": "behind"}
+TOO_SHORT = "The history is too short to say."
 MOST_ROLL_DAYS, FEW_ROLL_DAYS = 0.90, 0.50
 
 
@@ -62,6 +66,7 @@ class Evidence:
     probability_shallower: float
     return_difference: Difference
     sharpe_difference: Difference
+    same_delta_difference: Difference
     smile_differences: Mapping[str, float]
     used_smile: str
     break_even: BreakEven
@@ -147,20 +152,29 @@ def _beats(e: Evidence) -> Clause:
     title, d = "Beats holding less", e.sharpe_difference
     if not math.isfinite(d.value):
         return Clause(title=title, finding="open", sentence="No Sharpe ratio can be had for overlay and same-beta mix.")
-    if abs(d.value) <= TIE:
-        return Clause(
-            title=title, finding="open", sentence="Its Sharpe ratio was that of holding less stock at the same beta."
-        )
-    side = "above" if d.value >= 0 else "below"
-    sentence = f"Its Sharpe ratio was {abs(d.value):.2f} {side} that of holding less stock at the same beta"
+    mix = "that of holding less stock at the same beta"
+    sentence = f"Its Sharpe ratio was {abs(d.value):.2f} {'above' if d.value >= 0 else 'below'} {mix}"
+    if abs(d.value) <= SHARPE_TIE:
+        sentence = f"Its Sharpe ratio was {mix}"
     if not d.known:
         return Clause(title=title, finding="open", sentence=f"{sentence}; the history is too short for an interval.")
     sentence += f" (90% interval {_signed(d.low, 2)} to {_signed(d.high, 2)})"
-    if d.low > 0 and d.value > 0:
-        return Clause(title=title, finding="yes", sentence=f"{sentence}.")
-    if d.high < 0:
-        return Clause(title=title, finding="no", sentence=f"{sentence}.")
-    return Clause(title=title, finding="open", sentence=f"{sentence}: the two cannot be told apart.")
+    finding = "open"
+    if abs(d.value) > SHARPE_TIE:
+        finding = "yes" if d.low > 0 and d.value > 0 else "no" if d.high < 0 and d.value < 0 else "open"
+    apart = ": the two cannot be told apart" if finding == "open" else ""
+    return Clause(title=title, finding=finding, sentence=f"{sentence}{apart}.{_without_hindsight(e)}")
+
+
+def _without_hindsight(e: Evidence) -> str:
+    """The mix that can be held without knowing the end; the same-beta mix's share is found with hindsight."""
+    d = e.same_delta_difference
+    if not d.known:
+        return ""
+    return (
+        f" Against holding each day as much stock as its own delta of the evening before, which takes no hindsight: "
+        f"{_signed(d.value, 2)} ({_signed(d.low, 2)} to {_signed(d.high, 2)})."
+    )
 
 
 def _smiles(e: Evidence) -> Clause:
@@ -168,15 +182,19 @@ def _smiles(e: Evidence) -> Clause:
     known = {name: d for name, d in e.smile_differences.items() if math.isfinite(d)}
     if len(known) < 2:
         return Clause(title=title, finding="open", sentence="The overlay cannot be compared under several smiles.")
-    if all(abs(d) <= TIE for d in known.values()):
-        return Clause(title=title, finding="open", sentence="Under no smile is it told from holding less stock.")
+    if not e.sharpe_difference.known:
+        return Clause(title=title, finding="open", sentence=TOO_SHORT)
     low, high = min(known, key=lambda n: known[n]), max(known, key=lambda n: known[n])
+    if max(abs(known[low]), abs(known[high])) <= SHARPE_TIE:
+        return Clause(title=title, finding="open", sentence="Under no smile is it told from holding less stock.")
     span = f"from {_signed(known[low], 2)} ({low}) to {_signed(known[high], 2)} ({high})"
     turn = _turn(e.break_even)
-    if known[low] < 0 < known[high]:
+    if known[low] < -SHARPE_TIE and known[high] > SHARPE_TIE:
         sentence = f"The prices decide it: that difference in Sharpe ratio runs {span}; used: {e.used_smile}.{turn}"
         return Clause(title=title, finding="no", sentence=sentence)
-    return Clause(title=title, finding="yes", sentence=f"That difference in Sharpe ratio keeps its sign, {span}.{turn}")
+    side = "ahead" if known[high] > SHARPE_TIE else "behind"
+    sentence = f"The overlay is {side} under every smile: that difference in Sharpe ratio runs {span}.{turn}"
+    return Clause(title=title, finding="yes", sentence=sentence)
 
 
 def _turn(at: BreakEven) -> str:
@@ -193,14 +211,18 @@ def _roll_days(e: Evidence) -> Clause:
     returns = [r for r in e.roll_day_returns if math.isfinite(r)]
     if len(known) < 2 or not returns or not math.isfinite(e.roll_day_differences[0]):
         return Clause(title=title, finding="open", sentence="The overlay cannot be compared on other roll days.")
+    if not e.sharpe_difference.known:
+        return Clause(title=title, finding="open", sentence=TOO_SHORT)
     own = e.roll_day_differences[0]
-    if abs(own) <= TIE:
+    if abs(own) <= SHARPE_TIE:
         return Clause(title=title, finding="open", sentence="On your roll day it is not told from holding less stock.")
+    side = "ahead" if own > 0 else "behind"
     same = sum((d > 0) == (own > 0) for d in known) / len(known)
     finding = "yes" if same >= MOST_ROLL_DAYS else "no" if same <= FEW_ROLL_DAYS else "open"
     sentence = (
-        f"On {100 * same:.0f}% of the {len(known)} possible roll days the Sharpe difference has the same sign; the "
-        f"return ran from {_percent(min(returns))} to {_percent(max(returns))}{_a_year(e)} with the roll day alone."
+        f"On your roll day the overlay is {WORDS[side]} that mix, and so on {100 * same:.0f}% of the {len(known)} "
+        f"possible ones; the return ran from {_percent(min(returns))} to {_percent(max(returns))}{_a_year(e)} with the "
+        "roll day alone."
     )
     return Clause(title=title, finding=finding, sentence=sentence)
 
@@ -215,17 +237,23 @@ def _crises(e: Evidence) -> Clause:
         return Clause(
             title=title, finding="open", sentence="The overlay cannot be compared without the worst falls of the hold."
         )
-    if abs(own) <= TIE:
+    if not e.sharpe_difference.known:
+        return Clause(title=title, finding="open", sentence=TOO_SHORT)
+    if abs(own) <= SHARPE_TIE:
         return Clause(title=title, finding="open", sentence="With all falls it is not told from holding less stock.")
-    keeps = all((d > 0) == (own > 0) for d in known)
-    changed = "keeps" if keeps else "changes"
-    falls = "the worst fall is" if len(known) == 1 else f"each of the {len(known)} worst falls is"
-    sentence = (
-        f"The Sharpe difference {changed} its sign when {falls} left out: {_signed(min(known), 2)}"
-        + (f" to {_signed(max(known), 2)}" if len(known) > 1 else "")
-        + f", {_signed(own, 2)} with all of them."
+    side, other = ("ahead", "behind") if own > 0 else ("behind", "ahead")
+    turned = sum((d > 0) != (own > 0) for d in known)
+    which = "the worst fall" if len(known) == 1 else f"each of the {len(known)} worst falls in turn"
+    said = f"It stays {WORDS[side]} that mix without {which}"
+    if turned:
+        some = "the worst fall" if len(known) == 1 else f"{turned} of the {len(known)} worst falls, taken one by one"
+        said = f"It is {WORDS[other]} that mix without {some}"
+    span = _signed(min(known), 2) + (f" to {_signed(max(known), 2)}" if len(known) > 1 else "")
+    return Clause(
+        title=title,
+        finding="no" if turned else "yes",
+        sentence=f"{said}: {span} in Sharpe ratio, {_signed(own, 2)} with all of them.",
     )
-    return Clause(title=title, finding="yes" if keeps else "no", sentence=sentence)
 
 
 def _a_year(e: Evidence) -> str:

@@ -10,7 +10,7 @@ import numpy.typing as npt
 
 from ..analytics.drawdowns import drawdown_path
 from ..engine.result import LegReplay, Replay
-from .style import CALL, DASHES, HOLD, MIX, OVERLAY, PUT, bare, legend_above, plain, time_axis
+from .style import CALL, DASHES, HOLD, MIX, OVERLAY, PUT, bare, legend_above, plain, plain_ink, time_axis
 
 if TYPE_CHECKING:
     from matplotlib.axes import Axes
@@ -182,9 +182,10 @@ def _strikes(axes: Axes, replay: Replay, leg: LegReplay, *, first: int, name: st
     rolled = leg.opened[shown] >= first
     axes.plot(start[rolled], strike[rolled], "|", color=colour, markersize=5.0, markeredgewidth=1.0)
     paid = (leg.close_value[shown] > 0) & ~leg.schedule.live[shown] & leg.schedule.settles[shown]
-    axes.plot(
-        end[paid], strike[paid], "o", color=colour, markersize=3.6, zorder=2.8, label=settled if paid.any() else None
-    )
+    if settled is not None and paid.any():
+        # one entry for all legs, in the colour of none
+        axes.plot([], [], "o", color=plain_ink(), markersize=3.6, label=settled)
+    axes.plot(end[paid], strike[paid], "o", color=colour, markersize=3.6, zorder=2.8)
     return bool(paid.any())
 
 

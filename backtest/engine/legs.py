@@ -261,7 +261,7 @@ def _trading_cost(costs: Costs, mid: Array, strike: Array, state: DayState, sign
     that much higher; bought and sold legs pay the same.
     """
     stdev = state.stdev(strike)
-    cost = np.full(mid.shape, costs.half_spread_min)
+    cost = np.full(mid.shape, costs.half_spread_min, dtype=np.float64)
     if costs.half_spread_percent > 0:
         np.maximum(cost, mid * (costs.half_spread_percent / 100.0), out=cost)
     if costs.half_spread_vol > 0:

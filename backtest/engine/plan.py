@@ -247,6 +247,8 @@ def _inception(
         if first >= last or market.dates[first] != inception:
             raise PlanError(f"inception {inception} is not a trading day before {market.dates[last]}")
         return first
+    if start is not None and start > market.dates[last]:
+        raise PlanError(f"the window begins on {start}, after it ends on {market.dates[last]}")
     earliest = 0 if start is None else int(np.searchsorted(market.dates, start))
     if earliest >= last:
         raise PlanError(
@@ -258,8 +260,9 @@ def _inception(
     usable = max(earliest, volatility.first_day, first_rate)
     if usable >= last:
         raise PlanError(
-            f"no day before {market.dates[last]} has price, vol and rate together: the vol begins on "
-            f"{_day_name(market, volatility.first_day)}, the rate on {_day_name(market, first_rate)}"
+            f"no day before {market.dates[last]} has price, vol and rate together: "
+            f"{_begins(market, 'vol', volatility.first_day)}, {_begins(market, 'rate', first_rate)} (realised vol "
+            "needs the prices of its whole window first)"
         )
     return inception_position(market.dates, cycle=overlay.anchor.cycle, earliest=usable, latest=last)
 
@@ -276,8 +279,8 @@ def _check_data(plan: Plan, volatility: BoundVolatility) -> None:
             )
 
 
-def _day_name(market: Market, position: int) -> str:
-    return str(market.dates[position]) if position < len(market) else "no day"
+def _begins(market: Market, what: str, position: int) -> str:
+    return f"the {what} begins on {market.dates[position]}" if position < len(market) else f"no day has a {what}"
 
 
 def as_day(value: object, name: str) -> np.datetime64 | None:

@@ -109,8 +109,9 @@ def _is_module(path: str) -> bool:
 
 
 def test_what_is_imported_from_elsewhere_is_declared() -> None:
-    """Each outside package is a run-time dependency of pyproject.toml, or comes with one; and each is used."""
-    declared = tomllib.loads(source_of("pyproject.toml"))["project"]["dependencies"]
+    """Each outside package is declared (the extra `cluster` too), or comes with one that is; and each is used."""
+    project = tomllib.loads(source_of("pyproject.toml"))["project"]
+    declared = [*project["dependencies"], *project["optional-dependencies"]["cluster"]]
     names = {re.split(r"[<>=!~ \[]", line)[0] for line in declared}
     seen = {found.package for module in ALL for found in imports(source_of(module), module)}
     seen -= set(sys.stdlib_module_names) | {*PACKAGES, "__future__"}

@@ -101,3 +101,12 @@ def test_a_leg_without_a_price_spoils_only_those_who_hold_it(market: Market) -> 
     alone = replay(market, Overlay(legs=(call(105),))).wealth
     np.testing.assert_array_equal(by_number[1], alone)
     np.testing.assert_array_equal(by_number[2], alone)
+
+
+def test_a_whole_number_is_as_good_a_cost_as_any(market: Market) -> None:
+    for costs, same in (
+        (Costs(half_spread_min=1), Costs(half_spread_min=1.0)),
+        (Costs(commission=2), Costs(commission=2.0)),
+    ):
+        whole, real = (replay(market, Overlay(legs=(put(95),), costs=c)).wealth for c in (costs, same))
+        np.testing.assert_array_equal(whole, real)

@@ -39,6 +39,7 @@ BASE = Evidence(
     probability_shallower=0.99,
     return_difference=difference(-0.0123, -0.0204, -0.0041),
     sharpe_difference=difference(0.114, 0.021, 0.207),
+    same_delta_difference=difference(NAN, NAN, NAN),
     smile_differences={"flat": 0.21, "mild": 0.17, "index-like": 0.114, "steep": 0.05},
     used_smile="index-like",
     break_even=turns_at(1.74),
@@ -69,13 +70,13 @@ UNSETTLED = ": the history does not settle it."
 ALONE = "a year with the roll day alone."
 
 
-def on_roll_days(percent: int, of: int, span: str) -> str:
-    same = f"On {percent}% of the {of} possible roll days the Sharpe difference has the same sign"
+def on_roll_days(side: str, percent: int, of: int, span: str) -> str:
+    same = f"On your roll day the overlay is {side} that mix, and so on {percent}% of the {of} possible ones"
     return f"{same}; the return ran from {span} {ALONE}"
 
 
-def left_out(verb: str, which: str, span: str, own: str) -> str:
-    return f"The Sharpe difference {verb} its sign when {which} left out: {span}, {own} with all of them."
+def left_out(said: str, span: str, own: str) -> str:
+    return f"It {said}: {span} in Sharpe ratio, {own} with all of them."
 
 
 SENTENCES: dict[tuple[int, str, str], tuple[dict[str, Any], str]] = {
@@ -99,24 +100,33 @@ SENTENCES: dict[tuple[int, str, str], tuple[dict[str, Any], str]] = {
         f"Its Sharpe ratio was 0.23 below {SHARPE} -0.31 to -0.04)."),
     (BEATS, "open", ""): ({"sharpe_difference": difference(-0.03, -0.11, 0.09)},
         f"Its Sharpe ratio was 0.03 below {SHARPE} -0.11 to +0.09): the two cannot be told apart."),
-    (SMILES, "yes", "turned by dearer options"): ({}, "That difference in Sharpe ratio keeps its sign, from +0.05 "
-        "(steep) to +0.21 (flat). It turns where all option vols are 1.7 points higher."),
+    (SMILES, "yes", "turned by dearer options"): ({}, "The overlay is ahead under every smile: that difference in "
+        "Sharpe ratio runs from +0.05 (steep) to +0.21 (flat). It turns where all option vols are 1.7 points higher."),
     (SMILES, "yes", "turned by nothing"): (
         {"break_even": turns_at(None, -11.4, 20.0), "smile_differences": {"flat": -0.3, "steep": -0.01}},
-        "That difference in Sharpe ratio keeps its sign, from -0.30 (flat) to -0.01 (steep). No error of all option "
-        "vols from -11 to +20 points turns it."),
+        "The overlay is behind under every smile: that difference in Sharpe ratio runs from -0.30 (flat) to -0.01 "
+        "(steep). No error of all option vols from -11 to +20 points turns it."),
     (SMILES, "no", "turned by cheaper options"): (
         {"break_even": turns_at(-0.52), "smile_differences": {"flat": 0.3, "mild": 0.1, "steep": -0.02}},
         "The prices decide it: that difference in Sharpe ratio runs from -0.02 (steep) to +0.30 (flat); used: "
         "index-like. It turns where all option vols are 0.5 points lower."),
-    (ROLL_DAYS, "yes", ""): ({}, on_roll_days(100, 4, "4.5% to 7.0%")),
-    (ROLL_DAYS, "open", ""): (roll_days(3, 4), on_roll_days(75, 4, "2.0% to 2.0%")),
-    (ROLL_DAYS, "no", ""): (roll_days(1, 4, own=-0.1), on_roll_days(25, 4, "2.0% to 2.0%")),
-    (CRISES, "yes", ""): ({}, left_out("keeps", "each of the 3 worst falls is", "+0.02 to +0.13", "+0.11")),
+    (ROLL_DAYS, "yes", ""): ({}, on_roll_days("ahead of", 100, 4, "4.5% to 7.0%")),
+    (ROLL_DAYS, "open", ""): (roll_days(3, 4), on_roll_days("ahead of", 75, 4, "2.0% to 2.0%")),
+    (ROLL_DAYS, "no", ""): (roll_days(1, 4, own=-0.1), on_roll_days("behind", 25, 4, "2.0% to 2.0%")),
+    (CRISES, "yes", ""): ({}, left_out("stays ahead of that mix without each of the 3 worst falls in turn",
+        "+0.02 to +0.13", "+0.11")),
     (CRISES, "no", ""): ({"without_worst": [0.09, -0.02]},
-        left_out("changes", "each of the 2 worst falls is", "-0.02 to +0.09", "+0.11")),
+        left_out("is behind that mix without 1 of the 2 worst falls, taken one by one",
+        "-0.02 to +0.09", "+0.11")),
     (CRISES, "yes", "one fall"): ({"without_worst": [-0.2], "sharpe_difference": difference(-0.1, -0.3, 0.1)},
-        left_out("keeps", "the worst fall is", "-0.20", "-0.10")),
+        left_out("stays behind that mix without the worst fall", "-0.20", "-0.10")),
+    (CRISES, "no", "one fall"): ({"without_worst": [0.2], "sharpe_difference": difference(-0.1, -0.3, 0.1)},
+        left_out("is ahead of that mix without the worst fall", "+0.20", "-0.10")),
+    (BEATS, "yes", "no hindsight"): ({"same_delta_difference": difference(-0.098, -0.15, -0.05)},
+        f"Its Sharpe ratio was 0.11 above {SHARPE} +0.02 to +0.21). Against holding each day as much stock as its own "
+        "delta of the evening before, which takes no hindsight: -0.10 (-0.15 to -0.05)."),
+    (BEATS, "open", "level"): ({"sharpe_difference": difference(0.004, 0.001, 0.009)},
+        f"Its Sharpe ratio was {SHARPE} 0.00 to +0.01): the two cannot be told apart."),
     (CRISES, "open", ""): ({"without_worst": []}, "The hold had no fall over 10% to leave out."),
 }  # fmt: skip
 
@@ -151,8 +161,14 @@ EDGES: dict[str, tuple[int, dict[str, Any], str]] = {
     "interval up to under zero": (BEATS, {"sharpe_difference": difference(-0.1, -0.2, -TINY)}, "no"),
     "a smile at zero, another above": (SMILES, {"smile_differences": {"a": 0.0, "b": 0.1}}, "yes"),
     "a smile at zero, another below": (SMILES, {"smile_differences": {"a": -0.1, "b": 0.0}}, "yes"),
-    "smiles either side": (SMILES, {"smile_differences": {"a": -1e-6, "b": 1e-6}}, "no"),
-    "rounding on either side": (SMILES, {"smile_differences": {"a": -TINY, "b": TINY}}, "open"),
+    "smiles either side": (SMILES, {"smile_differences": {"a": -0.0051, "b": 0.0051}}, "no"),
+    "nothing that shows on either side": (SMILES, {"smile_differences": {"a": -0.005, "b": 0.005}}, "open"),
+    "nothing that shows on one side": (SMILES, {"smile_differences": {"a": -0.005, "b": 0.0051}}, "yes"),
+    "no interval, so no smiles": (SMILES, {"sharpe_difference": difference(0.1, NAN, NAN)}, "open"),
+    "no interval, so no roll days": (ROLL_DAYS, {"sharpe_difference": difference(0.1, NAN, NAN)}, "open"),
+    "no interval, so no crises": (CRISES, {"sharpe_difference": difference(0.1, NAN, NAN)}, "open"),
+    "own roll day level": (ROLL_DAYS, roll_days(9, 10, own=0.005), "open"),
+    "below, interval above": (BEATS, {"sharpe_difference": difference(-0.1, 0.01, 0.2)}, "open"),
     "90% of the roll days": (ROLL_DAYS, roll_days(18, 20), "yes"),
     "85% of the roll days": (ROLL_DAYS, roll_days(17, 20), "open"),
     "89.99% of the roll days": (ROLL_DAYS, roll_days(8999, 10000), "open"),
@@ -213,7 +229,7 @@ def test_falls_whose_figures_cannot_be_had_are_not_denied(changes: dict[str, Any
 
 def test_some_roll_days_unknown() -> None:
     found = clause(ROLL_DAYS, roll_day_differences=[0.1, NAN, 0.2, -0.1], roll_day_returns=[0.01, NAN, 0.03, 0.02])
-    assert found.sentence.startswith("On 67% of the 3 possible roll days")
+    assert "and so on 67% of the 3 possible ones" in found.sentence
     assert found.sentence.endswith("from 1.0% to 3.0% a year with the roll day alone.")
 
 
@@ -230,7 +246,11 @@ def blanked(name: str) -> Evidence:
     return replace(BASE, **{name: nothing})
 
 
-NUMBERS = [f.name for f in fields(Evidence) if f.name not in ("put_payoffs", "used_smile", "break_even")]
+NUMBERS = [
+    f.name
+    for f in fields(Evidence)
+    if f.name not in ("put_payoffs", "used_smile", "break_even", "same_delta_difference")
+]
 NEVER = r"\b(nan|inf|none|should|ought|must|recommend\w*|advi[cs]\w*|suggest\w*|buy\w*|sell\w*|worthwhile)\b"
 
 

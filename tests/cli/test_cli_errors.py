@@ -179,8 +179,11 @@ def test_options_that_would_do_nothing_are_refused(
     ("options", "says"),
     [
         (["--from", "2010-01-04", "--to", "2010-02-26"], "no roll date of the longest leg"),
-        (["--from", "2012-01-01", "--to", "2010-01-01"], "holds no two trading days"),
-        (["--from", "2030-01-01"], "holds no two trading days"),
+        (
+            ["--from", "2012-01-01", "--to", "2010-01-01"],
+            "the window begins on 2012-01-01, after it ends on 2009-12-31",
+        ),
+        (["--from", "2030-01-01"], "the window begins on 2030-01-01, after it ends on 2023-12-29"),
         (["--to", "1990-01-01"], "the window ends on 1990-01-01, before the first price on 1999-01-04"),
     ],
 )
@@ -192,7 +195,9 @@ def test_a_foreign_folder_is_not_touched(stored: Run, refused: Refused, home: Pa
     (home / "thesis").mkdir()
     (home / "thesis" / "thesis.docx").write_text("mine")
     said = refused(5, "replay", "mine", "--put", 95, "--out", "thesis")
-    assert said == ("rollband: thesis holds other files and no manifest.json: give an empty or a new folder as --out\n")
+    assert said == (
+        "rollband: thesis holds other files and no manifest.json of ours: give an empty or a new folder as --out\n"
+    )
     assert "is not a folder: give another --out" in refused(
         5, "replay", "mine", "--put", 95, "--out", "thesis/thesis.docx"
     )

@@ -206,8 +206,12 @@ def test_axes_that_only_one_varies(tmp_path: Path) -> None:
     table = overlays(
         {"strike": [80, 80, 85, 85], "roll": ["month", "quarter"] * 2}, information_ratio=[0.1, 0.2, 0.4, 0.3]
     )
-    there = write(tmp_path / "two", study(strikes(80, 85), ROLLS), table)
+    other = study(strikes(80, 85), ROLLS, leg=[PUT | {"strike": {"percent_of_spot": 90}, "roll": "month"}])
+    there = write(tmp_path / "two", other, table)
     made = compare(answer(HERE, TABLE), read_other(there))
+    # the strike both vary, so where they start from does not matter; the roll is varied there alone
+    assert [entry["key"] for entry in made["settings"]] == ["leg.1.roll", "costs.half_spread_vol"]
+    assert made["settings"][0] == {"key": "leg.1.roll", "here": "quarter", "there": "month"}
     reason = "rows cannot be matched one to one: 2 overlays there are demo, strike 80 and are told apart by what only they vary (roll)"  # noqa: E501
     assert made["rows"] == {"both": None, "only_here": None, "only_there": None, "not_matched": reason}
     assert {figure["changed"] for figure in made["figures"].values()} == {0}
@@ -215,12 +219,16 @@ def test_axes_that_only_one_varies(tmp_path: Path) -> None:
     # the best can still be set side by side
     assert made["best"][0]["there"]["settings"] == "strike 85, roll month"
     assert made["best"][0]["same"] is False
-    assert said(made)[3:] == [
+    assert said(made)[4:] == [
         "Varied only there: roll",
         f"R{reason[1:]}.",
         "The best on demo is another: strike 90 (information ratio 0.400) here; strike 85, roll month (information "
         "ratio 0.400) there",
     ]
+    # and the other way round
+    made = compare(answer(other, table), read_other(write(tmp_path / "three", HERE, TABLE)))
+    assert made["rows"]["not_matched"] == reason.replace("there", "here")
+    assert made["axes"]["only_here"] == ["roll"]
 
 
 def test_labels_meet_numbers(tmp_path: Path) -> None:

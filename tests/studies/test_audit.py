@@ -90,6 +90,7 @@ def test_the_largest_of_many(home: Path) -> None:
     rolls.loc[3, "strike"] += 0.25
     rolls.loc[1, "premium"] -= 7.0  # further right, and larger
     rolls.loc[2, "premium"] = np.nan  # no number: counted, not measured
+    rolls.loc[1, "delta"] += 0.5
     rolls.loc[0, "flag"] = "odd"
     write_parquet(home / "results" / "rolls.parquet", rolls)
     found = audit_folder(Path("results"))
@@ -97,7 +98,7 @@ def test_the_largest_of_many(home: Path) -> None:
     leg = {row: was.loc[row, "leg"] for row in (1, 3)}
     assert sentences(found) == [
         f"rolls.parquet: 'strike' of row 4 ({leg[3]}, opened {opened[3]}) is {float(rolls.loc[3, 'strike'])!r} in the "
-        f"folder, {float(was.loc[3, 'strike'])!r} made again; 4 values differ, the largest difference is 7 "
+        f"folder, {float(was.loc[3, 'strike'])!r} made again; 5 values differ, the largest difference is 7 "
         f"('premium' of row 2 ({leg[1]}, opened {opened[1]}))"
     ]
 
@@ -199,6 +200,7 @@ def test_a_changed_summary(home: Path) -> None:
     del told["hold"]["ulcer"]
     told["overlay"]["beta"] = {"a": 1}
     told["odd"] = True
+    told["smile_ladder"]["flat"]["used"] = 0  # was false
     file.write_text(json.dumps(told))
     found = audit_folder(Path("results"))
     assert found.verdict == DIFFERS
@@ -208,7 +210,8 @@ def test_a_changed_summary(home: Path) -> None:
         f"summary.json: overlay.sharpe is {told['overlay']['sharpe']!r} in the folder, {sharpe!r} made again",
         f"summary.json: overlay.beta is a table in the folder, {beta!r} made again",
         "summary.json: hold.ulcer is not in the folder",
-        "summary.json: odd is not there when made again",
+        "summary.json: smile_ladder.flat.used is 0 in the folder, false made again",
+        "summary.json: 1 more value differs",
     ]
 
 

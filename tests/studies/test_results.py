@@ -29,6 +29,7 @@ from studies.results import (
     sha256_of,
     write_folder,
     write_json,
+    write_manifest,
     write_parquet,
 )
 
@@ -48,7 +49,7 @@ def fill_with(text: str) -> Any:
 
     def fill(folder: Path) -> None:
         (folder / "summary.json").write_text(text)
-        write_json(folder / MANIFEST, manifest())
+        write_manifest(folder, manifest())
 
     return fill
 
@@ -82,7 +83,6 @@ def test_an_empty_folder_is_filled(tmp_path: Path) -> None:
 def test_a_results_folder_is_replaced_whole(tmp_path: Path) -> None:
     out = tmp_path / "out"
     write_folder(out, fill_with("one"))
-    (out / "left over.png").write_bytes(b"old")
     write_folder(out, fill_with("two"))
     assert (out / "summary.json").read_text() == "two"
     assert sorted(tree(tmp_path)) == ["out", f"out/{MANIFEST}", "out/summary.json"]
@@ -168,7 +168,7 @@ def test_what_may_be_replaced(tmp_path: Path) -> None:
 @pytest.mark.parametrize(
     ("name", "says"),
     [
-        ("foreign", r"foreign holds other files and no manifest\.json: give an empty or a new folder as --out"),
+        ("foreign", r"foreign holds other files and no manifest\.json of ours: give an empty or a new folder as --out"),
         ("hidden", r"hidden holds other files and no manifest\.json"),
         ("manifest folder", r"holds other files and no manifest\.json"),
         ("file", r"file is not a folder: give another --out"),
@@ -361,3 +361,39 @@ def test_folder_names_are_never_paths(parts: list[str]) -> None:
     assert not name.endswith("-")
     assert (Path("results") / name).parent == Path("results")
     assert (Path("/results") / name).resolve() == Path("/results") / name
+
+
+# ---------------------------------------------------------------- what of a folder may be replaced
+
+
+def filled(folder: Path, *names: str, made_by: str = "rollband 0.1.0") -> Path:
+    folder.mkdir()
+    for name in names:
+        (folder / name).write_text("old")
+    write_manifest(folder, {"schema": 1, "made_by": made_by})
+    return folder
+
+
+def test_a_manifest_names_the_files_of_its_folder(tmp_path: Path) -> None:
+    out = filled(tmp_path / "out", "summary.json", "daily.parquet")
+    assert read_manifest(out)["files"] == ["daily.parquet", "manifest.json", "summary.json"]
+    check_replaceable(out)
+
+
+def test_a_file_of_the_users_own_among_results_is_not_lost(tmp_path: Path) -> None:
+    out = filled(tmp_path / "out", "summary.json")
+    (out / "notes.txt").write_text("mine")
+    with pytest.raises(ResultsError, match=r"holds results, and also notes\.txt, which would be lost: move that away"):
+        write_folder(out, lambda fresh: None)
+    assert (out / "notes.txt").read_text() == "mine"
+
+
+@pytest.mark.parametrize("text", ['{"name": "my app"}', '{"made_by": 3}', "[]", "{", '{"made_by": "another program"}'])
+def test_a_folder_with_a_manifest_of_somebody_else_is_not_touched(tmp_path: Path, text: str) -> None:
+    out = tmp_path / "out"
+    out.mkdir()
+    (out / "manifest.json").write_text(text)
+    (out / "index.js").write_text("mine")
+    with pytest.raises(ResultsError, match=r"holds other files and no manifest\.json of ours"):
+        write_folder(out, lambda fresh: None)
+    assert (out / "index.js").read_text() == "mine"

@@ -11,66 +11,51 @@ import hashlib
 import json
 import math
 import re
-from collections import Counter
-from collections.abc import Callable, Iterator
 from pathlib import Path
 from typing import Any
 
 import numpy as np
 import pytest
+from markupsafe import Markup
 
 from data_loaders import History
-from data_loaders.store import write_history
 from studies.assumptions import CAUTION
-from studies.page.study import build_study_page, study_figures
+from studies.page.study import build_study_page
 from studies.page.study_data import EXPLORED, rounded
 from studies.page.study_view import mix_line, one_replay, views_of
-from studies.study import parse_study
 from studies.study_answer import StudyAnswer, overlay_names, sentence_of
-from studies.study_folder import run_study, write_study
+from studies.study_folder import write_study
 from tests.studies.page.conftest import Node, read_page, table_of
+from tests.studies.study_pages import (
+    CALLS,
+    COMMAND,
+    LEAKS,
+    OWN,
+    PUTS,
+    ROLLS,
+    minus,
+    same_ids,
+    scripts,
+    study_of,
+    words_of,
+)
 
-COMMAND = "rollband study study.toml --out results/study"
-#: What a value that cannot be had looks like where nobody looked.
-LEAKS = re.compile(r"(?<![A-Za-z])(nan|NaN|inf|Infinity|None|NaT|undefined)(?![A-Za-z])")
-ROLLS = '[[axis]]\nname = "put roll"\nfield = "leg.1.roll"\nvalues = ["quarter", "half"]\n'
-PUTS = '[[axis]]\nname = "put strike"\nfield = "leg.1.strike.percent_of_spot"\nvalues = [85, 90, 95]\n'
-CALLS = '[[axis]]\nname = "call strike"\nfield = "leg.2.strike.percent_of_spot"\nvalues = [105, 110]\n'
-OWN = '[own]\n"put roll" = "quarter"\n"put strike" = 95\n"call strike" = 110\n'
 SECTIONS = (
     "The answer", "What was tried", "The best and yours", "Over the axes", "What protection cost",
     "One axis at a time", "Does it last?", "How far the search alone explains it", "The overlays", "Cautions",
     "How to run it again",
 )  # fmt: skip
 
-Run = Callable[..., StudyAnswer]
+
+@pytest.fixture(scope="module")
+def store(tmp_path_factory: pytest.TempPathFactory) -> Path:
+    return tmp_path_factory.mktemp("store")
 
 
 @pytest.fixture(scope="module")
-def run(demo_history: History, tmp_path_factory: pytest.TempPathFactory) -> Run:
-    """Run a study of some axes on the demo market, or on copies of it."""
-    store = tmp_path_factory.mktemp("store")
-
-    def made(axes: str, *, histories: int = 1, question: str = "Which?", first: str = "resamples = 60") -> StudyAnswer:
-        names = [f"demo{number}" for number in range(histories)]
-        for name in names:
-            if not (store / f"{name}.parquet").exists():
-                write_history(demo_history, store, name)
-        legs = "".join(
-            f'[[overlay.leg]]\nposition = "{side}"\nright = "{right}"\nroll = "{roll}"\n'
-            f"strike = {{ percent_of_spot = {strike} }}\n"
-            for side, right, roll, strike in (("long", "put", "quarter", 95), ("short", "call", "month", 110))
-        )
-        head = f"question = {json.dumps(question)}\nhistories = {json.dumps(names)}\n{first}\n"
-        return run_study(parse_study(f"{head}[overlay]\n{legs}{axes}"), store=store)
-
-    return made
-
-
-@pytest.fixture(scope="module")
-def found(run: Run) -> StudyAnswer:
+def found(demo_history: History, store: Path) -> StudyAnswer:
     """Twelve overlays over three axes, with one's own."""
-    return run(ROLLS + PUTS + CALLS + OWN)
+    return study_of(demo_history, store, ROLLS + PUTS + CALLS + OWN)
 
 
 @pytest.fixture(scope="module")
@@ -83,33 +68,12 @@ def tree(page: str) -> Node:
     return read_page(page)
 
 
-def minus(text: str) -> str:
-    """With the minus sign of the page, and none on zero."""
-    return text.lstrip("+-") if set(text) <= set("+-0.,%") else text.replace("-", "−")
-
-
 def number(cell: str) -> float:
     return float(cell.replace("−", "-").rstrip("%").replace(",", ""))
 
 
 def data_of(root: Node) -> Any:
     return json.loads("".join(str(one) for one in root.having("id", "study-data").inside))
-
-
-def scripts(root: Node) -> list[str]:
-    return ["".join(str(one) for one in node.inside) for node in root.all("script")]
-
-
-def words_of(root: Node) -> str:
-    """What is read, scripts left out."""
-    said = {id(one) for node in root.all("script", "style", "title") for one in node.inside}
-    return " ".join(" ".join(str(text) for node in root.walk() for text in node.inside
-                             if isinstance(text, str) and id(text) not in said).split())  # fmt: skip
-
-
-def same_ids(root: Node) -> list[str]:
-    ids = Counter(node.attributes["id"] for node in root.walk() if "id" in node.attributes)
-    return [name for name, times in ids.items() if times > 1]
 
 
 def test_every_section_is_there_in_its_order_and_can_be_jumped_to(tree: Node) -> None:
@@ -124,7 +88,7 @@ def test_every_section_is_there_in_its_order_and_can_be_jumped_to(tree: Node) ->
 
 
 def test_the_page_is_one_file_whose_only_script_is_its_own(page: str, tree: Node) -> None:
-    data, script = scripts(tree)
+    _, script = scripts(tree)
     assert [node.attributes for node in tree.all("script")] == [{"type": "application/json", "id": "study-data"}, {}]
     policy = tree.having("http-equiv", "Content-Security-Policy").attributes["content"]
     hashed = base64.b64encode(hashlib.sha256(script.encode()).digest()).decode()
@@ -220,8 +184,12 @@ def test_the_data_are_the_figures_of_the_overlays(found: StudyAnswer, tree: Node
             assert abs(shown - value) <= 0.5001 * 10.0 ** (math.floor(math.log10(abs(value))) - 3)
 
 
-def test_left_out_overlays_have_their_place_and_missing_figures_none(run: Run) -> None:
-    found = run(PUTS + CALLS, first='resamples = 0\nleave_out = ["put strike == 90 and call strike == 105"]')
+def test_left_out_overlays_have_their_place_and_missing_figures_none(
+    demo_history: History, store: Path, monkeypatch: pytest.MonkeyPatch
+) -> None:
+    monkeypatch.setattr("studies.page.pictures.inline_svg", lambda figure, **named: "")
+    rule = 'resamples = 0\nleave_out = ["put strike == 90 and call strike == 105"]'
+    found = study_of(demo_history, store, PUTS + CALLS, first=rule)
     root = read_page(build_study_page(found, command=COMMAND))
     group = data_of(root)["groups"]["g1"]
     assert group["at"] == [0, 1, 3, 4, 5]  # by hand: 90 and 105 is the third of six
@@ -245,7 +213,7 @@ def test_maps_are_medians_over_the_other_axes(found: StudyAnswer) -> None:
 def test_mixes_are_grown_day_by_day_and_counted_against(found: StudyAnswer, tree: Node) -> None:
     (view,) = views_of(found, overlay_names(found))
     replay = one_replay(found, view)
-    assert str(replay.overlay.legs[0].strike.percent) == "95.0"  # type: ignore[attr-defined]  # one's own
+    assert replay.overlay.legs[0].strike.percent == 95  # type: ignore[attr-defined]  # one's own
     line = mix_line(replay, view.group.first)
     assert line is not None
     offset = int(np.searchsorted(replay.dates, view.group.first))
@@ -295,9 +263,13 @@ def test_the_search_is_told_with_its_numbers(found: StudyAnswer, tree: Node) -> 
     assert lasting[0] == ["first half to second half", minus(f"{group.halves.rank_correlation:+.2f}")]
 
 
-def test_roll_days_show_how_far_one_rule_spreads(run: Run) -> None:
+def test_roll_days_show_how_far_one_rule_spreads(
+    demo_history: History, store: Path, monkeypatch: pytest.MonkeyPatch
+) -> None:
     days = '[[axis]]\nname = "day"\nfields = ["leg.1.shift_days", "leg.2.shift_days"]\nvalues = [0, 7, 14, 21]\n'
-    found = run(days + CALLS + '[own]\nday = 0\n"call strike" = 110\n', first="resamples = 0")
+    monkeypatch.setattr("studies.page.pictures.inline_svg", lambda figure, **named: "")
+    own = '[own]\nday = 0\n"call strike" = 110\n'
+    found = study_of(demo_history, store, days + CALLS + own, first="resamples = 0")
     root = read_page(build_study_page(found, command=COMMAND))
     gains = found.overlays[found.overlays["call strike"] == 110]["sharpe_less_mix"].to_numpy()
     shown = (gains[0], gains.min(), np.median(gains), gains.max())
@@ -310,53 +282,11 @@ def test_roll_days_show_how_far_one_rule_spreads(run: Run) -> None:
     assert f"roll day lie {wide:.2f} of Sharpe ratio (median of 2 settings)" in root.having("id", "days").words
 
 
-@pytest.fixture
-def degenerate(run: Run) -> Iterator[Callable[[str, str], tuple[StudyAnswer, Node]]]:
-    """A study at an end of what can be asked, and its page."""
-
-    def made(axes: str, first: str) -> tuple[StudyAnswer, Node]:
-        found = run(axes, first=first)
-        root = read_page(build_study_page(found, command=COMMAND))
-        assert LEAKS.findall(words_of(root)) == []
-        assert same_ids(root) == []
-        for figure in study_figures(found).values():
-            figure.draw_without_rendering()
-        return found, root
-
-    yield made
-
-
-RUIN = '[[axis]]\nname = "ratio"\nfield = "leg.2.ratio"\nvalues = [60, 100]\n'
-SHORT = '[[axis]]\nname = "w"\nfield = "window"\nvalues = [{ from = "2010-03-01", to = "2010-03-23" }]\n'
-
-
-@pytest.mark.parametrize(
-    ("axes", "first", "section", "said"),
-    [
-        (PUTS.replace("[85, 90, 95]", "[95]"), "resamples = 60", "map", "There is no map: no axis varies here."),
-        (PUTS.replace("[85, 90, 95]", "[95]"), "resamples = 60", "lasting", "there is one overlay, and no order"),
-        (PUTS, "resamples = 60", "map", "Above zero is better for the overlay."),
-        (RUIN + PUTS, "resamples = 60", "best", "There is no best: no overlay here can be compared."),
-        (RUIN + PUTS, "resamples = 60", "tried", "6; 6 lost everything and have no figures"),
-        (PUTS + CALLS, "resamples = 0", "search", "the study asks for no draws (resamples = 0)"),
-        (PUTS + CALLS + SHORT, "resamples = 60", "search", "cannot be had: 2 days of differences are too few"),
-        (PUTS + CALLS + SHORT, "resamples = 60", "lasting", "the days are too few"),
-        (PUTS + CALLS, 'comparison = "hold"\nresamples = 0', "best", "The information ratio is against the hold"),
-    ],
-    ids=["one overlay", "one, lasting", "one axis", "ruined", "ruined, tried", "no draws", "short", "short, lasting",
-         "hold"],
-)  # fmt: skip
-def test_what_cannot_be_had_is_said(
-    degenerate: Callable[[str, str], tuple[StudyAnswer, Node]], axes: str, first: str, section: str, said: str
-) -> None:
-    _, root = degenerate(axes, first)
-    assert said in root.having("id", section).words
-
-
 def test_beyond_its_limit_there_are_no_data(found: StudyAnswer, monkeypatch: pytest.MonkeyPatch) -> None:
     for limit, value in (("MOST_EXPLORED", 11), ("MOST_BYTES", 500)):
         with monkeypatch.context() as patch:
             patch.setattr(f"studies.page.study_data.{limit}", value)
+            patch.setattr("studies.page.pictures.inline_svg", lambda figure, **named: Markup("<svg></svg>"))
             root = read_page(build_study_page(found, command=COMMAND))
         assert len(scripts(root)) == 1
         assert "comes with studies of up to 12,000 overlays" in root.having("id", "map").words
