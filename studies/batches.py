@@ -173,12 +173,12 @@ def replay_batch(
     parts: list[Partial] = []
     for found in _families(market, points, priced=priced):
         numbers = np.array(found.numbers)
+        if found.dates[0] > span.first:
+            raise AssertionError(f"an overlay begins on {found.dates[0]}, after the common days do, on {span.first}")
         sums = empty_sums(len(numbers), span.edges)
         figures = _figures(found, comparison=comparison, blocks=sums)
         for name in (*SPAN, *FIGURES):
             columns[name][numbers] = figures[name]
-        if found.dates[0] > span.first:
-            raise AssertionError(f"an overlay begins on {found.dates[0]}, after the common days do, on {span.first}")
         offset = int(np.searchsorted(found.dates, span.first))
         wealth = found.wealth[:, offset:]
         for name in BLOCK_COLUMNS:

@@ -122,7 +122,7 @@ def test_the_best_and_the_reader_s_own(found: StudyAnswer) -> None:
     assert group.best == ratios.index(max(ratios))
     assert (group.tried, group.ruined, group.rows) == (24, 0, slice(0, 24))
     assert group.own is not None
-    assert found.overlays.loc[group.own, ["put", "call", "roll"]].to_list() == [97, 102, "half"]
+    assert [found.overlays[name].iloc[group.own] for name in ("put", "call", "roll")] == [97, 102, "half"]
     assert (group.history, group.last) == ("one", excess_of(found, 0)[2][-1])
     # the anchor, the leg that rolls least often, opens in March or in June
     assert str(group.first)[:7] == "2008-06"
@@ -226,7 +226,9 @@ def test_few_days(store: Path, end: str, days: int, resamples: int) -> None:
     assert group.distinguished is None
     said = sentence_of(group, ["a", "b"])
     # a line through two returns leaves nothing over
-    assert said.endswith("the days are too few." if days > 2 else "none has a return that varies against its comparison.")
+    assert said.endswith(
+        "the days are too few." if days > 2 else "none has a return that varies against its comparison."
+    )
 
 
 def test_no_day_at_all(store: Path) -> None:
@@ -272,6 +274,7 @@ def answer(
 
 
 CAN, CANNOT = "The best of 1,200 (b) can be told from luck:", "The best of 1,200 (b) cannot be told from luck:"
+FEW = "The best of 1,200 (b) cannot be tested: the days are too few."
 LUCK = "a search as wide as this finds one as good by luck with a chance of"
 SKILL = "after so many trials the probability that it has any advantage at all is"
 
@@ -296,9 +299,9 @@ SKILL = "after so many trials the probability that it has any advantage at all i
         (answer(spa=0.0), True, f"{CAN} {LUCK} under 0.5% and {SKILL} 99%."),
         (answer(check=False), True, f"{CAN} {SKILL} 99%."),
         # days too few to be resampled are too few for any claim
-        (answer(spa=math.nan, probability=0.99), None, "The best of 1,200 (b) cannot be tested: the days are too few."),
+        (answer(spa=math.nan, probability=0.99), None, FEW),
         (answer(probability=math.nan, spa=0.5), False, f"{CANNOT} {LUCK} 50%."),
-        (answer(check=False, probability=math.nan), None, "The best of 1,200 (b) cannot be tested: the days are too few."),
+        (answer(check=False, probability=math.nan), None, FEW),
         (answer(tried=1, best=0), True, f"The only overlay (a) can be told from luck: {LUCK} 1% and {SKILL} 99%."),
     ],
 )  # fmt: skip
