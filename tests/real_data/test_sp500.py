@@ -27,6 +27,7 @@ from backtest.analytics import deepest_drawdown
 from backtest.analytics.performance import annual_return
 from data_loaders import load_history
 from studies.cli import main
+from tests.studies.conftest import without_pictures
 
 RATE = 2.0
 
@@ -67,8 +68,8 @@ def replayed(folder: Path) -> Replayed:
             out = f"out{len(kept)}"
             with pytest.MonkeyPatch.context() as patch:
                 patch.chdir(folder)
-                # the pictures are looked at elsewhere; they take longer than the rest
-                patch.setattr("studies.answer_folder._write_pictures", lambda found, folder: None)
+                # pictures and page are looked at elsewhere; they take longer than the rest
+                without_pictures(patch)
                 patch.setattr(sys, "argv", ["rollband", "replay", "--prices", prices, *options, "--out", out])
                 with pytest.raises(SystemExit) as exited:
                     main()
