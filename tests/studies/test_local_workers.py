@@ -89,6 +89,8 @@ def test_a_worker_that_is_lost_takes_the_calls_with_it() -> None:
     with LocalWorkers(2) as workers:
         wait([workers.submit(time.sleep, 0.1) for _ in range(2)])
         running = [workers.submit(time.sleep, 60) for _ in range(2)]
+        while not all(call.running() for call in running):  # each of them taken by a worker
+            time.sleep(0.01)
         waiting = [workers.submit(abs, -1) for _ in range(5)]
         os.kill(workers.process_ids[0], signal.SIGKILL)
         for call in waiting:
