@@ -22,7 +22,8 @@ ROOT = Path(__file__).parents[2]
 STUDY = grid_text(30, 30, head="resamples = 60")
 #: The command in a process of its own, with small batches and a page left out; more can be done to it first.
 COMMAND = """
-import sys
+import signal, sys
+signal.signal(signal.SIGINT, signal.default_int_handler)  # a job in the background is started without it
 from studies import runner, study_folder
 from studies.local_workers import LocalWorkers
 from tests.studies.small_studies import write_tables
