@@ -14,7 +14,7 @@ import numpy.typing as npt
 
 from backtest import Market
 from backtest.analytics.block_length import optimal_block_length
-from backtest.analytics.headline import HEADLINE, headline_figures, same_beta_mixes
+from backtest.analytics.headline import HEADLINE, Headline, SameBetaMixes, headline_figures
 from backtest.analytics.performance import TRADING_DAYS, daily_excess, years_between
 from backtest.analytics.reality_check import OVERLAYS_AT_ONCE, Draws, Partial, check_batch, combine
 from backtest.analytics.subperiods import BlockSums, block_edges, empty_sums
@@ -51,6 +51,8 @@ SAME_BETA = "same-beta mix"
 BLOCK_COLUMNS = ("growth", "total", "square")
 #: Overlays whose differences are asked for a block length.
 ASKED = 12
+#: Overlays whose paths are at work together: of twenty years they are 5 MB.
+AT_ONCE = 256
 #: Overlays replayed together for the common span.
 ASKED_AT_ONCE = 500
 
@@ -171,12 +173,16 @@ def replay_batch(
     columns: dict[str, npt.NDArray[np.generic]] = {name: np.full(count, np.nan) for name in columns_of(span)}
     columns |= {name: np.empty(count, dtype="datetime64[D]") for name in SPAN}
     parts: list[Partial] = []
+    against: _Hold | None = None
     for found in _families(market, points, priced=priced):
         numbers = np.array(found.numbers)
         if found.dates[0] > span.first:
             raise AssertionError(f"an overlay begins on {found.dates[0]}, after the common days do, on {span.first}")
+        # the parts of a family follow each other
+        if against is None or found.hold is not against.days["hold"]:
+            against = _Hold(found)
         sums = empty_sums(len(numbers), span.edges)
-        figures = _figures(found, comparison=comparison, blocks=sums)
+        figures = _figures(found, against, comparison=comparison, blocks=sums)
         for name in (*SPAN, *FIGURES):
             columns[name][numbers] = figures[name]
         offset = int(np.searchsorted(found.dates, span.first))
@@ -201,15 +207,29 @@ def _families(market: Market, points: Sequence[Point], *, priced: PricedLegs | N
         start=points[0].start,
         end=points[0].end,
         priced=priced,
+        at_once=AT_ONCE,
     )
 
 
-def _figures(found: FamilyReplay, *, comparison: str, blocks: BlockSums) -> dict[str, npt.NDArray[np.generic]]:
-    shared: dict[str, Any] = {"hold": found.hold, "rate_return": found.rate_return, "dates": found.dates}
+class _Hold:
+    """The hold that overlays of a family are compared with, and its mixes with cash; the same for all its parts."""
+
+    def __init__(self, found: FamilyReplay) -> None:
+        self.days: dict[str, Any] = {"hold": found.hold, "rate_return": found.rate_return, "dates": found.dates}
+        self.headline = Headline(**self.days)
+        own = self.headline.figures(found.hold[np.newaxis])
+        self.figures = {name: float(values[0]) for name, values in own.items()}
+        self.mixes = SameBetaMixes(**self.days)
+        market = daily_excess(found.hold, found.rate_return)
+        self.excess_mean, self.excess_variance = float(np.mean(market)), float(np.var(market, ddof=1))
+
+
+def _figures(
+    found: FamilyReplay, against: _Hold, *, comparison: str, blocks: BlockSums
+) -> dict[str, npt.NDArray[np.generic]]:
     made: dict[str, npt.NDArray[np.generic]] = {}
-    own = headline_figures(found.wealth, blocks=blocks, **shared)
-    hold = {name: float(values[0]) for name, values in headline_figures(found.hold[np.newaxis], **shared).items()}
-    mix = same_beta_mixes(own["beta"], **shared)
+    own = against.headline.figures(found.wealth, blocks=blocks)
+    hold, mix = against.figures, against.mixes.figures(own["beta"])
     made |= own
     made["options_net_a_year"] = found.options_net() / years_between(found.dates)
     for name in ("annual_return", "volatility", "sharpe", "max_drawdown"):
@@ -220,19 +240,18 @@ def _figures(found: FamilyReplay, *, comparison: str, blocks: BlockSums) -> dict
     made["drawdown_removed"] = own["max_drawdown"] - hold["max_drawdown"]
     made["return_less_mix"] = own["annual_return"] - mix["annual_return"]
     made["sharpe_less_mix"] = own["sharpe"] - mix["sharpe"]
-    made["information_ratio"] = _information_ratio(found, own, comparison)
+    made["information_ratio"] = _information_ratio(against, own, comparison)
     made["inception"] = np.full(len(found.wealth), found.dates[0])
     made["end"] = np.full(len(found.wealth), found.dates[-1])
     return made
 
 
-def _information_ratio(found: FamilyReplay, own: dict[str, Array], comparison: str) -> Array:
+def _information_ratio(against: _Hold, own: dict[str, Array], comparison: str) -> Array:
     """Mean of ``X - w e`` over its deviation, annual, from the moments at hand; ``w`` is beta, or 1 for the hold."""
-    market = daily_excess(found.hold, found.rate_return)
-    share = own["beta"] if comparison == SAME_BETA else np.ones(len(found.wealth))
-    mean = own["excess_mean"] - share * np.mean(market)
+    share = own["beta"] if comparison == SAME_BETA else np.ones(len(own["beta"]))
+    mean = own["excess_mean"] - share * against.excess_mean
     variation = own["excess_deviation"] ** 2
-    variance = variation + share * (share - 2.0 * own["beta"]) * np.var(market, ddof=1)
+    variance = variation + share * (share - 2.0 * own["beta"]) * against.excess_variance
     # what rounding leaves of an overlay that is its own comparison is no deviation
     varies = variance > 1e-12 * variation
     ratio = mean / np.sqrt(np.where(varies, variance, 1.0)) * np.sqrt(TRADING_DAYS)

@@ -16,9 +16,10 @@ import subprocess
 import sys
 import threading
 import traceback
-from collections.abc import Callable, Sequence
+from collections.abc import Callable, Iterator, Sequence
 from concurrent.futures import BrokenExecutor, Executor, Future
-from contextlib import suppress
+from contextlib import contextmanager, suppress
+from types import FrameType
 from typing import Any, ParamSpec, TypeVar
 
 from .errors import StudyError
@@ -68,21 +69,23 @@ class LocalWorkers(Executor):
         self._processes: list[subprocess.Popen[bytes]] = []
         self._threads: list[threading.Thread] = []
         try:
-            for _ in range(count):
-                self._processes.append(_start(modules))
+            with _interrupts_held():
+                for _ in range(count):
+                    self._processes.append(_start(modules))
+                for process in self._processes:
+                    thread = threading.Thread(target=self._attend, args=(process,), daemon=True)
+                    self._threads.append(thread)
+                    thread.start()
         except OSError as error:
+            started = len(self._processes)
             self.shutdown()
             raise StudyError(
-                f"worker process {len(self._processes) + 1} of {count} cannot be started: {error.strerror or error}; "
+                f"worker process {started + 1} of {count} cannot be started: {error.strerror or error}; "
                 "give fewer --workers"
             ) from error
         except BaseException:
             self.shutdown()
             raise
-        for process in self._processes:
-            thread = threading.Thread(target=self._attend, args=(process,), daemon=True)
-            self._threads.append(thread)
-            thread.start()
 
     @property
     def up(self) -> bool:
@@ -105,18 +108,19 @@ class LocalWorkers(Executor):
 
     def shutdown(self, wait: bool = True, *, cancel_futures: bool = False) -> None:
         """End all workers at once."""
-        self._lose(WorkerLost("the workers were ended"))
-        for process in self._processes:
-            process.kill()
-        for _ in self._threads:
-            self._calls.put(None)
-        for thread in self._threads:
-            thread.join()
-        for process in self._processes:
-            process.wait()
-            for pipe in (process.stdin, process.stdout):
-                with suppress(OSError):  # what it was still to be told
-                    pipe.close()  # type: ignore[union-attr]
+        with _interrupts_held():
+            self._lose(WorkerLost("the workers were ended"))
+            for process in self._processes:
+                process.kill()
+            for _ in self._threads:
+                self._calls.put(None)
+            for thread in self._threads:
+                thread.join()
+            for process in self._processes:
+                process.wait()
+                for pipe in (process.stdin, process.stdout):
+                    with suppress(OSError):  # what it was still to be told
+                        pipe.close()  # type: ignore[union-attr]
 
     def _attend(self, process: subprocess.Popen[bytes]) -> None:
         """Hand calls to one worker, one after the other (a thread for each)."""
@@ -171,6 +175,23 @@ def _start(modules: Sequence[str]) -> subprocess.Popen[bytes]:
         # Ctrl-C reaches every process of a terminal's group; only the parent may act on it
         start_new_session=os.name == "posix",
     )
+
+
+@contextmanager
+def _interrupts_held() -> Iterator[None]:
+    """Ctrl-C acts after the block, not in it: a process that is half started would be left to nobody."""
+    usual = signal.getsignal(signal.SIGINT)
+    if threading.current_thread() is not threading.main_thread() or not callable(usual):
+        yield
+        return
+    held: list[tuple[int, FrameType | None]] = []
+    signal.signal(signal.SIGINT, lambda number, frame: held.append((number, frame)))
+    try:
+        yield
+    finally:
+        signal.signal(signal.SIGINT, usual)
+    if held:
+        usual(*held[0])
 
 
 def _receive(process: subprocess.Popen[bytes]) -> Any:

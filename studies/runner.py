@@ -41,7 +41,7 @@ Progress = Callable[[int, int], None]
 Batch = tuple[Columns, Partial | None]
 
 #: Overlays of one batch. Part of the plan: a run that is resumed has the same batches.
-BATCH = 1_000
+BATCH = 2_500
 #: Batches handed out for each worker: one at work and one to go on with.
 IN_HAND = 2
 #: Batches handed out to an executor of which we do not know how many workers it has.

@@ -49,63 +49,67 @@ NODES = 48
 LEAST_ELLIPSE = 2.3
 
 
-def headline_figures(
-    wealth: Array, *, hold: Array, rate_return: Array, dates: Dates, blocks: BlockSums | None = None
-) -> dict[str, Array]:
-    """Figures of many paths over the same days.
+def headline_figures(wealth: Array, *, hold: Array, rate_return: Array, dates: Dates) -> dict[str, Array]:
+    """Figures of many paths over the same days; see :class:`Headline`, which can be used again."""
+    return Headline(hold=hold, rate_return=rate_return, dates=dates).figures(wealth)
+
+
+class Headline:
+    """Figures of many paths over the days of one hold.
 
     Parameters
     ----------
-    wealth : ndarray, shape (overlay, day)
-        Growth of 1; a path may end in NaN, and then has no figures.
     hold, rate_return : ndarray, shape (day,)
         Growth of 1 of the hold, and the return on cash over each day (the first is not used).
     dates : ndarray of datetime64, shape (day,)
-    blocks : BlockSums, optional
-        Made by :func:`~backtest.analytics.subperiods.empty_sums`: filled with the sums over its blocks of the last
-        days, as :func:`~backtest.analytics.subperiods.block_sums` has them, without a further pass.
-
-    Returns
-    -------
-    dict of str to ndarray, shape (overlay,)
-        The figures of ``HEADLINE``, then ``MOMENTS``; NaN where one cannot be had.
     """
-    overlays, days = wealth.shape
-    made = {name: np.full(overlays, np.nan) for name in HEADLINE + MOMENTS}
-    if days < 3:
-        return made
-    passes = _Passes(hold=hold, rate_return=rate_return, dates=dates)
-    step = max(1, BLOCK_VALUES // days)
-    for first in range(0, overlays, step):
-        block = slice(first, first + step)
-        for name, values in passes.figures(wealth[block], None if blocks is None else blocks.rows(block)).items():
-            made[name][block] = values
-    with np.errstate(invalid="ignore", divide="ignore"):
-        made["annual_return"] = _annual(wealth[:, -1] / wealth[:, 0], dates)
-        falls = made["max_drawdown"] < 0
-        np.divide(made["annual_return"], -made["max_drawdown"], out=made["calmar"], where=falls)
-    return made
-
-
-class _Passes:
-    """What all blocks share, and the working arrays they are done in."""
 
     def __init__(self, *, hold: Array, rate_return: Array, dates: Dates) -> None:
         days = len(hold)
+        self._dates, self._count = dates, days - 1
         self._growth_of_cash = 1.0 + rate_return[1:]
         cash, market = rate_return[1:], daily_excess(hold, rate_return)
-        self._count = days - 1
         self._market, self._cash = market - market.mean(), cash - cash.mean()
         self._market_variation = float(self._market @ self._market)
         self._market_varies = self._market_variation / self._count > SMALLEST_SPREAD**2
         self._market_mean = float(market.mean())
         self._cash_variation = float(self._cash @ self._cash)
         self._ends = month_ends(dates)
-        rows = max(1, BLOCK_VALUES // days)
-        self._excess, self._other = np.empty((rows, self._count)), np.empty((rows, days))
+        self._rows = max(1, BLOCK_VALUES // days)
+        self._excess, self._other = np.empty((self._rows, self._count)), np.empty((self._rows, days))
 
-    def figures(self, wealth: Array, blocks: BlockSums | None) -> dict[str, Array]:
-        """Figures of one block of paths, shape ``(row,)`` each; the sums of its blocks of days on the way."""
+    def figures(self, wealth: Array, *, blocks: BlockSums | None = None) -> dict[str, Array]:
+        """Figures of some paths.
+
+        Parameters
+        ----------
+        wealth : ndarray, shape (overlay, day)
+            Growth of 1; a path may end in NaN, and then has no figures.
+        blocks : BlockSums, optional
+            Made by :func:`~backtest.analytics.subperiods.empty_sums`: filled with the sums over its blocks of the last
+            days, as :func:`~backtest.analytics.subperiods.block_sums` has them, without a further pass.
+
+        Returns
+        -------
+        dict of str to ndarray, shape (overlay,)
+            The figures of ``HEADLINE``, then ``MOMENTS``; NaN where one cannot be had.
+        """
+        overlays, days = wealth.shape
+        made = {name: np.full(overlays, np.nan) for name in HEADLINE + MOMENTS}
+        if days < 3:
+            return made
+        for first in range(0, overlays, self._rows):
+            rows = slice(first, first + self._rows)
+            for name, values in self._of_rows(wealth[rows], None if blocks is None else blocks.rows(rows)).items():
+                made[name][rows] = values
+        with np.errstate(invalid="ignore", divide="ignore"):
+            made["annual_return"] = _annual(wealth[:, -1] / wealth[:, 0], self._dates)
+            falls = made["max_drawdown"] < 0
+            np.divide(made["annual_return"], -made["max_drawdown"], out=made["calmar"], where=falls)
+        return made
+
+    def _of_rows(self, wealth: Array, blocks: BlockSums | None) -> dict[str, Array]:
+        """Figures of a few paths that fit the cache, shape ``(row,)`` each; the sums of their blocks on the way."""
         rows, count = len(wealth), self._count
         excess, other = self._excess[:rows], self._other[:rows]
         np.divide(wealth[:, 1:], wealth[:, :-1], out=excess)
@@ -153,44 +157,46 @@ class _Passes:
         return np.where(np.isfinite(returns).all(axis=1), tail, np.nan)
 
 
-def same_beta_mixes(beta: Array, *, hold: Array, rate_return: Array, dates: Dates) -> dict[str, Array]:
-    """Annual return and Sharpe ratio of each overlay's same-beta mix (C10), shape ``(overlay,)`` each.
+class SameBetaMixes:
+    """Annual return and Sharpe ratio of the mix of each beta, on the days of one hold (C10).
 
     The Sharpe ratio of ``rf + w (hold - rf)`` is that of the hold, with the sign of ``w``. Its log growth is an
     analytic function of ``w``, interpolated at Chebyshev nodes where that is exact to rounding, else summed.
     """
-    cash, excess = rate_return[1:], daily_excess(hold, rate_return)
-    sharpe = float(sharpe_ratio(excess))
-    return {
-        "annual_return": _mix_returns(beta, cash=cash, excess=excess, dates=dates),
-        "sharpe": np.where(beta == 0.0, np.nan, np.sign(beta) * sharpe),
-    }
 
+    def __init__(self, *, hold: Array, rate_return: Array, dates: Dates) -> None:
+        self._cash, self._excess, self._dates = rate_return[1:], daily_excess(hold, rate_return), dates
+        self._sharpe = float(sharpe_ratio(self._excess))
+        self._curve: Chebyshev | None = None
+        if _ellipse(*SHARES, self._cash, self._excess) > LEAST_ELLIPSE:
+            self._curve = Chebyshev.interpolate(
+                lambda shares: np.array([self._log_growth(one) for one in shares]), NODES - 1, SHARES
+            )
 
-def _mix_returns(share: Array, *, cash: Array, excess: Array, dates: Dates) -> Array:
-    log_growth = np.full(share.shape, np.nan)
-    inside = (share >= SHARES[0]) & (share <= SHARES[1])
-    if inside.any() and _ellipse(*SHARES, cash, excess) > LEAST_ELLIPSE:
-        curve = Chebyshev.interpolate(
-            lambda shares: np.array([_log_growth(one, cash, excess) for one in shares]), NODES - 1, SHARES
-        )
-        log_growth[inside] = curve(share[inside])
-    else:
-        inside[:] = False
-    rest = np.isfinite(share) & ~inside
-    log_growth[rest] = [_log_growth(float(one), cash, excess) for one in share[rest]]
-    return _annual(np.exp(log_growth), dates)
+    def figures(self, beta: Array) -> dict[str, Array]:
+        """``annual_return`` and ``sharpe`` for each beta, shape ``(overlay,)``; NaN where a mix loses everything."""
+        log_growth = np.full(beta.shape, np.nan)
+        inside = (beta >= SHARES[0]) & (beta <= SHARES[1])
+        if self._curve is not None:
+            log_growth[inside] = self._curve(beta[inside])
+        else:
+            inside[:] = False
+        rest = np.isfinite(beta) & ~inside
+        log_growth[rest] = [self._log_growth(float(one)) for one in beta[rest]]
+        return {
+            "annual_return": _annual(np.exp(log_growth), self._dates),
+            "sharpe": np.where(beta == 0.0, np.nan, np.sign(beta) * self._sharpe),
+        }
+
+    def _log_growth(self, share: float) -> float:
+        daily = self._cash + share * self._excess
+        return float(np.sum(np.log1p(daily))) if daily.min() > -1.0 else float("nan")
 
 
 def _annual(total: Array, dates: Dates) -> Array:
     """Annual return of a growth over all days; under a year the total (C11)."""
     years = years_between(dates)
     return total ** (1.0 / years) - 1.0 if years >= 1.0 else total - 1.0
-
-
-def _log_growth(share: float, cash: Array, excess: Array) -> float:
-    daily = cash + share * excess
-    return float(np.sum(np.log1p(daily))) if daily.min() > -1.0 else float("nan")
 
 
 def _ellipse(low: float, high: float, cash: Array, excess: Array) -> float:

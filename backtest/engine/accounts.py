@@ -19,7 +19,7 @@ therefore show in the first day's return.
 
 from __future__ import annotations
 
-from dataclasses import dataclass
+from dataclasses import dataclass, replace
 
 import numpy as np
 import numpy.typing as npt
@@ -105,11 +105,12 @@ def family_state(plan: Plan, family: Family) -> FamilyState:
 
 @dataclass(frozen=True, slots=True, kw_only=True, eq=False)
 class BookRolls:
-    """What one book row has cost per option, shape ``(roll,)``, and its cash, shape ``(day,)``, as in its path."""
+    """What one book row has cost per option, shape ``(roll,)``, its cash, shape ``(day,)``, and what it brought."""
 
     open_cost: Array
     exit_cost: Array
     cash: Array
+    net: float = np.nan  # what all options of the row brought after costs, in spots at their opens; live ones at mark
 
 
 def keep_books(plan: Plan, family: Family, legs: list[LegPaths]) -> tuple[FamilyState, Books, list[BookRolls]]:
@@ -131,7 +132,9 @@ def keep_books(plan: Plan, family: Family, legs: list[LegPaths]) -> tuple[Family
             costs[cost_key] = (leg.open_cost(key.costs), leg.exit_cost(key.costs))
         open_cost, exit_cost = (c[key.row] for c in costs[cost_key])
         keep = _keep_resize if family.account == "resize" else _keep_cash
-        rolls.append(keep(plan, state, leg, key, open_cost, exit_cost, path[number], before[number], price[number]))
+        kept = keep(plan, state, leg, key, open_cost, exit_cost, path[number], before[number], price[number])
+        profit = key.direction * (leg.close_value[key.row] - leg.premium[key.row]) - open_cost - exit_cost
+        rolls.append(replace(kept, net=float(np.sum(profit / plan.market.spot[leg.group.schedule.opened]))))
     return state, Books(path=path, before=before, price=price), rolls
 
 

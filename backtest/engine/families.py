@@ -7,7 +7,7 @@ single replays of it.
 from __future__ import annotations
 
 from collections.abc import Iterator, Sequence
-from dataclasses import dataclass
+from dataclasses import dataclass, replace
 
 import numpy as np
 import numpy.typing as npt
@@ -66,12 +66,7 @@ class FamilyReplay:
 
         Summed over the whole replay as :func:`backtest.analytics.roll_costs` does: per share, live options at mark.
         """
-        by_book = np.empty(len(self.family.books))
-        for number, key in enumerate(self.family.books):
-            leg, rolls = self.legs[key.group], self.book_rolls[number]
-            spot = self.plan.market.spot[leg.group.schedule.opened]
-            profit = key.direction * (leg.close_value[key.row] - leg.premium[key.row])
-            by_book[number] = np.sum((profit - rolls.open_cost - rolls.exit_cost) / spot)
+        by_book = np.array([rolls.net for rolls in self.book_rolls])
         brought = np.zeros(self.ratio.shape)
         for member, rows in enumerate(self.family.holdings):
             brought[member, : len(rows)] = by_book[list(rows)]
@@ -87,6 +82,7 @@ def replay_families(
     end: object = None,
     inception: object = None,
     priced: PricedLegs | None = None,
+    at_once: int | None = None,
 ) -> Iterator[FamilyReplay]:
     """Replay many overlays, a family at a time; parameters and errors as :func:`backtest.replay_many`.
 
@@ -95,6 +91,9 @@ def replay_families(
     priced : PricedLegs, optional
         Legs priced by earlier calls on the same market, and the place to keep those of this one: a grid replayed in
         batches prices each of its legs once.
+    at_once : int, optional
+        Overlays that are given back together at most, a family in several parts then. Few of them stay in a core's
+        cache until their figures are taken.
     """
     overlays = list(overlays)
     if volatility is None or isinstance(volatility, Volatility):
@@ -117,17 +116,26 @@ def replay_families(
         legs = [price_group(plan, group, priced) for group in plan.groups]
         for family in plan.families:
             state, books, book_rolls = keep_books(plan, family, legs)
-            rows, ratio, stock_bps = _holdings(family, overlays)
-            yield FamilyReplay(
-                plan=plan,
-                family=family,
-                state=state,
-                accounts=settle_accounts(state, books, family.account, rows, ratio, stock_bps),
-                legs=legs,
-                book_rolls=book_rolls,
-                ratio=ratio,
-                volatilities=[volatilities[number] for number in family.members],
-            )
+            for part in _parts(family, at_once):
+                rows, ratio, stock_bps = _holdings(part, overlays)
+                yield FamilyReplay(
+                    plan=plan,
+                    family=part,
+                    state=state,
+                    accounts=settle_accounts(state, books, part.account, rows, ratio, stock_bps),
+                    legs=legs,
+                    book_rolls=book_rolls,
+                    ratio=ratio,
+                    volatilities=[volatilities[number] for number in part.members],
+                )
+
+
+def _parts(family: Family, at_once: int | None) -> Iterator[Family]:
+    """A family in parts of so many members, all with the books of the whole."""
+    step = at_once or len(family.members)
+    for first in range(0, len(family.members), step):
+        some = slice(first, first + step)
+        yield replace(family, members=family.members[some], holdings=family.holdings[some])
 
 
 def _holdings(family: Family, overlays: Sequence[Overlay]) -> tuple[npt.NDArray[np.intp], Array, Array]:

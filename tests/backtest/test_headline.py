@@ -9,7 +9,7 @@ import numpy as np
 import pytest
 
 from backtest.analytics.comparisons import mix_wealth
-from backtest.analytics.headline import HEADLINE, MOMENTS, headline_figures, same_beta_mixes
+from backtest.analytics.headline import HEADLINE, MOMENTS, SameBetaMixes, headline_figures
 from backtest.analytics.performance import annual_return, daily_excess, performance, sharpe_ratio
 
 
@@ -83,7 +83,7 @@ def test_the_same_beta_mix_is_that_of_its_path(count: int, widest: float) -> Non
     _, hold, rate, dates = made(2600)
     shares = np.linspace(-0.3, widest, count)
     shares[-1] = np.nan
-    found = same_beta_mixes(shares, hold=hold, rate_return=rate, dates=dates)
+    found = SameBetaMixes(hold=hold, rate_return=rate, dates=dates).figures(shares)
     excess = daily_excess(hold, rate)
     for share, annual, sharpe in zip(shares[:-1], found["annual_return"], found["sharpe"], strict=False):
         path = mix_wealth(share, excess, rate[1:])

@@ -10,7 +10,7 @@ from itertools import pairwise
 import numpy as np
 import pytest
 
-from backtest.analytics.headline import headline_figures
+from backtest.analytics.headline import Headline
 from backtest.analytics.performance import daily_excess, sharpe_ratio
 from backtest.analytics.subperiods import block_edges, block_sums, empty_sums
 from tests.backtest.test_headline import made
@@ -77,7 +77,7 @@ def test_sums_on_the_way_of_the_headline_figures_are_the_same(offset: int) -> No
     wealth, hold, rate, dates = made(900, overlays=97)
     edges = block_edges(899 - offset)
     sums = empty_sums(97, edges)
-    headline_figures(wealth, hold=hold, rate_return=rate, dates=dates, blocks=sums)
+    Headline(hold=hold, rate_return=rate, dates=dates).figures(wealth, blocks=sums)
     apart = block_sums(wealth[:, offset:], rate_return=rate[offset:], edges=edges)
     np.testing.assert_array_equal(sums.growth, apart.growth)
     # excess is return less (1 + cash) there, return less 1 less cash here
