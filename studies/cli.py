@@ -271,6 +271,7 @@ def demo(folder: Annotated[Path, typer.Argument(help="Where to put it.")] = Path
     at, of = shlex.quote(str(store)), shlex.quote(str(overlay_file))
     say(f"  rollband replay demo --store {at} --put 90 --call 110 --roll month --vol-quote variance-swap")
     say(f"  rollband replay demo --store {at} --overlay {of} --smile flat")
+    say(f"  rollband study {shlex.quote(str(folder / 'study.toml'))} --store {at}")
     say("  rollband load mine --prices my_prices.csv --vol my_vols.csv")
 
 

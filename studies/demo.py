@@ -1,9 +1,10 @@
-"""The demo: the files of an invented market and an overlay, written into a folder of the user's."""
+"""The demo: the files of an invented market, an overlay and a study, written into a folder of the user's."""
 
 from __future__ import annotations
 
 import shutil
 import tempfile
+from importlib.resources import files
 from pathlib import Path
 
 from data_loaders.demo_market import DemoMarket, write_demo_market
@@ -38,7 +39,7 @@ quote = "variance swap"       # or "at the money"
 
 
 def write_demo_files(folder: Path) -> DemoMarket:
-    """Write the demo's CSV files and ``overlay.toml``; files already there must be the demo's own.
+    """Write the demo's CSV files, ``overlay.toml`` and ``study.toml``; files already there must be the demo's own.
 
     Raises
     ------
@@ -51,6 +52,8 @@ def write_demo_files(folder: Path) -> DemoMarket:
             fresh = Path(fresh_name)
             made = write_demo_market(fresh)
             (fresh / "overlay.toml").write_text(DEMO_OVERLAY, encoding="utf-8")
+            standing = files(__package__) / "moneyness.toml"
+            (fresh / "study.toml").write_text(standing.read_text(encoding="utf-8"), encoding="utf-8")
             written = sorted(fresh.iterdir())
             for file in written:
                 there = folder / file.name

@@ -309,7 +309,8 @@ def test_demo(rollband: Run, home: Path) -> None:
     assert (ran.code, ran.err) == (0, "")
     assert tree(home / "here") == [
         "dividends.csv", "histories/demo.parquet", "overlay.toml", "prices.csv", "rates.csv", "results/daily.parquet",
-        "results/manifest.json", "results/report.html", "results/rolls.parquet", "results/summary.json", "vol.csv",
+        "results/manifest.json", "results/report.html", "results/rolls.parquet", "results/summary.json", "study.toml",
+        "vol.csv",
     ]  # fmt: skip
     before = content(home / "here" / "results", *BYTES, "manifest.json")
     assert rollband("demo", "here").code == 0
@@ -326,12 +327,12 @@ def test_what_the_demo_says_to_type_next(rollband: Run, home: Path, folder: str)
     ran = rollband("demo", folder)
     assert (home / folder / "results" / "summary.json").is_file()
     commands = [shlex.split(line)[1:] for line in ran.out.splitlines() if line.startswith("  rollband ")]
-    assert [command[0] for command in commands] == ["replay", "replay", "load"]
-    for command in commands[:2]:
+    assert [command[0] for command in commands] == ["replay", "replay", "study", "load"]
+    for command in commands[:3]:
         assert rollband(*command).code == 0
     (home / "my_prices.csv").write_bytes((home / folder / "prices.csv").read_bytes())
     (home / "my_vols.csv").write_bytes((home / folder / "vol.csv").read_bytes())
-    assert rollband(*commands[2]).code == 0
+    assert rollband(*commands[3]).code == 0
 
 
 def test_demo_beside_files_of_ones_own(rollband: Run, home: Path) -> None:
