@@ -6,6 +6,7 @@ as the bytes of its stored file, and is kept there for as long as the study runs
 
 from __future__ import annotations
 
+import asyncio
 import re
 import sys
 from collections.abc import Callable, Iterator
@@ -48,13 +49,20 @@ def cluster(address: str) -> Iterator[Cluster]:
     """
     try:
         from distributed import Client
+        from distributed.comm import connect
     except ImportError:
         raise StudyError(
             "for --scheduler the package distributed is needed: install rollband[cluster], or leave --scheduler out"
         ) from None
     if not ADDRESS.fullmatch(address):
         raise StudyError(f"--scheduler is {address!r}; it takes an address such as tcp://10.0.0.5:8786")
+
+    async def knock() -> None:
+        comm = await connect(address, timeout=PATIENCE)
+        await comm.close()
+
     try:
+        asyncio.run(knock())  # a client that was never connected is hard to be rid of
         client = Client(address, timeout=PATIENCE, set_as_default=False)
     except Exception as error:  # what answers there may be anything
         raise StudyError(
