@@ -243,26 +243,38 @@ def test_an_overlay_that_begins_after_the_common_days_is_no_figure_but_an_error(
 
 
 @pytest.mark.parametrize(
-    ("lines", "first_days"),
+    ("lines", "rare"),
     [
-        (axis("roll", "leg.1.roll", '["month", "year"]'), 2),
-        (axis("phase", "leg.1.phase", "[0, 1, 2]"), 3),
-        (axis("shift", ["leg.1.shift_days", "leg.2.shift_days"], "[-3, 0, 3]"), 3),
-        (axis("ratio", "leg.1.ratio", "[0, 0.2, 0.4, 0.6, 0.8, 1]"), 2),
-        (axis("vol", "volatility.source", '["implied", "realised"]'), 2),
+        (axis("roll", "leg.1.roll", '["month", "quarter", "year"]'), "roll == 'year'"),
+        (axis("phase", "leg.1.phase", "[0, 1, 2]"), "phase == 0"),
+        (axis("shift", ["leg.1.shift_days", "leg.2.shift_days"], "[-3, 0, 3]"), "shift == 3"),
+        # of the quarterly put nothing is held in the others: the monthly call opens first
+        (axis("ratio", "leg.1.ratio", "[0, 0.5]"), "ratio == 0.5"),
+        (axis("vol", "volatility.source", '["implied", "realised"]'), "vol == 'realised'"),
     ],
     ids=["roll", "phase", "shift", "ratio", "source"],
 )
-def test_the_common_days_allow_for_every_overlay_of_the_study(store: Path, lines: str, first_days: int) -> None:
-    """An overlay for each first day is asked when the study is planned, however rare it is among the rest."""
-    many = axis("put", "leg.1.strike.percent_of_spot", "{ from = 80, to = 99, step = 1 }")
-    study = study_of(LEGS + many + lines, comparison="hold")
+def test_the_common_days_allow_for_every_overlay_of_the_study(store: Path, lines: str, rare: str) -> None:
+    """An overlay for each first day is asked when the study is planned, also where one alone begins so late."""
+    many = axis("put", "leg.1.strike.percent_of_spot", "{ from = 60, to = 99, step = 1 }")
+    study = study_of(f'leave_out = ["{rare} and put != 83"]\n' + LEGS + many + lines, comparison="hold")
     plan = plan_study(study, store=store)
-    rows = run_plan(plan)
-    assert len(set(rows.columns["inception"].tolist())) == first_days
-    assert plan.groups[0].span.first == max(rows.columns["inception"])
-    # and not one for every value that makes no difference
-    assert len(runner._asked(study, points(study))) <= 12 + first_days
+    begins = run_plan(plan).columns["inception"]
+    last = np.flatnonzero(begins == begins.max())
+    assert len(last) == 1
+    assert plan.groups[0].span.first == begins.max()
+    # it is not among those that are asked for the block length, spread evenly over all
+    assert last[0] not in np.linspace(0, len(begins) - 1, 12).astype(int)
+
+
+def test_not_every_overlay_is_asked_when_a_study_is_planned(store: Path) -> None:
+    many = axis("put", "leg.1.strike.percent_of_spot", "{ from = 80, to = 99, step = 1 }")
+    ratios = axis("ratio", "leg.1.ratio", "{ from = 0, to = 1, step = 0.1 }")
+    smiles = axis("smile", "volatility.smile", '["flat", "mild", "index", "steep"]')
+    study = study_of(LEGS + many + ratios + smiles, comparison="hold")
+    # of 880: one with a put and one without, and the 12 for the block length
+    assert len(points(study)) == 880
+    assert len(runner._asked(study, points(study))) <= 14
 
 
 def test_a_ruined_overlay_has_no_figures_and_spoils_no_other(store: Path) -> None:

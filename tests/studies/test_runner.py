@@ -20,7 +20,7 @@ from studies.runner import plan_study, run_plan
 from studies.study import Study
 from studies.study_folder import make_study_folder, run_study
 
-from .small_studies import FailsAt, Shuffling, axis, bytes_of, grid, store_history, write_tables
+from .small_studies import FailsAt, Shuffling, axis, bytes_of, grid, is_running, store_history, write_tables
 
 WINDOWS = axis("from", "window.from", '["2008-01-01", "2009-06-01"]')
 #: 5 puts x 4 calls x 2 windows on each of two histories: four groups of 20 rows.
@@ -101,6 +101,30 @@ def test_this_process_goes_on_until_the_workers_are_up(
     assert made(tmp_path / "out", store, workers=2) == usual
     # two batches in hand for each worker, and this process does the other 11
     assert handed_out == [2] * 4
+
+
+def test_no_worker_outlives_a_run_that_fails(monkeypatch: pytest.MonkeyPatch, store: Path) -> None:
+    """Not even while its error is looked at."""
+    started: list[int] = []
+
+    def progress(done: int, of: int) -> None:
+        if done > 12:
+            started.extend(pools[0].process_ids)
+            raise OSError("whatever the caller's own code raises")
+
+    def start(*args: Any, **more: Any) -> LocalWorkers:
+        pools.append(LocalWorkers(*args, **more))
+        return pools[0]
+
+    pools: list[LocalWorkers] = []
+    monkeypatch.setattr(runner, "LocalWorkers", start)
+    monkeypatch.setattr(runner, "WORTH_STARTING", -1.0)
+    monkeypatch.setattr(runner, "BATCH", 6)
+    with pytest.raises(OSError, match="whatever") as raised:
+        run_study(STUDY, store=store, workers=2, progress=progress)
+    assert raised.tb is not None
+    assert len(started) == 2
+    assert [process for process in started if is_running(process)] == []
 
 
 def test_no_process_is_started_for_what_is_soon_done(monkeypatch: pytest.MonkeyPatch, store: Path) -> None:

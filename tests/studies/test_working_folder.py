@@ -7,6 +7,7 @@ from __future__ import annotations
 
 import errno
 import json
+import os
 from collections.abc import Callable
 from pathlib import Path
 from typing import Any
@@ -128,6 +129,20 @@ def test_a_full_disk_keeps_what_was_kept(folder: WorkingFolder, monkeypatch: pyt
         folder.keep(1, COLUMNS, part())
     assert [path.name for path in folder.path.iterdir()] == ["batch-000000.kept"]
     read(folder, 0)
+
+
+def test_a_batch_is_moved_into_its_place_whole(folder: WorkingFolder, monkeypatch: pytest.MonkeyPatch) -> None:
+    """It is on the disk before it has its name; a power cut between the two leaves no batch."""
+    flushed = []
+
+    def fsync(handle: int) -> None:
+        assert not folder.file(0).exists()
+        flushed.append((os.fstat(handle).st_ino, os.fstat(handle).st_size))
+
+    monkeypatch.setattr(os, "fsync", fsync)
+    folder.keep(0, COLUMNS, part())
+    there = folder.file(0).stat()
+    assert flushed == [(there.st_ino, there.st_size)]
 
 
 # ---------------------------------------------------------------- the plan
