@@ -178,7 +178,7 @@ HOSTILE: dict[str, tuple[tuple[str, ...], Any, str]] = {
     "resamples": (
         ("settings", "study", "resamples"),
         10**12,
-        "cannot be used: settings.study.resamples: is 1000000000000; it takes a whole number from 0 to 100000",
+        "cannot be used: settings.study.resamples: is 1000000000000; it takes a whole number from 0 to 10000",
     ),
     "outside": (
         ("settings", "study", "histories"),
