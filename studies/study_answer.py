@@ -91,9 +91,9 @@ class GroupAnswer:
         """Whether the best can be told from luck after so many trials; None where a test cannot be had."""
         said = []
         if self.check is not None:
-            if not np.isfinite(self.check.spa_consistent):
+            if not np.isfinite(self.check.luck):
                 return None
-            said.append(self.check.spa_consistent <= LEVEL)
+            said.append(self.check.luck <= LEVEL)
         if np.isfinite(self.deflated.probability):
             said.append(self.deflated.probability >= 1.0 - LEVEL)
         return all(said) if said else None
@@ -288,7 +288,7 @@ def sentence_of(found: GroupAnswer, names: Sequence[str]) -> str:
     said = []
     if found.check is not None:
         least = 1.0 / found.check.resamples
-        chance = _share(found.check.spa_consistent, LEVEL) if found.check.spa_consistent else f"under {least:.1%}"
+        chance = _share(found.check.luck, LEVEL) if found.check.luck else f"under {least:.1%}"
         said.append(f"a search as wide as this finds one as good by luck with a chance of {chance}")
     if np.isfinite(found.deflated.probability):
         said.append(

@@ -201,4 +201,4 @@ def _row(found: StudyAnswer, number: int, names: Sequence[str]) -> dict[str, Any
 
 
 def _check_summary(check: RealityCheck) -> dict[str, Any]:
-    return {name: getattr(check, name) for name in check.__slots__}
+    return {name: getattr(check, name) for name in check.__slots__} | {"luck": check.luck}

@@ -147,6 +147,17 @@ class RealityCheck:
     block_length: float
     reason: str | None = None
 
+    @property
+    def luck(self) -> float:
+        """Chance that the search alone brings a best as good: the larger of White's and Hansen's consistent p-value.
+
+        In units of its own standard error an option that has not paid yet looks like skill: a call sold far out earns
+        a little every month, with next to no deviation, until the month that pays. In simulated fair markets Hansen's
+        test, which studentises, then takes luck for skill in far more than its level; White's, which does not, holds
+        it (``tests/studies/test_null_market.py``). NaN where Hansen's cannot be had.
+        """
+        return float(np.fmax(self.white, self.spa_consistent)) if math.isfinite(self.spa_consistent) else math.nan
+
 
 def check_batch(draws: Draws, differences: Array, positions: npt.ArrayLike) -> Partial:
     """Best and maxima of one batch of overlays.

@@ -85,7 +85,7 @@ def _group_row(view: View, place: int, *, with_own: bool) -> list[SortCell]:
     group = view.group
     gains = [view.worth(SHARPE_GAIN.field, view.best), *([view.worth(SHARPE_GAIN.field, view.own)] if with_own else [])]
     gains.append(median(view.figure(SHARPE_GAIN.field)))
-    luck = float("nan") if group.check is None else group.check.spa_consistent
+    luck = float("nan") if group.check is None else group.check.luck
     of_luck = DASH if group.check is None or not known(luck) else chance(luck, group.check.resamples)
     best = DASH if view.best is None else ", ".join(_named_settings(view, view.best)) or "the only one"
     correlation = group.halves.rank_correlation

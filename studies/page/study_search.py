@@ -61,10 +61,9 @@ def _items(view: View, mix: str) -> list[tuple[str, str]]:
         items.append(("Hurdle", f"{hurdle}: what the best of so many reaches on average when none has any advantage"))
     items.append(("Probability of an advantage", _probability(view)))
     check = group.check
-    if check is not None and known(check.spa_consistent):
-        said = f"{chance(check.spa_consistent, check.resamples)} (Hansen 2005)"
-        if several:
-            said = f"{chance(check.spa_consistent, check.resamples)} for a search as wide as this (Hansen 2005)"
+    if check is not None and known(check.luck):
+        wide = " for a search as wide as this" if several else ""
+        said = f"{chance(check.luck, check.resamples)}{wide} (the larger of White 2000 and Hansen 2005)"
         said += f"; {percent(LEVEL, 0)} and less would be convincing."
         knows = " It knows how much the overlays resemble each other." if several else ""
         items.append(("Chance of as good by luck", said + knows))
@@ -136,6 +135,8 @@ def tests_table(check: RealityCheck) -> Table:
         caption="Chance that luck alone brings a best as good as this one", head=("", "chance", "what it looks at"),
         rows=rows, words=frozenset({0, 2}),
         notes=[
+            "The larger of the first two counts: an option that has seldom paid yet looks steady, and in units of its "
+            "own error takes luck for skill.",
             f"{check.resamples:,} histories drawn from the {check.days:,} daily differences to the comparison, in runs "
             f"of {counted(round(check.block_length), 'day')} on average, all overlays together, and centred so that "
             "none is any better than its comparison. The second row is the one to look at."

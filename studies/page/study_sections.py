@@ -39,12 +39,12 @@ def key_figures(view: View) -> list[tuple[str, str, str]]:
     group = view.group
     sizes = " × ".join(f"{len(axis.values):,}" for axis in view.axes)
     check = group.check
-    tested = check is not None and known(check.spa_consistent)
+    tested = check is not None and known(check.luck)
     return [
         ("Overlays tried", f"{group.tried:,}", sizes if len(view.axes) > 1 else ""),
         ("Gain of the best", SHARPE_GAIN.written(view.worth(SHARPE_GAIN.field, view.best)),
          "of Sharpe ratio over its mix"),
-        ("As good by luck", chance(check.spa_consistent, check.resamples) if check and tested else "–",
+        ("As good by luck", chance(check.luck, check.resamples) if check and tested else "–",
          "chance, the search allowed for"),
         ("Any advantage", percent(group.deflated.probability, 0), "probability after so many trials"),
         ("First half to second", ratio(group.halves.rank_correlation, sign=True), "rank correlation"),
