@@ -63,7 +63,7 @@ def load(
 ) -> None:
     """Check CSV files and store them as one history. Nothing is written if anything is wrong."""
     from data_loaders import load_history
-    from data_loaders.store import check_name, write_history
+    from data_loaders.store import check_name, history_names, write_history
 
     check_name(name)
     history = load_history(
@@ -72,8 +72,11 @@ def load(
         first_day=first.date() if first else None,
         last_day=last.date() if last else None,
     )  # fmt: skip
+    replaced = name in history_names(store)
     path = write_history(history, store, name)
     tell_history(history)
+    if replaced:
+        say(f"The history that was stored as {name} before is replaced.")
     say(f"Stored as {path}")
     say(f"Next: rollband replay {shlex.quote(name)} --put 95 --call 110" + store_option(store))
 

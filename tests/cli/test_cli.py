@@ -64,6 +64,13 @@ def test_load_a_span(rollband: Run, home: Path, market: Path, files: list[object
     assert len(kept) > 480
 
 
+def test_loading_again_says_that_it_replaces(stored: Run, market: Path) -> None:
+    first = stored("load", "other", "--prices", market / "prices.csv")
+    again = stored("load", "mine", "--prices", market / "prices.csv")
+    assert "replaced" not in first.out
+    assert "The history that was stored as mine before is replaced." in again.out
+
+
 # ---------------------------------------------------------------- replay
 
 
