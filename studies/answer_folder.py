@@ -231,7 +231,7 @@ def make_answer_folder(
     BacktestError, ResultsError
     """
     if out is not None:
-        check_replaceable(out)
+        check_replaceable(out, kind="replay")
     progress("replaying")
     found, manifest = replay_of(
         frame, agreed, label=label, inputs=inputs, notes=notes, rate=rate, dividend_yield=dividend_yield, start=start,

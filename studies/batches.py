@@ -229,7 +229,11 @@ def _figures(
 ) -> dict[str, npt.NDArray[np.generic]]:
     made: dict[str, npt.NDArray[np.generic]] = {}
     own = against.headline.figures(found.wealth, blocks=blocks)
-    hold, mix = against.figures, against.mixes.figures(own["beta"])
+    hold = against.figures
+    # a mix of the same beta holds stock: below a beta of zero there is none to be compared with
+    mix = {
+        name: np.where(own["beta"] > 0.0, values, np.nan) for name, values in against.mixes.figures(own["beta"]).items()
+    }
     made |= own
     made["options_net_a_year"] = found.options_net() / years_between(found.dates)
     for name in ("annual_return", "volatility", "sharpe", "max_drawdown"):

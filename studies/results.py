@@ -51,8 +51,8 @@ def write_folder(out: Path, fill: Callable[[Path], None]) -> None:
         shutil.rmtree(fresh, ignore_errors=True)
 
 
-def check_replaceable(out: Path) -> None:
-    """Raise ResultsError unless ``out`` is absent, an empty folder, or a results folder."""
+def check_replaceable(out: Path, *, kind: str | None = None) -> None:
+    """Raise ResultsError unless ``out`` is absent, an empty folder, or results (of this ``kind`` if given)."""
     if out.resolve() == Path.cwd() and not any(out.iterdir()):
         raise ResultsError(f"{out} is the folder you stand in: give a new folder as --out")
     if out.is_symlink() or (out.exists() and not out.is_dir()):
@@ -62,6 +62,9 @@ def check_replaceable(out: Path) -> None:
     manifest = read_manifest(out)
     if manifest is None or not str(manifest.get("made_by", "")).startswith("rollband "):
         raise ResultsError(f"{out} holds other files and no {MANIFEST} of ours: give an empty or a new folder as --out")
+    there = manifest.get("kind", "replay")
+    if kind not in (None, there):
+        raise ResultsError(f"{out} holds the results of a {there}, not of a {kind}: give another --out")
     written = manifest.get("files")
     ours = {MANIFEST, *(written if isinstance(written, list) else [])}
     others = sorted(path.name for path in out.iterdir() if path.name not in ours)

@@ -101,7 +101,7 @@ def make_study_folder(
     StudyError
         If a worker is lost or the disk is full; ``resume`` goes on from there.
     """
-    check_replaceable(out)
+    check_replaceable(out, kind="study")
     telling("planning")
     plan = plan_study(study, store=store)
     with working_folder(out, plan.as_table(), resume=resume) as folder:

@@ -19,6 +19,7 @@ from .wiring_study import MOST_WORKERS, study_progress
 DIFFERENT = 4
 #: What has no numbers of its own.
 NOT_COMPARED = "Not compared: pages, pictures and what else is in the folder."
+NOT_COMPARED_IN_A_SAMPLE = "Not compared: summary.json, pages, pictures and what else is in the folder."
 
 
 def audit_and_tell(
@@ -87,4 +88,4 @@ def verdict_lines(found: Audit) -> list[str]:
     if found.versions and (found.verdict == DIFFERS or found.notes):
         other = "; ".join(f"{name} {then or 'not noted'}, now {now}" for name, (then, now) in found.versions.items())
         said.append(f"Versions differ: {other}.")
-    return [*said, NOT_COMPARED]
+    return [*said, NOT_COMPARED if found.sample is None else NOT_COMPARED_IN_A_SAMPLE]

@@ -22,7 +22,7 @@ def search(found: StudyAnswer, view: View, prefix: str) -> Part:
     if group.tried > 1:
         blocks.append(
             Prose(
-                f"{group.tried:,} overlays were tried on the same days. The best of many looks good even where none "
+                f"{group.tried:,} overlays were tried. The best of many looks good even where none "
                 "is, so its own figures say little. What follows asks what luck alone would have brought."
             )
         )
@@ -139,7 +139,7 @@ def tests_table(check: RealityCheck) -> Table:
             "own error takes luck for skill.",
             f"{check.resamples:,} histories drawn from the {check.days:,} daily differences to the comparison, in runs "
             f"of {counted(round(check.block_length), 'day')} on average, all overlays together, and centred so that "
-            "none is any better than its comparison. The second row is the one to look at."
+            "none is any better than its comparison."
         ],
     )  # fmt: skip
 

@@ -43,7 +43,7 @@ def key_figures(view: View) -> list[tuple[str, str, str]]:
     return [
         ("Overlays tried", f"{group.tried:,}", sizes if len(view.axes) > 1 else ""),
         ("Gain of the best", SHARPE_GAIN.written(view.worth(SHARPE_GAIN.field, view.best)),
-         "of Sharpe ratio over its mix"),
+         "of Sharpe ratio over its same-beta mix"),
         ("As good by luck", chance(check.luck, check.resamples) if check and tested else "–",
          "chance, the search allowed for"),
         ("Any advantage", percent(group.deflated.probability, 0), "probability after so many trials"),
@@ -109,7 +109,8 @@ def _days(views: Sequence[View]) -> list[tuple[str, str]]:
             "Days" if len(views) == 1 else f"Days of {view.title}",
             (f"{view.title}: " if len(views) == 1 else "")
             + f"{date(view.group.first)} to {date(view.group.last)}, {length(view.group.first, view.group.last)}, "
-            "the days that all overlays have in common",
+            "the days that all overlays have in common; tests, halves and walk-forward stand on these, an overlay's "
+            "own figures and those of its hold begin on its own first roll day, on the first of these at the latest",
         )
         for view in views
     ]

@@ -32,7 +32,8 @@ BEST_SHOWN, MOST_SORTED = 5, 200
 SHORT = (RETURN, RETURN_GAIN, SHARPE, SHARPE_GAIN, DRAWDOWN, REMOVED, INFORMATION)
 LONG = (RETURN, RETURN_GAIN, VOLATILITY, SHARPE, SHARPE_GAIN, DRAWDOWN, REMOVED, BETA, INFORMATION)
 NO_FIGURE = (
-    "cannot be had: the overlay lost everything, or does not vary against its comparison, or the days are too few"
+    "cannot be had: the overlay lost everything, or does not vary against its comparison, or has no beta above zero "
+    "and so no mix of stock and cash beside it, or the days are too few"
 )
 
 

@@ -21,6 +21,7 @@ from backtest.analytics.comparisons import mix_wealth
 from backtest.analytics.headline import HEADLINE
 from backtest.analytics.reality_check import Draws, check_batch, p_values
 from backtest.engine.result import Replay
+from data_loaders.store import read_history
 from studies import runner
 from studies.batches import BLOCK_COLUMNS, FIGURES, SPAN, columns_of, common_span, replay_batch
 from studies.expansion import Expansion, Point, points
@@ -293,3 +294,21 @@ def test_a_ruined_overlay_has_no_figures_and_spoils_no_other(store: Path) -> Non
     alone = run_plan(plan_study(calm, store=store))
     for name in FIGURES:
         np.testing.assert_array_equal(found.columns[name][:2], alone.columns[name], err_msg=name)
+
+
+def test_there_is_no_mix_of_a_beta_under_zero(tmp_path: Path) -> None:
+    """Three puts at 105 against one share are short of the market: no mix of stock and cash is."""
+    store_history(tmp_path, "one")
+    market = Market.from_frame(read_history(tmp_path, "one").frame)
+    short = parse_study(
+        'question = "Which?"\nhistories = ["one"]\nresamples = 0\n'
+        '[[overlay.leg]]\nposition = "long"\nright = "put"\nratio = 3\nstrike = { percent_of_spot = 105 }\n'
+        + axis("put", "leg.1.strike.percent_of_spot", "[80, 105]")
+    )
+    asked = Expansion(short).many(points(short))
+    span = common_span(market, asked, comparison="same-beta mix")
+    columns, _ = replay_batch(market, asked, span, comparison="same-beta mix", draws=None)
+    assert columns["beta"][0] > 0 > columns["beta"][1]
+    for name in ("mix_annual_return", "mix_sharpe", "return_less_mix", "sharpe_less_mix"):
+        assert np.isfinite(columns[name]).tolist() == [True, False], name
+    assert np.isfinite(columns["information_ratio"]).all()

@@ -397,3 +397,10 @@ def test_a_folder_with_a_manifest_of_somebody_else_is_not_touched(tmp_path: Path
     with pytest.raises(ResultsError, match=r"holds other files and no manifest\.json of ours"):
         write_folder(out, lambda fresh: None)
     assert (out / "index.js").read_text() == "mine"
+
+
+def test_results_of_another_kind_are_not_replaced(tmp_path: Path) -> None:
+    out = filled(tmp_path / "out", "summary.json")
+    check_replaceable(out, kind="replay")
+    with pytest.raises(ResultsError, match="holds the results of a replay, not of a study: give another --out"):
+        check_replaceable(out, kind="study")
