@@ -2,7 +2,6 @@
 
 from __future__ import annotations
 
-import platform
 from collections.abc import Callable
 from importlib.metadata import version
 from pathlib import Path
@@ -23,6 +22,7 @@ from .results import (
     folder_name,
     free_folder,
     plain,
+    versions,
     write_folder,
     write_json,
     write_manifest,
@@ -96,13 +96,6 @@ def _write_pictures(found: Answer, folder: Path) -> None:
     )
     for name, figure in pictures.items():
         figure.savefig(folder / f"{name}.png", metadata={"Software": None})
-
-
-def versions() -> dict[str, str]:
-    """Versions of what decides the last digits."""
-    return {name: version(name) for name in ("numpy", "pandas", "pyarrow", "scipy")} | {
-        "python": platform.python_version()
-    }
 
 
 def replay_of(

@@ -15,7 +15,6 @@ import pyarrow.parquet as pq
 from data_loaders.errors import LoadError, StoreError
 from data_loaders.store import check_name, read_history
 
-from .answer_folder import versions
 from .differences import (
     Difference,
     NoTable,
@@ -28,7 +27,7 @@ from .differences import (
     table_difference,
 )
 from .errors import ResultsError
-from .results import MANIFEST, SUMMARY, sha256_of
+from .results import MANIFEST, SUMMARY, sha256_of, versions
 from .runner import history_file
 
 #: What an audit says.

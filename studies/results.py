@@ -5,11 +5,13 @@ from __future__ import annotations
 import hashlib
 import json
 import math
+import platform
 import re
 import shutil
 import tempfile
 from collections.abc import Callable, Iterator
 from contextlib import contextmanager
+from importlib.metadata import version
 from pathlib import Path
 from typing import Any
 
@@ -147,6 +149,13 @@ def write_manifest(folder: Path, manifest: dict[str, Any]) -> None:
     """Write the manifest of a folder that is otherwise complete, with the names of all files in it."""
     files = sorted({path.name for path in folder.iterdir()} | {MANIFEST})
     write_json(folder / MANIFEST, manifest | {"files": files})
+
+
+def versions() -> dict[str, str]:
+    """Versions of what decides the last digits."""
+    return {name: version(name) for name in ("numpy", "pandas", "pyarrow", "scipy")} | {
+        "python": platform.python_version()
+    }
 
 
 def write_json(path: Path, value: Any) -> None:

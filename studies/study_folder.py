@@ -2,7 +2,6 @@
 
 from __future__ import annotations
 
-import platform
 from collections.abc import Callable, Sequence
 from concurrent.futures import Executor
 from importlib.metadata import version
@@ -12,7 +11,16 @@ from typing import TYPE_CHECKING, Any
 from backtest.analytics.reality_check import RealityCheck
 
 from .assumptions import CAUTION
-from .results import SCHEMA, SUMMARY, check_replaceable, write_folder, write_json, write_manifest, write_parquet
+from .results import (
+    SCHEMA,
+    SUMMARY,
+    check_replaceable,
+    versions,
+    write_folder,
+    write_json,
+    write_manifest,
+    write_parquet,
+)
 from .runner import Progress, plan_study, run_plan
 from .study import Study, study_to_table
 from .study_answer import GroupAnswer, StudyAnswer, answer_study, overlay_names, sentence_of
@@ -142,8 +150,7 @@ def study_manifest(found: StudyAnswer, *, command: str) -> dict[str, Any]:
         "schema": SCHEMA,
         "kind": "study",
         "made_by": f"rollband {version('rollband')}",
-        "versions": {name: version(name) for name in ("numpy", "pandas", "pyarrow", "scipy")}
-        | {"python": platform.python_version()},
+        "versions": versions(),
         "command": command,
         "inputs": [{"kind": "history", **entry} for entry in plan.inputs],
         "settings": {"study": study_to_table(plan.study), "store": str(plan.store)},

@@ -17,6 +17,8 @@ from backtest.arguments import number, one_of, whole_number
 @pytest.mark.parametrize("value", [1, 2.5, np.int64(3), np.float32(2.5), np.float64(4), Fraction(7, 2), 4])
 def test_numbers_of_python_and_numpy_inside_the_limits_pass(value: object) -> None:
     number("width", value, least=1, most=4)
+    with pytest.raises(OverlayError, match="it takes a number from 5 to 6"):  # the same value, outside others
+        number("width", value, least=5, most=6)
 
 
 @pytest.mark.parametrize(

@@ -133,7 +133,7 @@ def test_no_process_is_started_for_what_is_soon_done(monkeypatch: pytest.MonkeyP
 
     monkeypatch.setattr(runner, "LocalWorkers", refuse)
     monkeypatch.setattr(runner, "BATCH", 30)
-    run_study(STUDY, store=store, workers=8)
+    assert len(run_study(STUDY, store=store, workers=8).overlays) == len(run_study(STUDY, store=store).overlays) > 30
 
 
 @pytest.mark.parametrize(
