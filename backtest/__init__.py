@@ -22,12 +22,24 @@ Reads no files and prints nothing. A short tour:
 ('put', '2015-06-19', 102.78)
 """
 
+from .engine.leg_replay import LegReplay
 from .engine.replay import replay, replay_many
-from .engine.result import LegReplay, Replay, Replays
+from .engine.result import Replay, Replays
 from .errors import BacktestError, MarketError, OverlayError, PlanError
+from .gates import Gate, PriceMean, SignalOn, VolPercentile
+from .leg import Early, Leg
 from .market import Market
-from .overlay import NO_COSTS, Costs, Leg, Overlay
-from .strikes import PercentOfForward, PercentOfSpot
+from .overlay import NO_COSTS, Costs, Overlay
+from .strikes import (
+    Adjusted,
+    Delta,
+    Deviations,
+    Financed,
+    Mirrored,
+    PercentOfForward,
+    PercentOfSpot,
+    PremiumPercent,
+)
 from .volatility import (
     FLAT,
     INDEX,
@@ -48,23 +60,34 @@ __all__ = [
     "NO_COSTS",
     "SMILE_LADDER",
     "STEEP",
+    "Adjusted",
     "BacktestError",
     "Costs",
+    "Delta",
+    "Deviations",
+    "Early",
+    "Financed",
     "FlatSmile",
+    "Gate",
     "ImpliedSeries",
     "Leg",
     "LegReplay",
     "Market",
     "MarketError",
+    "Mirrored",
     "Overlay",
     "OverlayError",
     "PercentOfForward",
     "PercentOfSpot",
     "PlanError",
+    "PremiumPercent",
+    "PriceMean",
     "RealisedVolatility",
     "Replay",
     "Replays",
     "SSVISmile",
+    "SignalOn",
+    "VolPercentile",
     "Volatility",
     "replay",
     "replay_many",

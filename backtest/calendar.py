@@ -1,8 +1,6 @@
-"""Roll and expiry dates as integer positions in the trading days (C1 to C3).
+"""When the options of one leg are opened, closed and expire, as positions in the trading days (C1 to C3).
 
-The only date logic of the engine. Outside are dates, inside are positions found
-with ``searchsorted``: the position of a day is its row in the price file, and
-``len(dates)`` stands for "after the last price".
+With the cycles (``cycles.py``) the only date logic of the engine.
 """
 
 from __future__ import annotations
@@ -12,147 +10,141 @@ from dataclasses import dataclass
 import numpy as np
 import numpy.typing as npt
 
-from .arguments import whole_number
-from .errors import OverlayError, PlanError
+from .cycles import Cycle, Dates, Positions, rolls_inside
+from .errors import PlanError
 
-Dates = npt.NDArray[np.datetime64]
-Positions = npt.NDArray[np.intp]
+Flags = npt.NDArray[np.bool_]
 
-#: Months between the rolls of each named cycle (C2).
-ROLL_MONTHS = {"month": 1, "quarter": 3, "half": 6, "year": 12}
-
-#: A cycle moves by a year of trading days at most.
-LARGEST_SHIFT_DAYS = 252
-
-_EPOCH_WEEKDAY = 3  # 1970-01-01 was a Thursday; Monday is 0
-_FRIDAY = 4
-
-
-def third_friday(month: npt.ArrayLike) -> Dates:
-    """Third Friday of each month.
-
-    Parameters
-    ----------
-    month : array_like of int
-        Months since January 1970 (the integer behind ``datetime64[M]``).
-
-    Examples
-    --------
-    >>> third_friday(np.array(["2008-03"], dtype="datetime64[M]").astype(int))
-    array(['2008-03-21'], dtype='datetime64[D]')
-    """
-    first = np.asarray(month, dtype=np.int64).astype("datetime64[M]").astype("datetime64[D]")
-    weekday = (first.astype(np.int64) + _EPOCH_WEEKDAY) % 7
-    return (first.astype(np.int64) + (_FRIDAY - weekday) % 7 + 14).astype("datetime64[D]")
-
-
-def listed_expiry(dates: Dates, month: npt.ArrayLike, shift_days: int = 0) -> tuple[Dates, Positions]:
-    """Expiry date of the listed cycle for each month, and its position (C2).
-
-    A third Friday that is not a trading day but lies inside the range of ``dates``
-    moves to the last trading day before it; one after the last date is taken as it
-    falls and has the position ``len(dates)``; one before the first has -1. ``shift_days``
-    then moves every date by that many trading days; outside the file, weekdays stand for them.
-    """
-    friday = third_friday(month)
-    last = len(dates) - 1
-    # a count of trading days that goes on past both ends of the file, where weekdays stand in
-    count = np.searchsorted(dates, friday, side="right").astype(np.int64) - 1
-    after, before = friday > dates[-1], friday < dates[0]
-    # weekdays after the last day, the Friday included: the last day itself may be of a weekend
-    count[after] = last + np.busday_count(dates[-1] + 1, friday[after] + 1)
-    count[before] = -np.busday_count(friday[before], dates[0])
-    count += shift_days
-    inside = (count >= 0) & (count <= last)
-    expiry = np.where(inside, dates[np.clip(count, 0, last)], friday)
-    late = count > last
-    expiry[late] = np.busday_offset(dates[-1], count[late] - last, roll="backward")
-    return expiry, np.where(late, last + 1, np.where(inside, count, -1))
-
-
-@dataclass(frozen=True, slots=True, kw_only=True)
-class ListedCycle:
-    """Third Fridays of every ``months``-th month, moved by ``phase`` months (C2).
-
-    ``months=3`` is March, June, September and December; with ``phase=1`` it is
-    January, April, July and October. ``shift_days`` moves every date by that many
-    trading days.
-
-    Raises
-    ------
-    OverlayError
-        If ``months`` is not 1, 3, 6 or 12, or ``phase`` is not from 0 to ``months - 1``.
-    """
-
-    months: int
-    phase: int = 0
-    shift_days: int = 0
-
-    def __post_init__(self) -> None:
-        if self.months not in ROLL_MONTHS.values():
-            raise OverlayError(
-                f"a listed cycle rolls every 1, 3, 6 or 12 months, not every {self.months!r}", field="roll"
-            )
-        whole_number("phase", self.phase, least=0, most=self.months - 1, unit=f" for a cycle of {self.months} month(s)")
-        whole_number("shift_days", self.shift_days, least=-LARGEST_SHIFT_DAYS, most=LARGEST_SHIFT_DAYS)
-
-    def month_numbers(self, first: int, last: int) -> npt.NDArray[np.int64]:
-        """The cycle's months from ``first`` to ``last`` inclusive, as months since January 1970."""
-        # January 1970 is month 0, so December is 11: a quarter without phase has months 2, 5, 8, 11
-        start = first + (self.months - 1 + self.phase - first) % self.months
-        return np.arange(start, last + 1, self.months, dtype=np.int64)
-
-    def roll_positions(self, dates: Dates) -> Positions:
-        """Positions in ``dates`` of every roll date inside their range, increasing and without repeats."""
-        return _roll_months(dates, self)[1]
+#: Why an option was closed before its time; zero for one that was not.
+BY_GATE, BY_DELTA, BY_PROFIT, BY_LOW_VALUE = 1, 2, 3, 4
+REASON_WORDS = {
+    BY_GATE: "closed by its gate",
+    BY_DELTA: "replaced, delta low",
+    BY_PROFIT: "replaced, profit taken",
+    BY_LOW_VALUE: "replaced, value low",
+}
 
 
 @dataclass(frozen=True, slots=True, kw_only=True, eq=False)
 class Schedule:
-    """The rolls of one leg as arrays of shape ``(roll,)``.
+    """The options of one leg as arrays of shape ``(roll,)``, in order of their opens.
 
-    ``opened`` and ``closed`` are positions in the market's trading days; the last
-    roll is still live at the window's end (``live[-1]``) and its ``closed`` is that
-    end. ``expiry_day`` counts days since 1970-01-01. ``settles`` is true where the
-    option expires on the day it is closed.
+    ``opened`` and ``closed`` are positions in the market's trading days; an option still live at the window's end
+    (only the last can be) has that end as ``closed``. Between a close and the next open the leg is flat.
+    ``expiry_day`` counts days since 1970-01-01. ``settles`` is true where the option expires on the day it is closed,
+    ``stub`` where it is opened between two roll dates. ``reason`` says why it was closed before its roll date.
     """
 
     opened: Positions
     closed: Positions
     expiry_day: npt.NDArray[np.int64]
-    settles: npt.NDArray[np.bool_]
-    live: npt.NDArray[np.bool_]
+    settles: Flags
+    live: Flags
+    stub: Flags
+    reason: npt.NDArray[np.int64]
+
+    @property
+    def follows(self) -> Flags:
+        """Whether an option takes the place of one that is closed on the same day."""
+        follows = np.zeros(len(self.opened), dtype=bool)
+        follows[1:] = self.opened[1:] == self.closed[:-1]
+        return follows
+
+    def option_of_day(self, start: int, end: int) -> Positions:
+        """Which option is held after each day's trades from ``start`` to ``end``; -1 where the leg is flat."""
+        days = end - start + 1
+        if not len(self.opened):
+            return np.full(days, -1, dtype=np.intp)
+        held = np.cumsum(np.bincount(self.opened - start, minlength=days)) - 1
+        last = np.where(self.live, end, self.closed - 1)
+        # before the first option this looks at the last one, which is not over then
+        held[np.arange(start, end + 1) > last[held]] = -1
+        return held
 
 
-def leg_schedule(dates: Dates, *, cycle: ListedCycle, term_months: int, start: int, end: int) -> Schedule:
+def leg_schedule(
+    dates: Dates, *, cycle: Cycle, term_months: int, start: int, end: int, close_before: int = 0
+) -> Schedule:
     """Open, close and expiry of every roll of a leg from ``start`` to ``end`` (C3).
 
     On ``start`` the leg opens even if it is not one of its roll dates: a stub,
     held to the leg's own next date, with the expiry of the option that the rule
     would already be holding (so with equal roll and term the stub expires on that
     next date). A roll date that falls on ``end`` is carried out.
+
+    ``term_months`` is in trading days for a cycle of days. With ``close_before`` the leg rolls that many trading days
+    before the cycle's dates, on which its options expire.
     """
-    around, their_position = _months_around(dates, cycle)
-    first_month = int(around[their_position <= start][-1])
-    month, position = _roll_months(dates, cycle)
+    rolling = cycle.moved(-close_before) if close_before else cycle
+    around, their_position = rolling.around(dates)
+    number, position = rolls_inside(dates, rolling)
     inside = (position > start) & (position <= end)
-    open_month = np.concatenate([[first_month], month[inside]])
+    open_number = np.concatenate([[int(around[their_position <= start][-1])], number[inside]])
     opened = np.concatenate([[start], position[inside]])
     closed = np.concatenate([opened[1:], [end]])
-    expiry, expiry_position = listed_expiry(dates, open_month + term_months, cycle.shift_days)
+    expiry, expiry_position = cycle.expiries(dates, open_number, term_months)
     live = np.zeros(len(opened), dtype=bool)
     live[-1] = True
-    settles = (expiry_position <= closed) & ~live
+    stub = np.zeros(len(opened), dtype=bool)
+    stub[0] = start not in position
     return Schedule(
         opened=opened.astype(np.intp),
         closed=closed.astype(np.intp),
         expiry_day=expiry.astype(np.int64),
-        settles=settles,
+        settles=(expiry_position <= closed) & ~live,
         live=live,
+        stub=stub,
+        reason=np.zeros(len(opened), dtype=np.int64),
     )
 
 
-def inception_position(dates: Dates, *, cycle: ListedCycle, earliest: int, latest: int) -> int:
+def gated_schedule(schedule: Schedule, on: Flags, *, close_when_off: bool, open_at_once: bool) -> Schedule:
+    """A schedule of which only what a gate lets through is held.
+
+    Parameters
+    ----------
+    on : ndarray of bool, shape (day,)
+        Whether the gate lets an option be opened on each trading day of the market.
+    close_when_off : bool
+        Close a live option on the first day on which the gate is off, instead of letting it run.
+    open_at_once : bool
+        Open on the first day on which the gate is on again, to the close of the option that would be held, instead of
+        waiting for the next roll date.
+    """
+    held: list[tuple[int, int, int, bool, bool, int]] = []  # roll, opened, closed, live, stub, reason
+    for number, (opened, closed, live) in enumerate(
+        zip(schedule.opened.tolist(), schedule.closed.tolist(), schedule.live.tolist(), strict=True)
+    ):
+        day, until = opened, closed + 1 if live else closed  # days on which something may still be done
+        while day < until:
+            if not on[day]:
+                if not open_at_once:
+                    break
+                later = np.flatnonzero(on[day:until])
+                if later.size == 0:
+                    break
+                day += int(later[0])
+            off = np.flatnonzero(~on[day:until]) if close_when_off else np.zeros(0, dtype=np.intp)
+            stub = bool(schedule.stub[number]) or day > opened
+            if off.size == 0:
+                held.append((number, day, closed, live, stub, int(schedule.reason[number])))
+                break
+            held.append((number, day, day + int(off[0]), False, stub, BY_GATE))
+            day += int(off[0])
+    columns: npt.NDArray[np.int64] = np.array(held, dtype=np.int64).reshape(len(held), 6)
+    roll, opened_at, closed_at, live_at, stub_at, reason = (columns[:, place] for place in range(6))
+    return Schedule(
+        opened=opened_at.astype(np.intp),
+        closed=closed_at.astype(np.intp),
+        expiry_day=schedule.expiry_day[roll],
+        settles=schedule.settles[roll] & (closed_at == schedule.closed[roll]),
+        live=live_at.astype(bool),
+        stub=stub_at.astype(bool),
+        reason=reason,
+    )
+
+
+def inception_position(dates: Dates, *, cycle: Cycle, earliest: int, latest: int) -> int:
     """The first roll date of the anchor's cycle at or after position ``earliest`` (C3).
 
     Raises
@@ -160,30 +152,11 @@ def inception_position(dates: Dates, *, cycle: ListedCycle, earliest: int, lates
     PlanError
         If there is none before ``latest``.
     """
-    positions = cycle.roll_positions(dates)
+    _, positions = rolls_inside(dates, cycle)
     fits = positions[(positions >= earliest) & (positions < latest)]
     if fits.size == 0:
         raise PlanError(
-            f"no roll date of the longest leg (every {cycle.months} month(s), third Friday) between {dates[earliest]} "
+            f"no roll date of the longest leg ({cycle.words}) between {dates[earliest]} "
             f"and the day before {dates[latest]}: give a longer window, or a leg that rolls more often"
         )
     return int(fits[0])
-
-
-def _roll_months(dates: Dates, cycle: ListedCycle) -> tuple[npt.NDArray[np.int64], Positions]:
-    """Months of the cycle whose date lies in the file, with their positions."""
-    month, position = _months_around(dates, cycle)
-    inside = (position >= 0) & (position < len(dates))
-    month, position = month[inside], position[inside]
-    # a hole of weeks in the price file can put two cycle dates on one day: that is one roll, of the later month
-    last_of_day = np.append(position[1:] != position[:-1], True) if position.size else np.zeros(0, dtype=bool)
-    return month[last_of_day], position[last_of_day]
-
-
-def _months_around(dates: Dates, cycle: ListedCycle) -> tuple[npt.NDArray[np.int64], Positions]:
-    """The cycle's months over the file and as far beyond as its shift reaches, with their positions."""
-    first, last = (int(d.astype("datetime64[M]").astype(np.int64)) for d in (dates[0], dates[-1]))
-    # a month has at least 20 weekdays; one cycle more on each side holds the roll before and the roll after
-    reach = cycle.months + 1 + abs(cycle.shift_days) // 20
-    month = cycle.month_numbers(first - reach, last + reach)
-    return month, listed_expiry(dates, month, cycle.shift_days)[1]

@@ -19,6 +19,8 @@ from .errors import MarketError
 if TYPE_CHECKING:
     import pandas as pd
 
+    from .volatility.surface import SurfaceQuotes
+
 Array = npt.NDArray[np.float64]
 Dates = npt.NDArray[np.datetime64]
 
@@ -50,6 +52,12 @@ class Market:
         Decimal annual vols; no rows when the history has none.
     vol_tenor_days : ndarray, shape (tenor,)
         Calendar days of each row, increasing.
+    open, high, low : ndarray, shape (day,), optional
+        Opening, highest and lowest prices, NaN where there is none.
+    signal : ndarray of bool, shape (day,), optional
+        The user's own signal, for gates; between its dates the last one counts, before the first it is off.
+    surface : SurfaceQuotes, optional
+        Quoted implied vols by expiry and strike, of these trading days.
     day_number : ndarray of int64, shape (day,)
         Days since 1970-01-01.
     log_spot : ndarray, shape (day,)
@@ -66,6 +74,11 @@ class Market:
     dividend_yield: Array
     vol_quotes: Array
     vol_tenor_days: npt.NDArray[np.int64]
+    open: Array | None = None
+    signal: npt.NDArray[np.bool_] | None = None
+    high: Array | None = None
+    low: Array | None = None
+    surface: SurfaceQuotes | None = None
     day_number: npt.NDArray[np.int64] = field(init=False)
     cash_growth: Array = field(init=False)
     share_growth: Array = field(init=False)
@@ -85,6 +98,9 @@ class Market:
             getattr(self, name).setflags(write=False)
         for name in ("day_number", "log_spot", "cash_growth", "share_growth"):
             getattr(self, name).setflags(write=False)
+        for optional in (self.open, self.high, self.low, self.signal):
+            if optional is not None:
+                optional.setflags(write=False)
 
     def __len__(self) -> int:
         return len(self.dates)
@@ -96,7 +112,12 @@ class Market:
 
     @classmethod
     def from_frame(
-        cls, frame: pd.DataFrame, *, rate: float | None = None, dividend_yield: float | None = None
+        cls,
+        frame: pd.DataFrame,
+        *,
+        rate: float | None = None,
+        dividend_yield: float | None = None,
+        surface: SurfaceQuotes | None = None,
     ) -> Market:
         """Make a market from a pandas frame.
 
@@ -105,12 +126,16 @@ class Market:
         frame : DataFrame
             Index of increasing dates. Columns: ``close``; optional ``dividend`` (cash on the ex-date),
             ``rate`` (annual effective, decimal), and ``vol`` or ``vol_30``, ``vol_93``, ... (decimal
-            annual vols, the number being the tenor in calendar days). Other columns are not looked at.
+            annual vols, the number being the tenor in calendar days); ``open`` for morning settlement, and with
+            ``high`` and ``low`` for the vol estimators that read them (NaN where there is none); ``signal`` (zero
+            is off, another number on, none keeps the last) for gates. Other columns are not looked at.
         rate : float, optional
             Constant annual effective rate, decimal, in place of the column; zero if neither is given.
         dividend_yield : float, optional
             Constant annual dividend yield, decimal, for the forwards. Without a ``dividend`` column it is
             also what the share pays, a little every day, so that stock and forward agree.
+        surface : SurfaceQuotes, optional
+            Quoted vols of the same trading days, from :meth:`~backtest.volatility.SurfaceQuotes.from_frame`.
 
         Raises
         ------
@@ -133,10 +158,10 @@ class Market:
             if value is not None and not isinstance(value, Real):
                 raise MarketError(f"{name} is {value!r}; it takes a decimal number (0.05 is 5%)")
         dates = _dates(frame)
-        spot = _column(frame, "close")
+        spot = number_column(frame, "close")
         day_number = dates.astype(np.int64)
         if rate is None:
-            annual_rate = _column(frame, "rate") if "rate" in frame.columns else np.zeros(len(dates))
+            annual_rate = number_column(frame, "rate") if "rate" in frame.columns else np.zeros(len(dates))
         else:
             annual_rate = np.full(len(dates), float(rate))
         bad = ~np.isnan(annual_rate) & ((annual_rate <= -1) | (annual_rate > HIGHEST_RATE))
@@ -145,7 +170,7 @@ class Market:
                 f"rate on {dates[bad][0]} is {annual_rate[bad][0]:g}; a decimal rate is above -1 and at most "
                 f"{HIGHEST_RATE:g} (0.05 is 5%)"
             )
-        dividend = _column(frame, "dividend") if "dividend" in frame.columns else np.zeros(len(dates))
+        dividend = number_column(frame, "dividend") if "dividend" in frame.columns else np.zeros(len(dates))
         if dividend_yield is None:
             carry = trailing_dividend_yield(day_number, spot, dividend)
         else:
@@ -166,6 +191,9 @@ class Market:
             dividend_yield=carry,
             vol_quotes=quotes,
             vol_tenor_days=tenors,
+            **{name: number_column(frame, name) for name in ("open", "high", "low") if name in frame.columns},
+            surface=surface,
+            signal=_signal(number_column(frame, "signal")) if "signal" in frame.columns else None,
         )
 
 
@@ -177,16 +205,27 @@ def trailing_dividend_yield(day_number: npt.NDArray[np.int64], spot: Array, divi
         return np.log1p((paid[1:] - paid[first]) / spot)
 
 
-def _dates(frame: pd.DataFrame) -> Dates:
-    index: Any = frame.index
-    if index.dtype.kind in "iufb":
-        raise MarketError(f"the frame's index is not dates: it holds numbers such as {index[0]}")
-    if getattr(index, "tz", None) is not None:
-        index = index.tz_localize(None)
+def as_dates(values: Any, what: str) -> Dates:
+    """Days of a pandas index; ``what`` begins the sentence of the error.
+
+    Raises
+    ------
+    MarketError
+        If they are no dates.
+    """
+    if values.dtype.kind in "iufb":
+        raise MarketError(f"{what} is not dates: it holds numbers such as {values[0]}")
+    if getattr(values, "tz", None) is not None:
+        values = values.tz_localize(None)
     try:
-        dates = index.to_numpy().astype("datetime64[D]")
+        dates: Dates = values.to_numpy().astype("datetime64[D]")
     except (TypeError, ValueError) as error:
-        raise MarketError(f"the frame's index is not dates: {error}") from None
+        raise MarketError(f"{what} is not dates: {error}") from None
+    return dates
+
+
+def _dates(frame: pd.DataFrame) -> Dates:
+    dates = as_dates(frame.index, "the frame's index")
     if len(dates) < 2:
         raise MarketError(f"the frame has {len(dates)} row(s); a market needs at least 2 trading days")
     if np.isnat(dates).any():
@@ -199,11 +238,19 @@ def _dates(frame: pd.DataFrame) -> Dates:
     return dates
 
 
-def _column(frame: pd.DataFrame, name: str) -> Array:
+def number_column(frame: pd.DataFrame, name: str) -> Array:
+    """A column of a frame as numbers, NaN where there is none; raises MarketError if it holds anything else."""
     try:
         return np.array(frame[name].to_numpy(), dtype=np.float64)
     except (TypeError, ValueError) as error:
         raise MarketError(f"column '{name}' is not all numbers: {error}") from None
+
+
+def _signal(values: Array) -> npt.NDArray[np.bool_]:
+    """The last known value of each day, off before the first."""
+    known = ~np.isnan(values)
+    last = np.maximum.accumulate(np.where(known, np.arange(len(values)), -1))
+    return (last >= 0) & (values[last] != 0.0)
 
 
 def _vol_columns(frame: pd.DataFrame) -> tuple[npt.NDArray[np.int64], Array]:
@@ -220,7 +267,7 @@ def _vol_columns(frame: pd.DataFrame) -> tuple[npt.NDArray[np.int64], Array]:
             raise MarketError(f"two vol columns of {tenor} days; a column 'vol' means {DEFAULT_TENOR_DAYS} days")
         named[tenor] = name
     tenors = np.array(sorted(named), dtype=np.int64)
-    quotes = np.array([_column(frame, named[t]) for t in tenors.tolist()]).reshape(len(tenors), len(frame))
+    quotes = np.array([number_column(frame, named[t]) for t in tenors.tolist()]).reshape(len(tenors), len(frame))
     return tenors, quotes
 
 
@@ -254,6 +301,14 @@ def _check_arrays(market: Market) -> None:
             raise MarketError(
                 f"{name} on {market.dates[bad][0]} is {values[bad][0]:g}; it must be a finite number {rule}"
             )
+    for name in ("open", "high", "low"):
+        values = getattr(market, name)
+        if values is not None and values.shape != (n,):
+            raise MarketError(f"{name} has shape {values.shape}; it must be ({n},), one value a trading day")
+        if values is not None and (bad := values <= 0).any():
+            raise MarketError(f"{name} on {market.dates[bad][0]} is {values[bad][0]:g}; it must be a number above 0")
+    if market.surface is not None and not np.array_equal(market.surface.dates, market.dates):
+        raise MarketError("the surface was made for other trading days than those of the prices")
     known = ~np.isnan(market.vol_quotes)
     wrong = known & ~((market.vol_quotes > 0) & (market.vol_quotes <= HIGHEST_VOL))
     if wrong.any():

@@ -31,20 +31,36 @@ def dates_from_text(column: pa.Array) -> tuple[Dates, Mask, Mask]:
         Cells that are no such date; dates outside the range of the schema.
     """
     text = pc.utf8_trim_whitespace(column)
-    shaped = _numpy(pc.match_substring_regex(text, _DATE_PATTERN))
+    shaped = to_numpy(pc.match_substring_regex(text, _DATE_PATTERN))
     good = text if shaped.all() else pc.if_else(pa.array(shaped), text, "1970-01-01")
     year, month, day = (
-        _numpy(pc.cast(pc.utf8_slice_codeunits(good, start, stop), pa.int64()))
+        toto_numpy(pc.cast(pc.utf8_slice_codeunits(good, start, stop), pa.int64()))
         for start, stop in ((0, 4), (5, 7), (8, 10))
     )
+    dates, impossible = civil_dates(year, month, day)
+    bad = ~shaped | impossible
+    dates[bad] = np.datetime64("1970-01-01")
+    return dates, bad, ~bad & outside_range(dates)
+
+
+def civil_dates(year: Lines, month: Lines, day: Lines) -> tuple[Dates, Mask]:
+    """Dates of the calendar, and a mask of those that it does not have (the first of some month there).
+
+    >>> import numpy as np
+    >>> dates, impossible = civil_dates(np.array([2020, 2019]), np.array([2, 2]), np.array([29, 29]))
+    >>> str(dates[0]), impossible.tolist()
+    ('2020-02-29', [False, True])
+    """
     in_year = (month >= 1) & (month <= 12)
     first = ((year - 1970) * 12 + np.where(in_year, month, 1) - 1).astype("datetime64[M]")
     length = ((first + 1).astype("datetime64[D]") - first.astype("datetime64[D]")).astype(np.int64)
-    bad = ~(shaped & in_year & (day >= 1) & (day <= length))
-    dates = first.astype("datetime64[D]") + np.where(bad, 1, day) - 1
-    outside = ~bad & ((dates < np.datetime64(FIRST_DATE)) | (dates > np.datetime64(LAST_DATE)))
-    dates[bad] = np.datetime64("1970-01-01")
-    return dates, bad, outside
+    impossible = ~(in_year & (day >= 1) & (day <= length))
+    return first.astype("datetime64[D]") + np.where(impossible, 1, day) - 1, impossible
+
+
+def outside_range(dates: Dates) -> Mask:
+    """Dates outside those that can be used."""
+    return np.asarray((dates < np.datetime64(FIRST_DATE)) | (dates > np.datetime64(LAST_DATE)))
 
 
 def numbers_from_text(column: pa.Array) -> tuple[Floats, Mask, Mask, Mask, Mask]:
@@ -58,19 +74,20 @@ def numbers_from_text(column: pa.Array) -> tuple[Floats, Mask, Mask, Mask, Mask]
         Cells that say there is no value, that say ``nan``, that are infinite or too large, that are no number.
     """
     text = pc.utf8_trim_whitespace(column)
-    plain = _numpy(pc.match_substring_regex(text, _NUMBER_PATTERN))
+    plain = to_numpy(pc.match_substring_regex(text, _NUMBER_PATTERN))
     numeric = pc.utf8_ltrim(text, characters="+")
     if not plain.all():
         numeric = pc.if_else(pa.array(plain), numeric, pa.scalar(None, pa.string()))
-    values = np.array(pc.cast(numeric, pa.float64()).to_numpy(zero_copy_only=False), dtype=np.float64)
+    values = np.array(pc.cast(numeric, pa.float64()).toto_numpy(zero_copy_only=False), dtype=np.float64)
     lower = pc.utf8_lower(text)
     missing, nan, infinite = (
-        _numpy(pc.is_in(lower, value_set=pa.array(texts))) for texts in (MISSING_TEXTS, NAN_TEXTS, INFINITE_TEXTS)
+        to_numpy(pc.is_in(lower, value_set=pa.array(texts))) for texts in (MISSING_TEXTS, NAN_TEXTS, INFINITE_TEXTS)
     )
     too_large = np.isinf(values)
     values[too_large] = np.nan
     return values, missing, nan, infinite | too_large, ~(plain | missing | nan | infinite)
 
 
-def _numpy(column: pa.Array) -> npt.NDArray[Any]:
-    return np.asarray(column.to_numpy(zero_copy_only=False))
+def to_numpy(column: pa.Array) -> npt.NDArray[Any]:
+    """An array of pyarrow as one of numpy."""
+    return np.asarray(column.toto_numpy(zero_copy_only=False))

@@ -2,7 +2,8 @@
 
     LoadError
     ├── DataProblems   the files cannot be used; carries every problem found, from all files
-    └── StoreError     a stored history is unknown, unreadable or wrongly named
+    └── StoreError     a stored history is unknown, unreadable or wrongly named, or another load is writing
+        └── AppendRefused  new days do not go after a stored history; carries every difference found
 
 :data:`REASONS` is the whole catalogue of problems: a short code and the sentence that goes with it.
 """
@@ -127,7 +128,35 @@ class LoadError(Exception):
 
 
 class StoreError(LoadError):
-    """A stored history is unknown, unreadable, of another version, or its name cannot be used."""
+    """A stored history is unknown, unreadable, of another version, being written, or its name cannot be used."""
+
+
+class AppendRefused(StoreError):
+    """New days cannot be put after a stored history; it is as it was.
+
+    Attributes
+    ----------
+    differences : tuple of (str, str)
+        Every one found: the column (``date`` for a day that one of the two lacks), and a sentence.
+    """
+
+    def __init__(self, reason: str, differences: Iterable[tuple[str, str]] = ()) -> None:
+        self.reason, self.differences = reason, tuple(differences)
+        super().__init__(self.reason, self.differences)
+
+    def __str__(self) -> str:
+        lines = [self.reason]
+        shown: Counter[str] = Counter()
+        for column, sentence in self.differences:
+            shown[column] += 1
+            if shown[column] <= SHOWN_PER_CODE:
+                lines.append(f"  {sentence}")
+        lines += [
+            f"  and {total - SHOWN_PER_CODE:,} more of {column}"
+            for column, total in shown.items()
+            if total > SHOWN_PER_CODE
+        ]
+        return "\n".join(lines)
 
 
 class DataProblems(LoadError):

@@ -10,7 +10,7 @@ import pyarrow as pa
 
 from .csv_files import Table
 
-RepairKind = Literal["sorted", "unit"]
+RepairKind = Literal["sorted", "unit", "appended"]
 
 
 @dataclass(frozen=True, slots=True, kw_only=True)

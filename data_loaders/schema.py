@@ -14,7 +14,10 @@ from typing import Literal
 SCHEMA_VERSION = 1
 
 #: What a cell may hold, without regard to case, to say that there is no value.
-MISSING_TEXTS = ("", ".", "-", "na", "n/a", "#n/a", "null", "none")
+MISSING_TEXTS = (
+    "", ".", "-", "--", "\u2013", "\u2014", "na", "n/a", "n.a.", "#n/a", "#na", "#n/a n/a", "<na>", "nd", "null", "(null)",
+    "none", "nil", "missing",
+)  # fmt: skip
 #: Text of numbers that are none: a problem in price and dividend files, a missing value in vol and rate files.
 NAN_TEXTS = ("nan", "-nan", "+nan")
 INFINITE_TEXTS = ("inf", "-inf", "+inf", "infinity", "-infinity", "+infinity")
@@ -85,6 +88,13 @@ _DATE_NAMES = (
     "as of date", "observation date", "quote date",
 )  # fmt: skip
 _DATE = Column(role="date", meaning="the trading day", exact=("date",), synonyms=_DATE_NAMES, required=True)
+#: Names of a column that tells series apart which stand one below the other.
+SYMBOL_NAMES = (
+    "symbol", "symbols", "ticker", "tickers", "ric", "isin", "cusip", "sedol", "permno", "instrument", "security",
+    "act symbol", "stock symbol",
+)  # fmt: skip
+#: What programs call a column of row labels that has no name; taken for the dates where nothing else is.
+_UNNAMED = ("", "unnamed: 0", "index level 0", "index")
 _CLOSE_NAMES = (
     "closing price", "close price", "closing", "px last", "last", "last price", "price", "settle", "settlement",
     "settlement price", "close last", "value", "level", "index level", "index value",
@@ -179,13 +189,17 @@ class Matched:
     """Which column of a header was taken for what, by position.
 
     ``taken`` maps role -> position; for tenors the role is ``vol_<days>``. ``guessed`` names the role that a file
-    of two columns brought under a name we do not know.
+    of two columns brought under a name we do not know; ``unnamed_date`` says that the dates stand in a column without
+    a name. ``unknown`` are pairs of a role and the name that the user
+    gave for it, which no column has, or more than one.
     """
 
     taken: dict[str, int]
     ignored: tuple[int, ...]
     problems: tuple[HeaderProblem, ...]
     guessed: str | None = None
+    unnamed_date: bool = False
+    unknown: tuple[tuple[str, str], ...] = ()
 
 
 def normal_name(name: str) -> str:
@@ -208,18 +222,41 @@ def tenor_days(name: str) -> int | None:
     return days if 0 < days <= LONGEST_TENOR else None
 
 
-def match_header(schema: FileSchema, header: Sequence[str]) -> Matched:
+def is_adjusted(name: str) -> bool:
+    """Whether a column says that it is adjusted for splits and dividends: not a price that was traded.
+
+    >>> is_adjusted("Adj Close"), is_adjusted("close_adjusted"), is_adjusted("Close")
+    (True, True, False)
+    """
+    words = normal_name(name).split()
+    return any(word.startswith("adj") for word in words)
+
+
+def position_of(header: Sequence[str], name: str) -> int | None:
+    """Where a column stands that a user has named; as spelt, or else without regard to case and marks."""
+    same = [i for i, one in enumerate(header) if one.strip() == name.strip()]
+    alike = same or [i for i, one in enumerate(header) if normal_name(one) == normal_name(name)]
+    return alike[0] if len(alike) == 1 else None
+
+
+def match_header(schema: FileSchema, header: Sequence[str], named: Sequence[tuple[str, str]] = ()) -> Matched:
     """Match the names of a header with the columns of a schema.
 
-    An exact name goes before synonyms and those before fallbacks; two columns of the same standing are a problem.
+    What the user has `named` (role and name) goes before everything. An exact name goes before synonyms and those
+    before fallbacks; two columns of the same standing are a problem.
     Adjusted closes match nothing: prices are the traded ones, dividends come separately.
     """
     names = [normal_name(name) for name in header]
-    taken: dict[str, int] = {}
+    found_by_user = {role: position_of(header, name) for role, name in named}
+    unknown = tuple((role, name) for role, name in named if found_by_user[role] is None)
+    taken = {role: at for role, at in found_by_user.items() if at is not None}
     problems: list[HeaderProblem] = []
-    tenors = _tenor_columns(header, problems, schema) if schema.tenors else {}
-    guessed = None
+    settled = {*found_by_user, *(["vol"] if any(tenor_days(role) for role in found_by_user) else [])}
+    tenors = _tenor_columns(header, problems, schema) if schema.tenors and "vol" not in settled else {}
+    guessed, unnamed_date = None, False
     for column in (schema.date, *schema.value_columns):
+        if column.role in settled:
+            continue
         if column.role == "vol" and tenors:
             # general names beside tenor columns are something else; a column called vol is not
             hits = [i for i, name in enumerate(names) if name in column.exact]
@@ -236,6 +273,9 @@ def match_header(schema: FileSchema, header: Sequence[str]) -> Matched:
             ),
             [],
         )
+        if not hits and column is schema.date:
+            hits = [i for i, name in enumerate(names) if name in _UNNAMED and i not in taken.values()][:1]
+            unnamed_date = bool(hits)
         if not hits and schema.sole_column and column.required and column is not schema.date and len(header) == 2:
             hits = [i for i in range(2) if i not in taken.values()] if "date" in taken else []
             guessed = column.role if hits else None
@@ -245,8 +285,16 @@ def match_header(schema: FileSchema, header: Sequence[str]) -> Matched:
             problems.append(HeaderProblem(column=column, candidates=tuple(header[i] for i in hits)))
         elif column.required:
             problems.append(HeaderProblem(column=column, candidates=()))
-    ignored = tuple(i for i in range(len(header)) if i not in taken.values())
-    return Matched(taken=taken, ignored=ignored, problems=tuple(problems), guessed=guessed)
+    order = [column.role for column in (schema.date, *schema.value_columns)]
+    by_role = sorted(taken, key=lambda role: (0, order.index(role)) if role in order else (1, tenor_days(role) or 0))
+    return Matched(
+        taken={role: taken[role] for role in by_role},
+        ignored=tuple(i for i in range(len(header)) if i not in taken.values()),
+        problems=tuple(problems),
+        guessed=guessed,
+        unnamed_date=unnamed_date,
+        unknown=unknown,
+    )
 
 
 def _tenor_columns(header: Sequence[str], problems: list[HeaderProblem], schema: FileSchema) -> dict[str, int]:

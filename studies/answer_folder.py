@@ -132,7 +132,10 @@ def replay_of(
         rate=None if rate is None else rate / 100.0,
         dividend_yield=None if dividend_yield is None else dividend_yield / 100.0,
     )
-    found = answer(market, agreed.overlay, volatility=agreed.volatility, start=start, end=end, history_notes=notes)
+    found = answer(
+        market, agreed.overlay, volatility=agreed.volatility, start=start, end=end, history_notes=notes,
+        counterparty=agreed.counterparty, sale=agreed.sale,
+    )  # fmt: skip
     manifest = {
         "schema": SCHEMA,
         "made_by": f"rollband {version('rollband')}",
@@ -142,7 +145,9 @@ def replay_of(
         "source": source,
         "inputs": inputs,
         "settings": {
-            "overlay": overlay_to_table(agreed.overlay, agreed.volatility),
+            "overlay": overlay_to_table(
+                agreed.overlay, agreed.volatility, counterparty=agreed.counterparty, sale=agreed.sale
+            ),
             "from": start,
             "to": end,
             "rate": rate,

@@ -5,10 +5,12 @@ from __future__ import annotations
 import numpy as np
 import numpy.typing as npt
 
-from backtest import ImpliedSeries, RealisedVolatility, Replay, SSVISmile
+from backtest import ImpliedSeries, Market, Overlay, RealisedVolatility, Replay, SSVISmile, Volatility
 from backtest.analytics.performance import years_between
-from backtest.engine.plan import long_term_warning
+from backtest.engine.checks import long_term_warning
 from backtest.volatility import SMILE_LADDER
+
+from .activity import activity_of, activity_words
 
 Array = npt.NDArray[np.float64]
 
@@ -50,10 +52,14 @@ def assumptions_of(found: Replay) -> dict[str, str]:
         cost += f"; settlement fee {costs.settlement_fee:g} a contract"
     if costs.stock_bps:
         cost += f"; stock {costs.stock_bps:g} basis points"
+    if costs.borrow_spread:
+        cost += f"; cash below zero pays {costs.borrow_spread:g}% a year above the rate"
     account = {
         "resize": "all wealth into whole packages at every roll of the longest leg",
         "cash": "fixed shares, premiums and settlements through a cash account at the riskless rate",
     }[found.overlay.account]
+    if found.overlay.portfolio is not None:
+        account += f"; {found.overlay.portfolio:,.15g} at inception, options in whole contracts of {costs.multiplier:g}"
     window = found.window
     rate, carry = market.rate[window], market.dividend_yield[window]
     return {
@@ -61,10 +67,23 @@ def assumptions_of(found: Replay) -> dict[str, str]:
         "smile": f"{smile.name if smile.name in SMILE_LADDER else 'own'}{parameters}",
         "cost": cost,
         "account": account,
-        "settlement": "at the close of the expiry date (afternoon settlement)",
+        "settlement": _settlement(found.overlay),
+        **({"decided": "at the close of the day before each trade"} if found.overlay.decide_lag else {}),
         "rate": _span(np.expm1(rate)),
         "dividend_yield": _span(np.expm1(carry)),
+        **activity_words(activity_of(found)),
     }
+
+
+def _settlement(overlay: Overlay) -> str:
+    close = "at the close of the expiry date (afternoon settlement)"
+    at_open = [number for number, leg in enumerate(overlay.legs, start=1) if leg.settlement == "open"]
+    if not at_open:
+        return close
+    morning = "at the open of the expiry date (morning settlement)"
+    if len(at_open) == len(overlay.legs):
+        return morning
+    return f"{morning} for leg {', '.join(map(str, at_open))}, the others {close}"
 
 
 def _span(values: Array) -> str:
@@ -81,9 +100,8 @@ def _crossed_days(found: Replay) -> int:
     return int(np.count_nonzero(np.max(puts, axis=0) > np.min(calls, axis=0)))
 
 
-def warnings_of(found: Replay) -> list[str]:
-    """Plain sentences about what may mislead."""
-    market, volatility, overlay = found.market, found.volatility, found.overlay
+def warnings_of_settings(market: Market, overlay: Overlay, volatility: Volatility) -> list[str]:
+    """Those of :func:`warnings_of` that follow from what was agreed and the kind of vols there are."""
     said = []
     if (long_term := long_term_warning(market, overlay, volatility)) is not None:
         said.append(long_term)
@@ -97,6 +115,13 @@ def warnings_of(found: Replay) -> list[str]:
             "the vol series is read as at-the-money vol; if it is an index of the variance-swap kind, say "
             "--vol-quote variance-swap, or options come out about a fifth too dear in vol"
         )
+    return said
+
+
+def warnings_of(found: Replay) -> list[str]:
+    """Plain sentences about what may mislead."""
+    market = found.market
+    said = warnings_of_settings(market, found.overlay, found.volatility)
     paid = np.flatnonzero(market.dividend != 0)
     known_from = market.dates[0] + np.timedelta64(DIVIDEND_WINDOW_DAYS, "D")
     if paid.size and found.dates[0] < known_from and np.ptp(market.dividend_yield) > 0:

@@ -2,8 +2,10 @@
 
 from __future__ import annotations
 
+import shutil
 import tempfile
-from collections.abc import Callable
+from collections.abc import Callable, Iterator, Sequence
+from contextlib import contextmanager
 from dataclasses import replace
 from pathlib import Path
 from typing import Any
@@ -14,7 +16,9 @@ import pandas as pd
 
 from backtest.errors import BacktestError
 from data_loaders import History, load_history
-from data_loaders.store import read_history
+from data_loaders.names import history_file
+from data_loaders.store import read_version
+from data_loaders.versions import Version
 
 from .answer_folder import DAILY, ROLLS, make_numbers_again
 from .audited import DIFFERS, OTHER_DATA, SAME, Audit, Audited, ChangedInput, told
@@ -156,10 +160,10 @@ def _history_of(audited: Audited, source: dict[str, Any], end: str | None) -> tu
         audited.only("a stored history", "--store")
         name = audited.name_of(source["history"])
         store = audited.store_of(source.get("store"))
-        audited.stored_file(store, name, then=source.get("sha256"))
+        used = audited.stored_version(store, name, then=source.get("sha256"))
         if audited.changed:
-            audited.name_changed_sources(store, name)
-        return (read_history(store, name) if audited.goes_on else None), name
+            audited.name_changed_sources(used)
+        return (read_version(used) if audited.goes_on else None), name
     audited.only("files", "--inputs")
     unit = source.get("vol_unit")
     if unit not in (None, "percent", "decimal"):
@@ -196,8 +200,7 @@ def _audit_study(
     telling("reading the inputs")
     store = audited.store_of(settings.get("store"))
     then = {told(entry.get("history")): entry.get("sha256") for entry in audited.noted_inputs()}
-    for name in asked.histories:
-        audited.stored_file(store, name, then=then.get(told(name)))
+    used = [audited.stored_version(store, name, then=then.get(told(name))) for name in asked.histories]
     if not audited.goes_on:
         return audited.verdict("study", ())
     audited.compare_tables(
@@ -213,9 +216,22 @@ def _audit_study(
         chosen = np.sort(np.random.default_rng(seed).choice(rows, size=sample, replace=False))
         audited.sample = {"rows": sample, "of": rows, "seed": seed}
     telling("planning")
-    found = _run_again(audited, asked, store, chosen, workers=workers, progress=progress)
+    with _store_of(used, store) as store_then:
+        found = _run_again(audited, asked, store_then, chosen, workers=workers, progress=progress)
     telling("comparing")
     return _compare_study(audited, found, chosen, rows)
+
+
+@contextmanager
+def _store_of(used: Sequence[Version], store: Path) -> Iterator[Path]:
+    """A store in which each history is the version that is used; the given one where it is as it was then."""
+    if all(version.current for version in used):
+        yield store
+        return
+    with tempfile.TemporaryDirectory(prefix="rollband-audit-") as folder:
+        for version in used:
+            shutil.copyfile(version.path, history_file(Path(folder), version.name))
+        yield Path(folder)
 
 
 def _rows_are(audited: Audited, rows: int) -> bool:

@@ -7,13 +7,16 @@ from __future__ import annotations
 
 from dataclasses import dataclass
 from importlib.metadata import version
+from itertools import zip_longest
 from pathlib import Path
 from typing import Any
 
 import pyarrow.parquet as pq
 
 from data_loaders.errors import LoadError, StoreError
-from data_loaders.store import check_name, read_history
+from data_loaders.names import history_file
+from data_loaders.store import check_name, read_version
+from data_loaders.versions import Version, current_version, find_version
 
 from .differences import (
     Difference,
@@ -28,7 +31,6 @@ from .differences import (
 )
 from .errors import ResultsError
 from .results import MANIFEST, SUMMARY, sha256_of, versions
-from .runner import history_file
 
 #: What an audit says.
 SAME, DIFFERS, OTHER_DATA = "same", "differs", "other data"
@@ -48,6 +50,28 @@ class ChangedInput:
 
 
 @dataclass(frozen=True, slots=True, kw_only=True)
+class KeptVersion:
+    """A stored history that has been loaded anew since, and was made again from as it was then.
+
+    Attributes
+    ----------
+    history, file : str
+        Its name, and the file of the version of then in the store.
+    sha256 : str
+    loaded : str
+        When that version was last loaded, UTC.
+    now : str or None
+        sha256 of the history as it is now; None if it is no longer there.
+    """
+
+    history: str
+    file: str
+    sha256: str
+    loaded: str
+    now: str | None
+
+
+@dataclass(frozen=True, slots=True, kw_only=True)
 class Audit:
     """What came of making a results folder again.
 
@@ -59,6 +83,8 @@ class Audit:
     compared : tuple of str
         Files made again.
     changed : tuple of ChangedInput
+    kept : tuple of KeptVersion
+        Histories whose version of then was taken, which is not the one of now.
     differences : tuple of Difference
     sample : dict or None
         ``rows``, ``of`` and ``seed``, where only some rows of a study were made again.
@@ -72,6 +98,7 @@ class Audit:
     verdict: str
     compared: tuple[str, ...] = ()
     changed: tuple[ChangedInput, ...] = ()
+    kept: tuple[KeptVersion, ...] = ()
     differences: tuple[Difference, ...] = ()
     sample: dict[str, int] | None = None
     versions: dict[str, tuple[str | None, str]]
@@ -87,6 +114,7 @@ class Audited:
         self.folder, self.manifest = folder, manifest
         self.given_store, self.given_inputs, self.anyway = store, inputs, anyway
         self.changed: list[ChangedInput] = []
+        self.kept: list[KeptVersion] = []
         self.differences: list[Difference] = []
         self.notes: list[str] = []
         self.sample: dict[str, int] | None = None
@@ -100,8 +128,8 @@ class Audited:
         verdict = DIFFERS if self.differences else SAME if compared else OTHER_DATA
         return Audit(
             folder=self.folder, kind=kind, verdict=verdict, compared=compared, changed=tuple(self.changed),
-            differences=tuple(self.differences), sample=self.sample, versions=self._other_versions(),
-            notes=tuple(self.notes),
+            kept=tuple(self.kept), differences=tuple(self.differences), sample=self.sample,
+            versions=self._other_versions(), notes=tuple(self.notes),
         )  # fmt: skip
 
     def _other_versions(self) -> dict[str, tuple[str | None, str]]:
@@ -164,28 +192,42 @@ class Audited:
             raise ResultsError(f"--inputs {self.given_inputs} is no folder")
         return sorted(path for path in self.given_inputs.rglob("*") if path.name == name)
 
-    def stored_file(self, store: Path, name: str, *, then: Any) -> None:
-        """Look at the file of a stored history; a change is noted."""
+    def stored_version(self, store: Path, name: str, *, then: Any) -> Version:
+        """A stored history as it was then, whatever has been loaded since; the one of now if it is not kept, noted."""
         file = history_file(store, name)
-        if not _is_file(file):
+        try:
+            now = current_version(store, name)
+            found = find_version(store, name, then) if isinstance(then, str) else None
+        except OSError as error:
+            raise ResultsError(f"{_shown_path(file)} cannot be read: {error.strerror or error}") from None
+        if found is not None:
+            if not found.current:
+                self.kept.append(
+                    KeptVersion(
+                        history=name, file=_shown_path(found.path), sha256=found.sha256,
+                        loaded=f"{found.loaded:%Y-%m-%d %H:%M}", now=None if now is None else now.sha256,
+                    )
+                )  # fmt: skip
+            return found
+        if now is None:
             raise self._gone([_shown_path(file)], "--store DIR where the histories are now")
-        now = self._sha256(file)
-        if now != then:
-            self._note_changed(str(file), then, now)
+        self._note_changed(str(file), then, now.sha256)
+        return now
 
-    def name_changed_sources(self, store: Path, name: str) -> None:
+    def name_changed_sources(self, version: Version) -> None:
         """Of a stored history that has changed, the files that it was loaded from then and now."""
         try:
-            now = {str(one.kind): one for one in read_history(store, name).sources}
+            sources = read_version(version).sources
         except LoadError:
             return
-        then = {entry["kind"]: entry for entry in self.noted_inputs() if entry.get("kind") in KINDS}
         for kind in KINDS:
-            old, new = then.get(kind), now.get(kind)
-            old_hash, new_hash = None if old is None else old.get("sha256"), None if new is None else new.sha256
-            if old_hash != new_hash:
-                file = new.file if new is not None else str((old or {}).get("file"))
-                self._note_changed(file, old_hash, new_hash)
+            then = [entry for entry in self.noted_inputs() if entry["kind"] == kind]
+            now = [source for source in sources if source.kind == kind]
+            for old, new in zip_longest(then, now):
+                old_hash, new_hash = None if old is None else old.get("sha256"), None if new is None else new.sha256
+                if old_hash != new_hash:
+                    file = new.file if new is not None else str((old or {}).get("file"))
+                    self._note_changed(file, old_hash, new_hash)
 
     def _note_changed(self, file: str, then: Any, now: str | None) -> None:
         known = plain_text(then) if isinstance(then, str) else None

@@ -9,6 +9,7 @@ from fractions import Fraction
 from math import prod
 from typing import Any
 
+from .batches import FIGURES, SPAN
 from .errors import StudyFileError
 from .expansion import field_path, overlap
 from .toml_text import KeyPath, KeyProblem, key_words, plain, same_key, table_of, toml
@@ -23,6 +24,8 @@ LARGEST_NUMBER = 1e300
 MOST_LISTED = 12
 
 RANGE_KEYS = ("from", "to", "step")
+#: Columns of the results before those of the axes.
+SETTINGS = ("number", "history")
 
 
 @contextmanager
@@ -118,6 +121,8 @@ class Axis:
 def check_axes(axes: Sequence[Axis], legs: int) -> None:
     """Names that differ, fields that there are and that do not overlap, not too many of anything.
 
+    An axis becomes a column of the results, and so has the name of no other column there.
+
     Raises
     ------
     KeyProblem
@@ -133,6 +138,9 @@ def check_axes(axes: Sequence[Axis], legs: int) -> None:
         earlier = [other.name for other in axes[:number]]
         if axis.name in earlier:
             raise KeyProblem((*path, "name"), f"{axis.name} is also the name of axis {earlier.index(axis.name) + 1}")
+        if axis.name in (*SETTINGS, *SPAN, *FIGURES):
+            problem = f"{axis.name} is the name of a column of the results; give the axis another"
+            raise KeyProblem((*path, "name"), problem)
         for field in axis.fields:
             try:
                 where = field_path(field, legs)

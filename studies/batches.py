@@ -12,14 +12,16 @@ from typing import Any
 import numpy as np
 import numpy.typing as npt
 
-from backtest import Market
+from backtest import Market, Replay, Volatility, replay
 from backtest.analytics.block_length import optimal_block_length
 from backtest.analytics.headline import HEADLINE, Headline, SameBetaMixes, headline_figures
 from backtest.analytics.performance import TRADING_DAYS, daily_excess, years_between
 from backtest.analytics.reality_check import OVERLAYS_AT_ONCE, Draws, Partial, check_batch, combine
 from backtest.analytics.subperiods import BlockSums, block_edges, empty_sums
+from backtest.engine.checks import as_day, first_position, last_position
 from backtest.engine.families import FamilyReplay, replay_families
 from backtest.engine.legs import PricedLegs
+from backtest.volatility.sources import BoundVolatility
 
 from .expansion import Point
 
@@ -61,10 +63,13 @@ ASKED_AT_ONCE = 500
 class Span:
     """The days on which all overlays of one history and one window live, and what is the same for all of them.
 
+    An overlay whose first roll day came earlier begins on the first of these days with options already under way
+    (stubs of C9), so that no figure of one overlay stands on other days than that of another.
+
     Attributes
     ----------
     first, last : datetime64
-        Common days: the last inception among the overlays, and the window's end.
+        The latest of the first roll days of the overlays, and the window's end.
     edges : ndarray of int, shape (block + 1,)
         Blocks of the daily returns of those days: cut into equal parts, and at every turn of a decade.
     equal : ndarray of int, shape (part + 1,)
@@ -169,15 +174,14 @@ def replay_batch(
         ``SPAN``, ``FIGURES``, and for each block ``growth_1``, ``total_1``, ``square_1``, ...
     partial : Partial or None
     """
+    _check_first_days(market, points, span)
     count, blocks = len(points), len(span.edges) - 1
     columns: dict[str, npt.NDArray[np.generic]] = {name: np.full(count, np.nan) for name in columns_of(span)}
     columns |= {name: np.empty(count, dtype="datetime64[D]") for name in SPAN}
     parts: list[Partial] = []
     against: _Hold | None = None
-    for found in _families(market, points, priced=priced):
+    for found in _families(market, points, priced=priced, inception=span.first):
         numbers = np.array(found.numbers)
-        if found.dates[0] > span.first:
-            raise AssertionError(f"an overlay begins on {found.dates[0]}, after the common days do, on {span.first}")
         # the parts of a family follow each other
         if against is None or found.hold is not against.days["hold"]:
             against = _Hold(found)
@@ -185,30 +189,70 @@ def replay_batch(
         figures = _figures(found, against, comparison=comparison, blocks=sums)
         for name in (*SPAN, *FIGURES):
             columns[name][numbers] = figures[name]
-        offset = int(np.searchsorted(found.dates, span.first))
-        wealth = found.wealth[:, offset:]
         for name in BLOCK_COLUMNS:
             for block in range(blocks):
                 columns[f"{name}_{block + 1}"][numbers] = getattr(sums, name)[:, block]
         if draws is not None:
             beta = figures["beta"].astype(np.float64)
-            for begin in range(0, len(wealth), OVERLAYS_AT_ONCE):
+            for begin in range(0, len(numbers), OVERLAYS_AT_ONCE):
                 some = slice(begin, begin + OVERLAYS_AT_ONCE)
-                differences = _differences(found, wealth[some], beta[some], comparison, offset=offset)
+                differences = _differences(found, found.wealth[some], beta[some], comparison)
                 parts.append(check_batch(draws, differences.T, first_number + numbers[some]))
     return columns, combine(parts) if parts else None
 
 
-def _families(market: Market, points: Sequence[Point], *, priced: PricedLegs | None) -> Iterator[FamilyReplay]:
+def _check_first_days(market: Market, points: Sequence[Point], span: Span) -> None:
+    """Raise AssertionError if an overlay's own first roll day is not there yet when the common days begin.
+
+    The plan was made without it then, as if no axis moved that day.
+    """
+    start, last = as_day(points[0].start, "start"), last_position(market, as_day(points[0].end, "end"))
+    bound: dict[Volatility, BoundVolatility] = {}
+    # legs and volatilities are few and shared; to hash them takes longer than to tell the objects apart
+    looked_at: set[tuple[int, int, int]] = set()
+    firsts: set[Any] = set()
+    for point in points:
+        overlay, volatility, anchor = point.overlay, point.volatility, point.overlay.anchor
+        objects = (id(volatility), id(anchor), overlay.decide_lag)
+        if objects in looked_at:
+            continue
+        looked_at.add(objects)
+        key = (volatility, anchor.cycle, anchor.close_before, overlay.decide_lag)
+        if key in firsts:
+            continue
+        firsts.add(key)
+        if volatility not in bound:
+            bound[volatility] = volatility.on(market)
+        own = first_position(market, overlay, bound[volatility], start=start, last=last, inception=None)
+        if market.dates[own] > span.first:
+            raise AssertionError(
+                f"an overlay's own first roll day is {market.dates[own]}, and the common days begin on {span.first}"
+            )
+
+
+def _families(
+    market: Market,
+    points: Sequence[Point],
+    *,
+    priced: PricedLegs | None,
+    inception: np.datetime64 | None = None,
+) -> Iterator[FamilyReplay]:
+    """Overlays of one window replayed, each from ``inception`` or else from its own first roll day."""
     return replay_families(
         market,
         [point.overlay for point in points],
         volatility=[point.volatility for point in points],
         start=points[0].start,
         end=points[0].end,
+        inception=inception,
         priced=priced,
         at_once=AT_ONCE,
     )
+
+
+def replay_point(market: Market, point: Point, span: Span) -> Replay:
+    """One overlay of a batch as a single replay, on the same days."""
+    return replay(market, point.overlay, volatility=point.volatility, end=point.end, inception=span.first)
 
 
 class _Hold:
@@ -269,13 +313,9 @@ def _some_differences(found: FamilyReplay, comparison: str) -> Array:
     return _differences(found, wealth, own["beta"], comparison)
 
 
-def _differences(found: FamilyReplay, wealth: Array, beta: Array, comparison: str, *, offset: int = 0) -> Array:
-    """Daily returns less those of the comparison, from the day ``offset`` on, shape ``(overlay, day - 1)``.
-
-    ``wealth`` begins on that day.
-    """
-    rate_return = found.rate_return[offset:]
-    market = daily_excess(found.hold[offset:], rate_return)
-    excess = daily_excess(wealth, rate_return)
+def _differences(found: FamilyReplay, wealth: Array, beta: Array, comparison: str) -> Array:
+    """Daily returns less those of the comparison, shape ``(overlay, day - 1)``."""
+    market = daily_excess(found.hold, found.rate_return)
+    excess = daily_excess(wealth, found.rate_return)
     excess -= (beta[:, np.newaxis] if comparison == SAME_BETA else 1.0) * market
     return excess

@@ -15,18 +15,20 @@ from typing import Annotated
 
 import typer
 
-from .options import Account, AsJson, Dividends, First, Last, Prices, Rates, Roll, Store, Unit, Vol, VolQuote
+from .options import Account, Append, AsJson, Dividends, First, Last, Prices, Rates, Roll, Store, Unit, Vol, VolQuote
 from .wiring import (
-    history_of,
+    history_and_source,
     overlay_of,
     replay_and_write,
     say,
     show_summary_of,
-    source_of,
     store_option,
     tell_history,
     with_options,
 )
+from .wiring_histories import histories, load_for, store_and_tell
+from .wiring_next import next_roll
+from .wiring_overlays import app as overlays_app
 
 #: Exit codes: a wrong command or overlay file, bad data, a replay or folder that cannot be had.
 WRONG_USE, BAD_DATA, NOT_POSSIBLE = 2, 3, 5
@@ -45,6 +47,7 @@ Option prices are model prices on past volatilities, not quotes; the past is not
 are described in the risk documents of your exchange; tax and regulation are local. Ask a licensed adviser before you
 trade.""",
 )
+app.add_typer(overlays_app, name="overlays")
 
 
 @app.command()
@@ -59,25 +62,22 @@ def load(
     vol_unit: Unit = None,
     first: First = None,
     last: Last = None,
+    append: Append = False,
     store: Store = Path("histories"),
 ) -> None:
     """Check CSV files and store them as one history. Nothing is written if anything is wrong."""
     from data_loaders import load_history
-    from data_loaders.store import check_name, history_names, write_history
+    from data_loaders.store import check_name
 
     check_name(name)
-    history = load_history(
-        prices=prices, vol=vol, dividends=dividends, rates=rates,
-        vol_unit=vol_unit.value if vol_unit else None,
-        first_day=first.date() if first else None,
-        last_day=last.date() if last else None,
+    history = load_for(
+        lambda unit: load_history(
+            prices=prices, vol=vol, dividends=dividends, rates=rates, vol_unit=unit,
+            first_day=first.date() if first else None, last_day=last.date() if last else None,
+        ),
+        vol_unit.value if vol_unit else None, store, name, append=append,
     )  # fmt: skip
-    replaced = name in history_names(store)
-    path = write_history(history, store, name)
-    tell_history(history)
-    if replaced:
-        say(f"The history that was stored as {name} before is replaced.")
-    say(f"Stored as {path}")
+    store_and_tell(history, store, name, append=append)
     say(f"Next: rollband replay {shlex.quote(name)} --put 95 --call 110" + store_option(store))
 
 
@@ -98,7 +98,10 @@ def replay(
         int | None, typer.Option("--call-term", help="Months to expiry of a new call; its roll if not given.")
     ] = None,
     overlay: Annotated[
-        Path | None, typer.Option("--overlay", help="Overlay file (TOML) instead of --put and --call.")
+        Path | None,
+        typer.Option(
+            "--overlay", help="Overlay file (TOML) instead of --put and --call; ready-made: rollband overlays."
+        ),
     ] = None,
     prices: Prices = None,
     vol: Vol = None,
@@ -159,13 +162,17 @@ def replay(
         },
     )  # fmt: skip
     files = {"prices": prices, "vol": vol, "dividends": dividends, "rates": rates}
-    history, label = history_of(name, files, vol_unit=vol_unit, last=last, store=store)
+    history, label, source = history_and_source(name, files, vol_unit=vol_unit, last=last, store=store)
     window = {"start": first.date().isoformat() if first else None, "end": last.date().isoformat() if last else None}
     replay_and_write(
         history, label, agreed, rate=rate, dividend_yield=dividend_yield, window=window, out=out, as_json=as_json,
         results=Path("results"), overlay_file=overlay, command=["rollband", *sys.argv[1:]], seed=seed,
-        resamples=resamples, pdf=pdf, source=source_of(name, files, vol_unit=vol_unit, store=store),
+        resamples=resamples, pdf=pdf, source=source,
     )  # fmt: skip
+
+
+app.command("next")(next_roll)
+app.command("histories")(histories)
 
 
 @app.command()
@@ -267,7 +274,7 @@ def demo(folder: Annotated[Path, typer.Argument(help="Where to put it.")] = Path
         history, "demo", parse_overlay(DEMO_OVERLAY, file=overlay_file.name), rate=None, dividend_yield=None,
         window={"start": None, "end": None}, out=folder / "results", as_json=False, results=folder,
         overlay_file=overlay_file, command=["rollband", "replay", *arguments],
-        source=source_of("demo", {}, vol_unit=None, store=store),
+        source=history_and_source("demo", {}, vol_unit=None, last=None, store=store)[2],
     )  # fmt: skip
     say("")
     say("Try next:")

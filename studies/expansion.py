@@ -1,8 +1,11 @@
 """A study's combinations -> overlays, their volatilities and their windows.
 
-An overlay is made of parts: each leg, the account, the costs; beside it stand the volatility and the window. A part
-is built once for each distinct combination of the axes that touch it, however many overlays it is in: a grid of 100
-put strikes by 100 call strikes builds 200 legs.
+An overlay is made of parts: each leg, the account, the costs and so on; beside it stand the volatility and the window.
+A part is built once for each distinct combination of the axes that touch it, however many overlays it is in: a grid of
+100 put strikes by 100 call strikes builds 200 legs.
+
+A grid asks about a sold call under a bought put as about anything else, and ``leave_out`` is there for those who do not
+want it: so every overlay of a study has ``crossed = True``.
 """
 
 from __future__ import annotations
@@ -11,26 +14,29 @@ import datetime as dt
 import re
 from collections.abc import Callable, Iterator, Mapping, Sequence
 from dataclasses import dataclass
-from functools import partial
+from functools import lru_cache, partial
 from itertools import repeat
+from types import MappingProxyType
 from typing import TYPE_CHECKING, Any
 
 import numpy as np
 import numpy.typing as npt
 
-from backtest import Overlay, Volatility
-from backtest.strikes import STRIKE_RULES
+from backtest import Costs, Gate, Leg, Overlay, Volatility
+from backtest.gates import GATE_KEYS
+from backtest.strikes import STRIKE_KEYS
 
 from .errors import StudyFileError
-from .leave_out import Mask, left_out
+from .leave_out import left_out
+from .leg_files import EARLY_KEYS, LEG_KEYS, NONE, build, gate_from_value, leg_from_value
 from .overlay_files import (
     COST_KEYS,
-    LEG_KEYS,
     SMILE_KEYS,
     VOLATILITY_KEYS,
     account_from_value,
     costs_from_value,
-    leg_from_value,
+    lag_from_value,
+    portfolio_from_value,
     volatility_from_value,
 )
 from .toml_text import KeyPath, KeyProblem, key_words, near, table_of, toml
@@ -44,8 +50,8 @@ Points = npt.NDArray[np.int32]
 
 #: Of a window; either may be missing.
 WINDOW_KEYS = ("from", "to")
-#: Other values of an axis that are tried when an error looks for what is to blame.
-MOST_TRIED = 100
+#: Tables in a leg, with their keys.
+LEG_TABLES = {"strike": STRIKE_KEYS, "early": EARLY_KEYS, "gate": GATE_KEYS}
 
 _ISO_DAY = re.compile(r"\d{4}-\d\d-\d\d")
 
@@ -57,7 +63,7 @@ class Point:
     Attributes
     ----------
     overlay : Overlay
-        Without a name.
+        Without a name, and with consent to a call under the put.
     volatility : Volatility
     start, end : str or None
         First and last day of the window, ISO; None where the history's own.
@@ -69,7 +75,8 @@ class Point:
     end: str | None = None
 
 
-def known_fields(legs: int) -> dict[str, KeyPath]:
+@lru_cache(maxsize=8)
+def known_fields(legs: int) -> Mapping[str, KeyPath]:
     """Every field that an axis may touch, with its path in the table of an overlay.
 
     Examples
@@ -77,15 +84,17 @@ def known_fields(legs: int) -> dict[str, KeyPath]:
     >>> known_fields(2)["leg.2.strike.percent_of_spot"]
     ('leg', 1, 'strike', 'percent_of_spot')
     """
-    paths: list[KeyPath] = [("account",)]
+    paths: list[KeyPath] = [("account",), ("decide_lag",), ("portfolio",)]
+    paths += [("gate",), *(("gate", key) for key in GATE_KEYS)]
     for number in range(legs):
         paths += [("leg", number, key) for key in LEG_KEYS]
-        paths += [("leg", number, "strike", rule) for rule in STRIKE_RULES]
+        for table, keys in LEG_TABLES.items():
+            paths += [("leg", number, table, key) for key in keys]
     paths += [("costs", key) for key in COST_KEYS]
     paths += [("volatility", key) for key in VOLATILITY_KEYS]
     paths += [("volatility", "smile", key) for key in SMILE_KEYS]
     paths += [("window",), *(("window", key) for key in WINDOW_KEYS)]
-    return {key_words(path): path for path in paths}
+    return MappingProxyType({key_words(path): path for path in paths})
 
 
 def field_path(field: str, legs: int) -> KeyPath:
@@ -93,12 +102,17 @@ def field_path(field: str, legs: int) -> KeyPath:
     known = known_fields(legs)
     if field in known:
         return known[field]
+    if field == "crossed":
+        raise KeyProblem(
+            (), "crossed is true in every overlay of a study; leave out the combinations that you do not want to see"
+        )
     hint = near(field, tuple(known), ".")
     legs_known = "leg.1" if legs == 1 else f"leg.1 to leg.{legs}"
     raise KeyProblem(
         (),
-        f"there is no field {field}{hint} Known here: account, {legs_known} (.{', .'.join(LEG_KEYS)}), costs "
-        f"(.{', .'.join(COST_KEYS)}), volatility (.{', .'.join(VOLATILITY_KEYS)}), window (.from, .to)",
+        f"there is no field {field}{hint} Known here: account, decide_lag, portfolio, gate (.{', .'.join(GATE_KEYS)}), "
+        f"{legs_known} (.{', .'.join(LEG_KEYS)}), costs (.{', .'.join(COST_KEYS)}), volatility "
+        f"(.{', .'.join(VOLATILITY_KEYS)}), window (.from, .to)",
     )
 
 
@@ -143,7 +157,7 @@ class Expansion:
 
     def __init__(self, study: Study) -> None:
         self.study = study
-        self._parts = tuple(_parts(study.overlay, study.axes))
+        self._parts = tuple(parts_of(study.overlay, study.axes))
         self._made: list[dict[int, Any]] = [{} for _ in self._parts]
 
     def many(self, points: npt.ArrayLike) -> list[Point]:
@@ -163,15 +177,19 @@ class Expansion:
         """
         rows = self._checked(points)
         try:
-            account, *legs, costs, volatility, window = (self._of_part(n, rows) for n in range(len(self._parts)))
+            account, lag, money, gate, *legs, costs, volatility, window = (
+                self._ofpart_of(n, rows) for n in range(len(self._parts))
+            )
+            return [
+                Point(overlay=_overlay(*held), volatility=vol, start=start, end=end)
+                for *held, vol, (start, end), _ in zip(
+                    zip(*legs), account, lag, money, gate, costs, volatility, window, rows
+                )
+            ]
         except KeyProblem as problem:
             raise StudyFileError(
                 file="study", line=None, key=key_words(problem.path), problem=problem.problem, path=problem.path
             ) from None
-        return [
-            Point(overlay=Overlay(legs=held, account=word, costs=paid), volatility=vol, start=start, end=end)
-            for held, word, paid, vol, (start, end), _ in zip(zip(*legs), account, costs, volatility, window, rows)
-        ]
 
     def settings(self, points: npt.ArrayLike) -> pd.DataFrame:
         """A column for each axis: its values where they are numbers, else its labels.
@@ -203,7 +221,7 @@ class Expansion:
             raise ValueError(f"points lie outside the axes, which have {sizes} values")
         return rows.astype(np.intp, copy=False)
 
-    def _of_part(self, number: int, rows: npt.NDArray[np.intp]) -> Any:
+    def _ofpart_of(self, number: int, rows: npt.NDArray[np.intp]) -> Any:
         """One part of each combination; endlessly the same one if no axis touches it."""
         part, made = self._parts[number], self._made[number]
         if not part.axes:
@@ -218,19 +236,37 @@ class Expansion:
         return map(made.__getitem__, codes.tolist())
 
 
+def _overlay(
+    legs: tuple[Leg, ...], account: str, lag: int, portfolio: float | None, gate: Gate | None, costs: Costs
+) -> Overlay:
+    return build(
+        (), Overlay, crossed=True,
+        legs=legs, account=account, decide_lag=lag, portfolio=portfolio, gate=gate, costs=costs,
+    )  # fmt: skip
+
+
 @dataclass(frozen=True, slots=True, kw_only=True)
-class _Part:
-    """What one table of an overlay makes, and the axes that touch it."""
+class Part:
+    """What one table of an overlay makes, and the axes that touch it.
+
+    Attributes
+    ----------
+    path, base, make
+        Where the table is, its values where no axis sets them, and what makes something of it.
+    axes : tuple of int
+        Numbers of the axes that touch it; ``choices`` are their values, and ``inside`` the paths in it that each sets.
+    """
 
     path: KeyPath
     base: Any
     make: Callable[[Any], Any]
     axes: tuple[int, ...]
     choices: tuple[Sequence[Any], ...]
-    inside: tuple[tuple[KeyPath, ...], ...]  # of each of these axes, the paths inside the part that it sets
+    inside: tuple[tuple[KeyPath, ...], ...]
 
     @property
     def sizes(self) -> tuple[int, ...]:
+        """Number of values of each of these axes."""
         return tuple(len(values) for values in self.choices)
 
     def build(self, positions: Sequence[int]) -> Any:
@@ -250,26 +286,33 @@ class _Part:
         return None
 
 
-def _parts(overlay: Mapping[str, Any], axes: Sequence[Axis]) -> Iterator[_Part]:
-    """Account, each leg, costs, volatility and window, in this order."""
+def parts_of(overlay: Mapping[str, Any], axes: Sequence[Axis]) -> Iterator[Part]:
+    """Account, lag, portfolio, gate, each leg, costs, volatility and window, in this order."""
     legs = overlay["leg"]
-    choices = [axis.values for axis in axes]  # noqa: PD011  an Axis is no frame
-    sets = [[field_path(field, len(legs)) for field in axis.fields] for axis in axes]
+    wanted: list[tuple[KeyPath, Any, Callable[[Any], Any]]] = [
+        (("account",), overlay["account"], account_from_value),
+        (("decide_lag",), overlay["decide_lag"], lag_from_value),
+        (("portfolio",), overlay.get("portfolio", NONE), portfolio_from_value),
+        (("gate",), overlay.get("gate", NONE), gate_from_value),
+        *((("leg", number), leg, partial(leg_from_value, number=number)) for number, leg in enumerate(legs)),
+        (("costs",), overlay["costs"], costs_from_value),
+        (("volatility",), overlay["volatility"], volatility_from_value),
+        (("window",), {}, window_from_value),
+    ]
+    for path, base, make in wanted:
+        yield part_of(path, base, make, axes, len(legs))
 
-    def part(path: KeyPath, base: Any, make: Callable[[Any], Any]) -> _Part:
-        inside = [tuple(field[len(path) :] for field in fields if field[: len(path)] == path) for fields in sets]
-        touching = tuple(number for number, paths in enumerate(inside) if paths)
-        return _Part(
-            path=path, base=base, make=make, axes=touching,
-            choices=tuple(choices[n] for n in touching), inside=tuple(inside[n] for n in touching),
-        )  # fmt: skip
 
-    yield part(("account",), overlay["account"], account_from_value)
-    for number, leg in enumerate(legs):
-        yield part(("leg", number), leg, partial(leg_from_value, number=number))
-    yield part(("costs",), overlay["costs"], costs_from_value)
-    yield part(("volatility",), overlay["volatility"], volatility_from_value)
-    yield part(("window",), {}, window_from_value)
+def part_of(path: KeyPath, base: Any, make: Callable[[Any], Any], axes: Sequence[Axis], legs: int) -> Part:
+    """The part at a path of an overlay's table, with the axes that touch it."""
+    sets = [[field_path(field, legs) for field in axis.fields] for axis in axes]
+    inside = [tuple(field[len(path) :] for field in fields if field[: len(path)] == path) for fields in sets]
+    touching = tuple(number for number, paths in enumerate(inside) if paths)
+    choices = tuple(axis.values for axis in axes)  # noqa: PD011  an Axis is no frame
+    return Part(
+        path=path, base=base, make=make, axes=touching,
+        choices=tuple(choices[n] for n in touching), inside=tuple(inside[n] for n in touching),
+    )  # fmt: skip
 
 
 def _with(table: Any, path: KeyPath, value: Any, above: KeyPath) -> Any:
@@ -277,6 +320,8 @@ def _with(table: Any, path: KeyPath, value: Any, above: KeyPath) -> Any:
     if not path:
         return value
     key, *rest = path
+    if table == NONE:
+        table = {}
     if not isinstance(table, dict):
         raise KeyProblem(above, f"is {toml(table)}, which has no {key} to set; write it as a table in [overlay]")
     return {**table, key: _with(table.get(key, {}), tuple(rest), value, (*above, key))}
@@ -303,38 +348,3 @@ def _is_day(value: Any) -> bool:
     except ValueError:
         return False
     return True
-
-
-def check_values(overlay: Mapping[str, Any], axes: Sequence[Axis], kept: Mask) -> None:
-    """Try every distinct part of the combinations that are kept.
-
-    Raises
-    ------
-    KeyProblem
-        At ``axis``, its number and ``values``, for the first that makes no overlay.
-    """
-    for part in _parts(overlay, axes):
-        elsewhere = tuple(number for number in range(len(axes)) if number not in part.axes)
-        if not part.axes:
-            continue
-        for positions in np.argwhere(kept.any(axis=elsewhere)).tolist():
-            problem = part.problem(positions)
-            if problem is not None:
-                raise _blamed(part, positions, problem, axes)
-
-
-def _blamed(part: _Part, positions: list[int], problem: KeyProblem, axes: Sequence[Axis]) -> KeyProblem:
-    """The problem of a combination, in the words of the axes that another value would rid of it."""
-    to_blame = []
-    for place, size in enumerate(part.sizes):
-        for other in range(min(size, MOST_TRIED)):
-            tried = part.problem([*positions[:place], other, *positions[place + 1 :]])
-            if tried is None or tried.problem != problem.problem:
-                to_blame.append(place)
-                break
-    named = [part.axes[place] for place in to_blame or range(len(positions))]
-    chosen = {axis: values[position] for axis, values, position in zip(part.axes, part.choices, positions)}
-    words = [f"axis {axes[number].name}, value {toml(chosen[number])}" for number in named]
-    hint = "; or leave the combination out with leave_out" if len(words) > 1 else ""
-    said = f"{' with '.join(words)}: {key_words(problem.path)}: {problem.problem}{hint}"
-    return KeyProblem(("axis", named[0], "values"), said)

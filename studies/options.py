@@ -58,3 +58,9 @@ Last = Annotated[datetime | None, typer.Option("--to", formats=["%Y-%m-%d"], hel
 AsJson = Annotated[
     bool, typer.Option("--json", help="Print the summary as JSON on standard output, and nothing else there.")
 ]
+Append = Annotated[
+    bool,
+    typer.Option(
+        "--append", help="Put the new days after the stored history; on days in common the files must agree with it."
+    ),
+]

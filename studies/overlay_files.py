@@ -1,8 +1,8 @@
 """TOML -> Overlay and back; an error names file, line and key.
 
-An overlay file holds the agreement (legs, account, costs) and, in ``[volatility]``,
-how its options are priced. The normal form names every field, so that a file and
-its normal form always mean the same and the round trip is exact.
+An overlay file holds the agreement (legs, account, costs), in ``[volatility]`` how its options are priced, and in
+``[counterparty]`` and ``[sale]`` what is asked beside it. The normal form names every field that plays a part, so that
+a file and its normal form always mean the same and the round trip is exact.
 """
 
 from __future__ import annotations
@@ -23,31 +23,62 @@ from backtest import (
     SSVISmile,
     Volatility,
 )
-from backtest.arguments import one_of
+from backtest.arguments import number, one_of, whole_number
+from backtest.beside import Counterparty, Sale
+from backtest.gates import gate_to_table
 from backtest.overlay import ACCOUNTS
-from backtest.strikes import STRIKE_RULES, StrikeRule
 from backtest.volatility.smile import SMILE_LADDER, FlatSmile
+from backtest.volatility.sources import ImpliedSurface, Source
 
 from .errors import OverlayFileError
-from .toml_text import KeyPath, KeyProblem, key_words, known_keys, line_of, parse_toml, read_toml_text, table_of, toml
+from .leg_files import NONE, OPTIONAL, build, gate_from_value, leg_from_value, leg_to_table, without_none
+from .leg_words import describe_legs
+from .toml_text import (
+    KeyPath,
+    KeyProblem,
+    key_words,
+    known_keys,
+    nearest_line,
+    parse_toml,
+    plain,
+    read_toml_text,
+    table_of,
+    toml,
+)
 
 #: Larger files are taken for a mistake.
 LARGEST_FILE_BYTES = 1_000_000
 
-TOP_KEYS = ("name", "account", "leg", "costs", "volatility")
-LEG_KEYS = ("position", "right", "roll", "term", "phase", "shift_days", "ratio", "strike")
+TOP_KEYS = (
+    "name", "account", "decide_lag", "portfolio", "crossed", "gate", "leg", "costs", "volatility", "counterparty",
+    "sale",
+)  # fmt: skip
+#: Fields of a volatility that are written in a way of their own.
+_NAMED = ("smile", "quote", "source")
+#: Tables of their own in the text of a file; what comes before them is written key by key.
+SECTIONS = ("costs", "volatility", "counterparty", "sale")
 COST_KEYS = tuple(f.name for f in fields(Costs))
-VOLATILITY_KEYS = ("smile", "quote", "source", "window", "markup", "put_shift", "call_shift")
+#: Keys of ``[volatility]`` that belong to realised vol.
+REALISED_KEYS = tuple(f.name for f in fields(RealisedVolatility))
+VOLATILITY_KEYS = (
+    "smile", "quote", "source", *REALISED_KEYS, *(f.name for f in fields(Volatility) if f.name not in _NAMED),
+)  # fmt: skip
 SMILE_KEYS = ("rho", "eta", "gamma")
-SOURCES = ("auto", "implied", "realised")
+#: Where vols come from, by the word of it; realised vol has keys of its own.
+REALISED = "realised"
+SOURCES: dict[str, Source | None] = {"auto": None, "implied": ImpliedSeries(), "surface": ImpliedSurface()}
+COUNTERPARTY_KEYS = tuple(f.name for f in fields(Counterparty))
+SALE_KEYS = tuple(f.name for f in fields(Sale))
 
 
 @dataclass(frozen=True, slots=True, kw_only=True)
 class OverlayFile:
-    """What an overlay file says."""
+    """What an overlay file says; the last two are asked beside a replay, and None where they are not."""
 
     overlay: Overlay
     volatility: Volatility
+    counterparty: Counterparty | None = None
+    sale: Sale | None = None
 
 
 def read_overlay_file(path: Path) -> OverlayFile:
@@ -80,9 +111,9 @@ def parse_overlay(text: str, *, file: str = "overlay") -> OverlayFile:
     try:
         return overlay_from_table(table)
     except KeyProblem as problem:
-        raise OverlayFileError(
-            file=file, line=line_of(text, problem.path), key=key_words(problem.path) or None, problem=problem.problem
-        ) from None
+        line = nearest_line(text, problem.path)
+        key = key_words(problem.path) or None
+        raise OverlayFileError(file=file, line=line, key=key, problem=problem.problem) from None
 
 
 def overlay_from_table(table: Mapping[str, Any]) -> OverlayFile:
@@ -97,14 +128,28 @@ def overlay_from_table(table: Mapping[str, Any]) -> OverlayFile:
     legs = table.get("leg", [])
     if not isinstance(legs, list) or not legs:
         raise KeyProblem(("leg",), "an overlay needs at least one [[leg]]")
-    built = tuple(leg_from_value(leg, number) for number, leg in enumerate(legs))
-    costs = costs_from_value(table.get("costs", {}))
+    built = tuple(leg_from_value(leg, place) for place, leg in enumerate(legs))
     name = table.get("name", describe_legs(built))
     if not isinstance(name, str):
         raise KeyProblem(("name",), f"is {name!r}; it takes a text in quotes")
-    account = account_from_value(table.get("account", "resize"))
-    overlay = _build((), Overlay, name=name, account=account, legs=built, costs=costs)
-    return OverlayFile(overlay=overlay, volatility=volatility_from_value(table.get("volatility", {})))
+    overlay = build(
+        (),
+        Overlay,
+        name=name,
+        account=account_from_value(table.get("account", "resize")),
+        decide_lag=lag_from_value(table.get("decide_lag", 0)),
+        portfolio=portfolio_from_value(table.get("portfolio", NONE)),
+        crossed=table.get("crossed", False),
+        gate=gate_from_value(table.get("gate", NONE)),
+        legs=built,
+        costs=costs_from_value(table.get("costs", {})),
+    )
+    return OverlayFile(
+        overlay=overlay,
+        volatility=volatility_from_value(table.get("volatility", {})),
+        counterparty=_beside("counterparty", table, Counterparty, COUNTERPARTY_KEYS),
+        sale=_beside("sale", table, Sale, SALE_KEYS),
+    )
 
 
 def shorthand_overlay(
@@ -133,123 +178,107 @@ def shorthand_overlay(
     return OverlayFile(overlay=Overlay(name=describe_legs(tuple(legs)), legs=tuple(legs)), volatility=Volatility())
 
 
-def overlay_to_table(overlay: Overlay, volatility: Volatility) -> dict[str, Any]:
-    """The normal form: every field named, plain values only."""
+def overlay_to_table(
+    overlay: Overlay, volatility: Volatility, *, counterparty: Counterparty | None = None, sale: Sale | None = None
+) -> dict[str, Any]:
+    """The normal form, plain values only: every field named, but for what is not given and has no default."""
+    table: dict[str, Any] = {"name": overlay.name, "account": overlay.account, "decide_lag": overlay.decide_lag}
+    if overlay.portfolio is not None:
+        table["portfolio"] = overlay.portfolio
+    if overlay.crossed:
+        table["crossed"] = True
+    if overlay.gate is not None:
+        table["gate"] = gate_to_table(overlay.gate)
+    table |= {
+        "leg": [leg_to_table(leg) for leg in overlay.legs],
+        "costs": {key: getattr(overlay.costs, key) for key in COST_KEYS},
+        "volatility": volatility_to_table(volatility),
+    }
+    if counterparty is not None:
+        table["counterparty"] = plain((), {key: getattr(counterparty, key) for key in COUNTERPARTY_KEYS})
+    if sale is not None:
+        table["sale"] = {key: getattr(sale, key) for key in SALE_KEYS}
+    return table
+
+
+def volatility_to_table(volatility: Volatility) -> dict[str, Any]:
+    """The table ``[volatility]`` with every field; those of realised vol only with it."""
     smile: str | dict[str, float] = volatility.smile.name
     if isinstance(volatility.smile, SSVISmile) and smile not in SMILE_LADDER:
         smile = {key: getattr(volatility.smile, key) for key in SMILE_KEYS}
-    vol: dict[str, Any] = {"smile": smile, "quote": volatility.quote, "source": "auto"}
-    if isinstance(volatility.source, RealisedVolatility):
-        vol |= {"source": "realised", "window": volatility.source.window, "markup": volatility.source.markup}
-    elif volatility.source is not None:
-        vol["source"] = "implied"
-    vol |= {"put_shift": volatility.put_shift, "call_shift": volatility.call_shift}
-    return {
-        "name": overlay.name,
-        "account": overlay.account,
-        "leg": [
-            {
-                "position": leg.position,
-                "right": leg.right,
-                "roll": leg.roll,
-                "term": leg.term,
-                "phase": leg.phase,
-                "shift_days": leg.shift_days,
-                "ratio": leg.ratio,
-                "strike": _strike_to_table(leg.strike),
-            }
-            for leg in overlay.legs
-        ],
-        "costs": {f.name: getattr(overlay.costs, f.name) for f in fields(overlay.costs)},
-        "volatility": vol,
-    }
+    source = volatility.source
+    word = next((word for word, known in SOURCES.items() if known == source), REALISED)
+    vol: dict[str, Any] = {"smile": smile, "quote": volatility.quote, "source": word}
+    if isinstance(source, RealisedVolatility):
+        told = {key: getattr(source, key) for key in REALISED_KEYS}
+        vol |= {key: value for key, value in told.items() if value is not None}
+    return vol | {key: getattr(volatility, key) for key in VOLATILITY_KEYS if key not in (*_NAMED, *REALISED_KEYS)}
 
 
-def overlay_to_toml(overlay: Overlay, volatility: Volatility) -> str:
+def overlay_to_toml(
+    overlay: Overlay, volatility: Volatility, *, counterparty: Counterparty | None = None, sale: Sale | None = None
+) -> str:
     """The normal form as the text of an overlay file."""
-    table = overlay_to_table(overlay, volatility)
-    lines = [f"name = {toml(table['name'])}", f"account = {toml(table['account'])}"]
+    return table_to_toml(overlay_to_table(overlay, volatility, counterparty=counterparty, sale=sale))
+
+
+def table_to_toml(table: Mapping[str, Any], *, above: str = "") -> str:
+    """The table of an overlay as text; ``above`` is put before the name of every table in it, such as ``overlay.``."""
+    lines = [f"{key} = {toml(value)}" for key, value in table.items() if key not in ("leg", *SECTIONS)]
     for leg in table["leg"]:
-        lines += ["", "[[leg]]", *(f"{key} = {toml(value)}" for key, value in leg.items())]
-    for section in ("costs", "volatility"):
-        lines += ["", f"[{section}]", *(f"{key} = {toml(value)}" for key, value in table[section].items())]
+        lines += ["", f"[[{above}leg]]", *(f"{key} = {toml(value)}" for key, value in leg.items())]
+    for section in SECTIONS:
+        if section in table:
+            lines += ["", f"[{above}{section}]", *(f"{key} = {toml(value)}" for key, value in table[section].items())]
     return "\n".join(lines) + "\n"
-
-
-ROLL_ADVERBS = {"month": "monthly", "quarter": "quarterly", "half": "half-yearly", "year": "yearly"}
-
-
-def describe_legs(legs: tuple[Leg, ...]) -> str:
-    """A plain name for an overlay, such as ``quarterly 95 put, monthly 110 call``."""
-    words = []
-    for leg in legs:
-        strike = " ".join(f"{value:g}" for value in _strike_to_table(leg.strike).values())
-        of_forward = " of forward" if "percent_of_forward" in _strike_to_table(leg.strike) else ""
-        unusual = {("short", "put"): "sold ", ("long", "call"): "bought "}.get((leg.position, leg.right), "")
-        ratio = "" if leg.ratio == 1 else f"{leg.ratio:g} x "
-        words.append(f"{ratio}{ROLL_ADVERBS[leg.roll]} {strike}{of_forward} {unusual}{leg.right}")
-    return ", ".join(words)
 
 
 def account_from_value(value: Any) -> str:
     """An account by its word."""
-    _build(("account",), one_of, "account", value, ACCOUNTS)
+    build(("account",), one_of, "account", value, ACCOUNTS)
+    return value
+
+
+def lag_from_value(value: Any) -> int:
+    """Trading days between a decision and its trade."""
+    build(("decide_lag",), whole_number, "decide_lag", value, least=0, most=1, unit=" (trading day)")
+    return value
+
+
+def portfolio_from_value(value: Any) -> float | None:
+    """Money at inception; None for the word."""
+    if value == NONE:
+        return None
+    build(("portfolio",), number, "portfolio", value, least=1.0, unit=" (money)")
     return value
 
 
 def costs_from_value(value: Any) -> Costs:
     """Costs from the table ``[costs]``."""
     path: KeyPath = ("costs",)
-    return _build(path, Costs, **table_of(path, value, COST_KEYS))
+    return build(path, Costs, **table_of(path, value, COST_KEYS))
 
 
-def leg_from_value(value: Any, number: int) -> Leg:
-    """A leg from its table, the ``number``-th ``[[leg]]`` counted from 0."""
-    path: KeyPath = ("leg", number)
-    given = table_of(path, value, LEG_KEYS)
-    for needed in ("position", "right", "strike"):
-        if needed not in given:
-            raise KeyProblem(path, f"has no {needed}; a leg needs position, right and strike")
-    arguments = {("term_months" if key == "term" else key): item for key, item in given.items()}
-    arguments["strike"] = _strike((*path, "strike"), given["strike"])
-    return _build(path, Leg, **arguments)
-
-
-def _strike(path: KeyPath, value: Any) -> StrikeRule:
-    rules = ", ".join(STRIKE_RULES)
-    if not isinstance(value, dict) or len(value) != 1:
-        raise KeyProblem(path, f"is {value!r}; it takes one rule, such as {{ percent_of_spot = 95 }}; rules: {rules}")
-    ((rule, argument),) = value.items()
-    known_keys(path, value, tuple(STRIKE_RULES))
-    return _build(path, STRIKE_RULES[rule], argument)
-
-
-def _strike_to_table(strike: StrikeRule) -> dict[str, float]:
-    for name, rule in STRIKE_RULES.items():
-        if type(strike) is rule:
-            (only,) = fields(rule)
-            return {name: getattr(strike, only.name)}
-    raise OverlayError(f"strike rule {strike!r} has no name in an overlay file", field="strike")
+def _beside(key: str, table: Mapping[str, Any], make: Any, keys: tuple[str, ...]) -> Any:
+    """What a table of its own asks; None without one."""
+    return build((key,), make, **table_of((key,), table[key], keys)) if key in table else None
 
 
 def volatility_from_value(value: Any) -> Volatility:
     """How options are priced, from the table ``[volatility]``."""
     path: KeyPath = ("volatility",)
-    given = table_of(path, value, VOLATILITY_KEYS)
-    source = given.get("source", "auto")
-    if source not in SOURCES:
-        raise KeyProblem((*path, "source"), f"is {source!r}; it takes one of: {', '.join(SOURCES)}")
-    for key in ("window", "markup"):
-        if key in given and source != "realised":
-            raise KeyProblem((*path, key), 'belongs to realised vol; add source = "realised" or leave it out')
-    made: ImpliedSeries | RealisedVolatility | None = None
-    if source == "implied":
-        made = ImpliedSeries()
-    elif source == "realised":
-        made = _build(path, RealisedVolatility, **{k: given[k] for k in ("window", "markup") if k in given})
-    smile = smile_from_value(given.get("smile", "index"), path=(*path, "smile"))
-    quoted = {key: given[key] for key in ("quote", "put_shift", "call_shift") if key in given}
-    return _build(path, Volatility, source=made, smile=smile, **quoted)
+    given = without_none(table_of(path, value, VOLATILITY_KEYS), OPTIONAL["volatility"])
+    source = given.pop("source", "auto")
+    words = (*SOURCES, REALISED)
+    if source not in words:
+        raise KeyProblem((*path, "source"), f"is {source!r}; it takes one of: {', '.join(words)}")
+    realised = {key: given.pop(key) for key in REALISED_KEYS if key in given}
+    if realised and source != REALISED:
+        problem = 'belongs to realised vol; add source = "realised" or leave it out'
+        raise KeyProblem((*path, next(iter(realised))), problem)
+    made = build(path, RealisedVolatility, **realised) if source == REALISED else SOURCES[source]
+    smile = smile_from_value(given.pop("smile", "index"), path=(*path, "smile"))
+    return build(path, Volatility, source=made, smile=smile, **given)
 
 
 def smile_from_value(value: Any, *, path: KeyPath = ("smile",)) -> FlatSmile | SSVISmile:
@@ -263,7 +292,7 @@ def smile_from_value(value: Any, *, path: KeyPath = ("smile",)) -> FlatSmile | S
     missing = [key for key in SMILE_KEYS if key not in value]
     if missing:
         raise KeyProblem(path, f"lacks {', '.join(missing)}; a smile of one's own takes rho, eta and gamma")
-    return _build(path, SSVISmile, **value)
+    return build(path, SSVISmile, **value)
 
 
 def smile_from_option(text: str) -> FlatSmile | SSVISmile:
@@ -286,14 +315,3 @@ def smile_from_option(text: str) -> FlatSmile | SSVISmile:
     except KeyProblem as problem:
         words = problem.problem.replace("{ rho = , eta = , gamma = }", "three numbers RHO,ETA,GAMMA")
         raise OverlayError(f"--smile {words}", field="smile") from None
-
-
-def _build(path: KeyPath, make: Any, *args: Any, **kwargs: Any) -> Any:
-    """Make an object, turning its complaint into one that knows its place."""
-    try:
-        return make(*args, **kwargs)
-    except OverlayError as error:
-        inside = (
-            error.field is not None and error.field != (path[-1] if path else None) and error.field not in STRIKE_RULES
-        )
-        raise KeyProblem((*path, error.field) if inside and error.field else path, str(error)) from None

@@ -11,6 +11,7 @@ PATHS = {
     "mix_same_return": "same-return mix",
     "mix_same_drawdown": "same-drawdown mix",
     "mix_same_delta": "same-delta mix",
+    "mix_sale": "sale instead",
     "put_only": "put only",
     "call_only": "call only",
 }

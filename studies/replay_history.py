@@ -18,13 +18,22 @@ from backtest import (
     replay_many,
 )
 from backtest.analytics import Attribution, Mixes, Performance, RollCosts, attribute, mixes, performance, roll_costs
+from backtest.analytics.counterparty import Stress, counterparty_stress
+from backtest.analytics.margin import Margin, margin
 from backtest.analytics.performance import years_between
+from backtest.analytics.sale import SaleInstead, sale_instead
+from backtest.beside import Counterparty, Sale
 from backtest.volatility import SMILE_LADDER
 
+from .activity import activity_of
 from .assumptions import assumptions_of, warnings_of
 from .results import SCHEMA
 
 Array = npt.NDArray[np.float64]
+
+#: What the sale instead is called among figures and paths. It is no mix that is kept at its share, so resampling,
+#: which would draw the charge of its first day many times or never, leaves it out.
+SALE = "mix_sale"
 
 
 @dataclass(frozen=True, slots=True, kw_only=True, eq=False)
@@ -43,7 +52,8 @@ class Answer:
     """Everything a replay of one overlay says.
 
     ``figures`` has ``overlay``, ``hold``, ``mix_*``, ``put_only`` and ``call_only``; None where a comparison
-    does not exist (an overlay without calls has no ``call_only``).
+    does not exist (an overlay without calls has no ``call_only``). It has ``mix_sale`` where a sale was asked for.
+    ``margin`` is None where no leg is sold, ``counterparty`` where none was asked for.
     """
 
     replay: Replay
@@ -57,6 +67,9 @@ class Answer:
     assumptions: dict[str, str]
     warnings: tuple[str, ...]
     history_notes: tuple[str, ...]
+    margin: Margin | None = None
+    counterparty: Stress | None = None
+    sale: SaleInstead | None = None
 
     @property
     def used_smile(self) -> str:
@@ -68,6 +81,7 @@ class Answer:
         """Growth of 1 of everything in ``figures`` that exists."""
         found = {"overlay": self.replay.wealth, "hold": self.replay.hold}
         found |= {f"mix_{name}": mix.wealth for name, mix in self.mixes.items() if mix is not None}
+        found |= {} if self.sale is None else {SALE: self.sale.wealth}
         found |= {n: r.wealth for n, r in (("put_only", self.put_only), ("call_only", self.call_only)) if r is not None}
         return found
 
@@ -80,8 +94,10 @@ def answer(
     start: object = None,
     end: object = None,
     history_notes: tuple[str, ...] = (),
+    counterparty: Counterparty | None = None,
+    sale: Sale | None = None,
 ) -> Answer:
-    """Replay an overlay, all its comparisons and the smile ladder.
+    """Replay an overlay, all its comparisons and the smile ladder; and what is asked beside it.
 
     Raises
     ------
@@ -103,6 +119,9 @@ def answer(
     figures: dict[str, Performance | None] = {"overlay": main.figures, "hold": _figures(main.replay, main.replay.hold)}
     for name, mix in main.mixes.items():
         figures[f"mix_{name}"] = None if mix is None else _figures(main.replay, mix.wealth)
+    sold = None if sale is None else _sale(main, sale)
+    if sale is not None:
+        figures[SALE] = None if sold is None else _figures(main.replay, sold.wealth)
     for right, found in one_sided.items():
         figures[f"{right}_only"] = None if found is None else _figures(main.replay, found.wealth)
     return Answer(
@@ -117,6 +136,9 @@ def answer(
         assumptions=assumptions_of(main.replay),
         warnings=tuple(warnings_of(main.replay)),
         history_notes=history_notes,
+        margin=margin(main.replay),
+        counterparty=None if counterparty is None else counterparty_stress(main.replay, counterparty),
+        sale=sold,
     )
 
 
@@ -132,6 +154,16 @@ def _rung(found: Replay) -> SmileRung:
     )
 
 
+def _sale(main: SmileRung, sale: Sale) -> SaleInstead | None:
+    mix = main.mixes.same_beta
+    return sale_instead(
+        sale,
+        share=None if mix is None else mix.share,
+        hold=main.replay.hold,
+        rate_return=main.replay.rate_return,
+    )
+
+
 def _figures(found: Replay, wealth: Array) -> Performance:
     return performance(wealth, dates=found.dates, rate_return=found.rate_return, hold=found.hold)
 
@@ -139,12 +171,17 @@ def _figures(found: Replay, wealth: Array) -> Performance:
 def _one_sided(
     market: Market, overlay: Overlay, right: str, whole: Replay, *, volatility: Volatility, end: object
 ) -> Replay | None:
-    """The overlay's own legs of one right, from the same inception (C10)."""
+    """The overlay's own legs of one right, from the same inception (C10).
+
+    A leg that names one of the other right still sees it, though it is not held.
+    """
     legs = tuple(leg for leg in overlay.legs if leg.right == right)
-    if not legs:
+    if all(leg.reference for leg in legs):
         return None
     if len(legs) == len(overlay.legs):
         return whole
+    if any(leg.named_legs for leg in legs):
+        legs = tuple(leg if leg.right == right else replace(leg, reference=True) for leg in overlay.legs)
     part = replace(overlay, legs=legs, name=f"{right} only")
     return replay(market, part, volatility=volatility, inception=whole.dates[0], end=end)
 
@@ -166,6 +203,13 @@ def summary(found: Answer) -> dict[str, Any]:
     for name, mix in found.mixes.items():
         if mix is not None and made[f"mix_{name}"] is not None:
             made[f"mix_{name}"]["share_of_stock"] = mix.share
+    if found.sale is not None:
+        made[SALE] |= {"share_of_stock": found.sale.share, "charge": found.sale.charge}
+    if found.margin is not None:
+        made["margin"] = found.margin.as_dict()
+    if found.counterparty is not None:
+        made["counterparty"] = found.counterparty.as_dict()
+    made["activity"] = activity_of(found.replay)
     made["roll_cost"] = found.costs.as_dict()
     made["attribution"] = found.attribution.annual()
     made["attribution_risk_shares"] = found.attribution.risk_shares()

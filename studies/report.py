@@ -16,7 +16,7 @@ from backtest.analytics.roll_costs import payoffs_at_close
 from backtest.analytics.verdict import Clause, Difference, Evidence, verdict
 
 from .findings import Findings, find
-from .replay_history import Answer
+from .replay_history import SALE, Answer
 
 Array = npt.NDArray[np.float64]
 
@@ -69,7 +69,8 @@ def infer(
 ) -> Inference:
     """Overlay, hold and mixes drawn together from the days of the replay (C13)."""
     replay = found.replay
-    returns = {name: path[1:] / path[:-1] - 1.0 for name, path in found.paths.items() if not name.endswith("_only")}
+    drawn = {name: path for name, path in found.paths.items() if not (name.endswith("_only") or name == SALE)}
+    returns = {name: path[1:] / path[:-1] - 1.0 for name, path in drawn.items()}
     overlay = returns.pop("overlay")
     return paired_bootstrap(
         overlay_returns=overlay,

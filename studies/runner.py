@@ -7,6 +7,7 @@ the order in which batches come back, and an interruption with a later ``resume`
 from __future__ import annotations
 
 import os
+import re
 from collections import deque
 from collections.abc import Callable, Generator, Iterable, Iterator, Sequence
 from concurrent.futures import FIRST_COMPLETED, BrokenExecutor, CancelledError, Executor, Future, wait
@@ -25,17 +26,19 @@ from backtest.analytics.reality_check import Partial, combine
 from backtest.errors import BacktestError
 from data_loaders.store import read_history
 
-from .batches import ASKED, FIGURES, SPAN, Span, columns_of, common_span
-from .errors import StudyError, StudyFileError
+from .axes import SETTINGS
+from .batches import ASKED, SPAN, Span, columns_of, common_span
+from .errors import StudyError
 from .expansion import Expansion, points
 from .jobs import Columns, Context, Job, forget, frozen, history_file, market_at, of_history, run_job
 from .local_workers import LocalWorkers
 from .results import sha256_of
 from .study import Study, study_to_table
-from .toml_text import KeyPath, key_words
 from .working_folder import WorkingFolder
 
-__all__ = ["Group", "Progress", "Rows", "StudyPlan", "default_workers", "history_file", "plan_study", "run_plan"]
+__all__ = [
+    "SETTINGS", "Group", "Progress", "Rows", "StudyPlan", "default_workers", "history_file", "plan_study", "run_plan",
+]  # fmt: skip
 
 Progress = Callable[[int, int], None]
 Batch = tuple[Columns, Partial | None]
@@ -48,10 +51,14 @@ IN_HAND = 2
 IN_HAND_ELSEWHERE = 64
 #: Seconds of work left for which it is worth while to start worker processes, which takes about one.
 WORTH_STARTING = 3.0
-#: Columns of the results before those of the axes.
-SETTINGS = ("number", "history")
-#: Fields of a leg and of the volatility on which the first day of an overlay depends; a ratio by whether it is zero.
-DECIDES_THE_FIRST_DAY = ("roll", "phase", "shift_days", "ratio", "source", "window")
+#: Fields on which the first day of an overlay may depend, legs without their number; a ratio by whether it is zero.
+DECIDES_THE_FIRST_DAY = (
+    "decide_lag", "volatility.source", "volatility.window", "volatility.markup", "volatility.estimator",
+    "volatility.half_life", "volatility.markup_points", "leg.roll", "leg.roll_day", "leg.every", "leg.phase",
+    "leg.shift_days", "leg.close_before", "leg.ratio", "leg.ladder", "leg.stagger", "leg.reference",
+)  # fmt: skip
+
+_LEG = re.compile(r"^leg\.\d+\.")
 
 
 @dataclass(frozen=True, slots=True, kw_only=True)
@@ -89,6 +96,8 @@ class StudyPlan:
             "study": study_to_table(self.study),
             "inputs": list(self.inputs),
             "batch": BATCH,
+            # before, each overlay began on its own first roll day
+            "days": "in common",
             "groups": [
                 {
                     "history": group.history,
@@ -116,10 +125,8 @@ def plan_study(study: Study, *, store: Path) -> StudyPlan:
     Raises
     ------
     LoadError, BacktestError, StudyError
-        If a history is missing, or an overlay cannot be replayed on one (the message names the history), or an axis
-        has the name of a column of the results.
+        If a history is missing, or an overlay cannot be replayed on one (the message names the history).
     """
-    _check_names(study)
     expansion = Expansion(study)
     wanted = points(study)
     window_axes = [number for number, axis in enumerate(study.axes) if any(f.startswith("window") for f in axis.fields)]
@@ -149,15 +156,6 @@ def plan_study(study: Study, *, store: Path) -> StudyPlan:
         for first in range(0, len(group.points), BATCH)
     )
     return StudyPlan(study=study, store=store, groups=tuple(groups), batches=batches, inputs=tuple(inputs))
-
-
-def _check_names(study: Study) -> None:
-    """Each axis becomes a column beside those of the figures."""
-    for number, axis in enumerate(study.axes):
-        if axis.name in (*SETTINGS, *SPAN, *FIGURES):
-            path: KeyPath = ("axis", number, "name")
-            problem = f"{axis.name} is the name of a column of the results; give the axis another"
-            raise StudyFileError(file="study", line=None, key=key_words(path), problem=problem, path=path)
 
 
 def market_of(plan: StudyPlan, group: Group) -> Market:
@@ -353,10 +351,10 @@ def _asked(study: Study, chosen: npt.NDArray[np.int32]) -> npt.NDArray[np.int32]
     """An overlay for each first day that the study may have, and a few more spread over all."""
     deciding = []
     for number, axis in enumerate(study.axes):
-        last = {field.rsplit(".", 1)[-1] for field in axis.fields}
-        if last & set(DECIDES_THE_FIRST_DAY):
+        fields = {_LEG.sub("leg.", field) for field in axis.fields} & {*DECIDES_THE_FIRST_DAY}
+        if fields:
             column = chosen[:, number]
-            if last & set(DECIDES_THE_FIRST_DAY) == {"ratio"}:
+            if fields == {"leg.ratio"}:
                 column = np.array([value == 0 for value in axis.values])[column]
             deciding.append(column)
     _, one_each = np.unique(np.column_stack([np.zeros(len(chosen)), *deciding]), axis=0, return_index=True)

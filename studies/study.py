@@ -1,7 +1,8 @@
 """A study is data: one overlay, the axes along which it varies, and what it is compared with; TOML in and out.
 
-The normal form names every field (but a leg's ``term``, which follows its roll unless given, and what belongs to
-realised vol only), so that two files that mean the same give the same :class:`Study`.
+The normal form names every field (but a leg's ``term``, which follows its roll unless given, what belongs to realised
+vol only, and ``crossed``, which every overlay of a study is allowed to be), so that two files that mean the same give
+the same :class:`Study`.
 """
 
 from __future__ import annotations
@@ -17,9 +18,9 @@ from data_loaders.store import check_name
 
 from .axes import Axis, check_axes, check_count, count_of, first_twice, range_values, texts, told
 from .errors import StudyFileError
-from .expansion import check_values
 from .leave_out import left_out
-from .overlay_files import LARGEST_FILE_BYTES, overlay_from_table, overlay_to_table
+from .leg_files import OPTIONAL, TERM_KEYS, without_none
+from .overlay_files import LARGEST_FILE_BYTES, REALISED_KEYS, overlay_from_table, overlay_to_table, table_to_toml
 from .toml_text import (
     KeyPath,
     KeyProblem,
@@ -27,6 +28,7 @@ from .toml_text import (
     known_keys,
     line_of,
     near,
+    nearest_line,
     parse_toml,
     plain,
     read_toml_text,
@@ -34,6 +36,7 @@ from .toml_text import (
     toml,
     toml_key,
 )
+from .tried_values import check_values
 
 #: What the overlays of a study are judged against (C10).
 COMPARISONS = ("same-beta mix", "hold")
@@ -162,6 +165,7 @@ def parse_study(text: str, *, file: str = "study") -> Study:
         if line is None and path[-1:] == ("fields",):  # one field may be written as such
             path = (*path[:-1], "field")
             line = line_of(text, path)
+        line = nearest_line(text, path) if line is None else line
         key = key_words(path) or None
         raise StudyFileError(file=file, line=line, key=key, problem=error.problem, path=path) from None
 
@@ -224,11 +228,7 @@ def study_to_toml(study: Study) -> str:
         return ["", header, *(f"{toml_key(key)} = {toml(value)}" for key, value in items.items())]
 
     text = [f"{key} = {toml(value)}" for key, value in table.items()]
-    text += lines("[overlay]", {key: value for key, value in overlay.items() if key in ("name", "account")})
-    for leg in overlay["leg"]:
-        text += lines("[[overlay.leg]]", leg)
-    for section in ("costs", "volatility"):
-        text += lines(f"[overlay.{section}]", overlay[section])
+    text += ["", "[overlay]", *table_to_toml(overlay, above="overlay.").splitlines()]
     for axis in axes:
         text += lines("[[axis]]", axis)
     return "\n".join(text + (lines("[own]", own) if own is not None else [])) + "\n"
@@ -262,23 +262,31 @@ def _histories(value: Any) -> tuple[str, ...]:
 
 
 def _normal_overlay(given: Any) -> dict[str, Any]:
-    """The overlay's table with every field, but for those that must follow what an axis sets."""
+    """The overlay's table with every field, but for those that must follow what an axis sets, and for ``crossed``."""
+    path: KeyPath = ("overlay",)
     if not isinstance(given, Mapping):
-        raise KeyProblem(("overlay",), "is no table; write the overlay under [overlay] and [[overlay.leg]]")
-    table = plain(("overlay",), given)
+        raise KeyProblem(path, "is no table; write the overlay under [overlay] and [[overlay.leg]]")
+    table = plain(path, given)
+    for key in ("counterparty", "sale"):
+        if key in table:
+            raise KeyProblem((*path, key), "is asked beside a single replay; leave it out of a study")
+    if not isinstance(table.get("crossed", True), bool):
+        raise KeyProblem((*path, "crossed"), f"is {table['crossed']!r}; it takes true or false")
     try:
-        made = overlay_from_table(table)
+        made = overlay_from_table({**table, "crossed": True})
     except KeyProblem as problem:
-        raise KeyProblem(("overlay", *problem.path), problem.problem) from None
+        raise KeyProblem((*path, *problem.path), problem.problem) from None
     full = overlay_to_table(made.overlay, made.volatility)
+    del full["crossed"]
+    if "name" not in table:
+        del full["name"]
+    for leg, said in zip(full["leg"], table["leg"]):
+        for key in TERM_KEYS:
+            if key not in said:
+                leg.pop(key, None)
     told_vol = table.get("volatility", {})
-    volatility = {key: value for key, value in full["volatility"].items() if key not in ("window", "markup")} | told_vol
-    legs = [
-        {key: value for key, value in leg.items() if key != "term" or key in said} | said
-        for leg, said in zip(full["leg"], table["leg"])
-    ]
-    named = {"name": table["name"]} if "name" in table else {}
-    return {**named, "account": full["account"], "leg": legs, "costs": full["costs"], "volatility": volatility}
+    implied = {key: value for key, value in full["volatility"].items() if key not in REALISED_KEYS}
+    return {**full, "volatility": implied | without_none(told_vol, OPTIONAL["volatility"])}
 
 
 def _normal_own(given: Any, axes: Sequence[Axis]) -> dict[str, Any]:

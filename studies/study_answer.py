@@ -12,7 +12,7 @@ import numpy.typing as npt
 import pandas as pd
 from scipy import stats
 
-from backtest import Replay, replay
+from backtest import Replay
 from backtest.analytics.headline import headline_figures
 from backtest.analytics.performance import TRADING_DAYS, daily_excess
 from backtest.analytics.reality_check import RealityCheck, p_values
@@ -20,7 +20,7 @@ from backtest.analytics.resampling import FEWEST_DAYS
 from backtest.analytics.selection import DeflatedSharpe, deflated_sharpe
 from backtest.analytics.subperiods import BlockSums, block_sums
 
-from .batches import BLOCK_COLUMNS, FIGURES, SAME_BETA, SPAN
+from .batches import BLOCK_COLUMNS, FIGURES, SAME_BETA, SPAN, replay_point
 from .expansion import Expansion
 from .runner import SETTINGS, Group, Rows, StudyPlan, market_of
 
@@ -168,22 +168,21 @@ def _judge(plan: StudyPlan, rows: Rows, expansion: Expansion, group: Group, chec
 
 def _hold_sums(plan: StudyPlan, expansion: Expansion, group: Group) -> tuple[BlockSums, npt.NDArray[np.datetime64]]:
     """Sums of the hold over the same blocks, and the common days."""
-    found = _one(plan, expansion, group, 0)
-    offset = int(np.searchsorted(found.dates, group.span.first))
-    sums = block_sums(found.hold[np.newaxis, offset:], rate_return=found.rate_return[offset:], edges=group.span.edges)
-    return sums, found.dates[offset:]
+    found = replay_member(plan, expansion, group, 0)
+    return block_sums(found.hold[np.newaxis], rate_return=found.rate_return, edges=group.span.edges), found.dates
 
 
-def _one(plan: StudyPlan, expansion: Expansion, group: Group, member: int) -> Replay:
+def replay_member(plan: StudyPlan, expansion: Expansion, group: Group, member: int) -> Replay:
+    """One overlay of a group as a single replay, on the days of the group."""
     (point,) = expansion.many(group.points[member : member + 1])
-    return replay(market_of(plan, group), point.overlay, volatility=point.volatility, start=point.start, end=point.end)
+    return replay_point(market_of(plan, group), point, group.span)
 
 
 def _deflated(plan: StudyPlan, expansion: Expansion, group: Group, ratios: Array, best: int | None) -> DeflatedSharpe:
     """Probability of skill of the best information ratio, given how many were tried."""
     if best is None:
         return DeflatedSharpe(hurdle=float("nan"), probability=float("nan"))
-    found = _one(plan, expansion, group, best)
+    found = replay_member(plan, expansion, group, best)
     market = daily_excess(found.hold, found.rate_return)
     share = 1.0
     if plan.study.comparison == SAME_BETA:

@@ -86,6 +86,7 @@ def make_study_folder(
     against: Other | None = None,
     progress: Progress = lambda done, of: None,
     telling: Callable[[str], None] = lambda step: None,
+    noting: Callable[[str], None] = lambda note: None,
 ) -> StudyAnswer:
     """Run a study and write its results folder; batches are kept on the way.
 
@@ -101,6 +102,8 @@ def make_study_folder(
         Another study, from :func:`studies.against.read_other`; how this one compares is written beside the tables.
     telling : callable
         Told what is being done before and after the batches.
+    noting : callable
+        Told what the user should know before a long run: that ``resume`` finds nothing to go on with.
 
     Raises
     ------
@@ -113,6 +116,8 @@ def make_study_folder(
     telling("planning")
     plan = plan_study(study, store=store)
     with working_folder(out, plan.as_table(), resume=resume) as folder:
+        if resume and not folder.kept():
+            noting(f"there is no unfinished run for {out} to go on with: starting afresh")
         rows = run_plan(plan, workers=workers, executor=executor, folder=folder, progress=progress)
         telling("judging")
         found = answer_study(plan, rows)

@@ -17,7 +17,7 @@ from backtest.analytics.ledger import Ledger
 from backtest.analytics.performance import TRADING_DAYS
 from backtest.analytics.resampling import ComparisonInference
 
-from .replay_history import daily_frame
+from .replay_history import Answer, daily_frame
 from .report import Report
 
 #: A cell of text that begins with one of these would be read as a formula.
@@ -98,7 +98,15 @@ def tables_of(report: Report) -> dict[str, pd.DataFrame]:
             }
         ),
         "verdict": pd.DataFrame([asdict(clause) for clause in report.clauses]),
+        **_beside(found),
     }  # fmt: skip
+
+
+def _beside(found: Answer) -> dict[str, pd.DataFrame]:
+    """Defaults of a counterparty, where they were asked about."""
+    if found.counterparty is None:
+        return {}
+    return {"counterparty": _table([_flat(one) for one in found.counterparty.events], "date", "exposure", "loss")}
 
 
 def _table(rows: list[dict[str, Any]], *columns: str) -> pd.DataFrame:

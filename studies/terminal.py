@@ -60,6 +60,9 @@ def show_summary(console: Console, told: Mapping[str, Any], *, history: str) -> 
     console.print(_cost_table(told["roll_cost"]))
     for label, leg in told["roll_cost"]["legs"].items():
         say(f"{label}: {leg['paid_off']} of {leg['rolls'] - leg['open_rolls']} settled or sold above zero")
+    for line in (_margin(told), _default(told), _sale(told)):
+        if line is not None:
+            say(line)
     say("")
     say("The same overlay priced under other smiles, against its own same-beta mix", style="bold")
     console.print(_ladder_table(told["smile_ladder"], whole=told["years"] < 1))
@@ -145,6 +148,59 @@ def _cost_table(costs: Mapping[str, Any]) -> Table:
         )
         table.add_row(label, *(_signed_percent(value) for value in sums))
     return table
+
+
+def _margin(told: Mapping[str, Any]) -> str | None:
+    """What sold options may require; None where nothing is sold."""
+    if (margin := told.get("margin")) is None:
+        return None
+    covered, alone = (margin[name] for name in ("shares_as_cover", "no_shares_counted"))
+    return (
+        f"margin, by the exchanges' simple rule (your broker's own holds): {_peak(covered)} with the shares as cover, "
+        f"{_peak(alone)} with none of them counted"
+    )
+
+
+def _peak(peak: Mapping[str, Any]) -> str:
+    if peak["day"] is None:
+        return "nothing" if peak["peak"] == 0 else "not to be had"
+    return f"at most {percent(peak['peak'])} of wealth ({peak['day']})"
+
+
+def _default(told: Mapping[str, Any]) -> str | None:
+    """What a default of the counterparty takes; None where none was asked about."""
+    if (stress := told.get("counterparty")) is None:
+        return None
+    events, outside = stress["events"], stress["outside"]
+    missed = f"; outside the replay: {', '.join(outside)}" if outside else ""
+    if not events:
+        why = "no bought put that ended paid off, " if isinstance(stress["default"], str) else ""
+        return f"if the counterparty defaults: {why}nothing changes{missed}"
+    lost = 1.0 - math.prod(1.0 - min(one["loss"], 1.0) for one in events)
+    when = events[0]["date"] if len(events) == 1 else f"{len(events)} times from {events[0]['date']}"
+    unit = "points of return, whole" if told["years"] < 1 else "points of return a year"
+    return (
+        f"if the counterparty defaults {when}, {percent(stress['recovery'], 0)} recovered: {percent(lost)} of wealth "
+        f"lost, {_points(stress['annual_return_difference'])} {unit}, "
+        f"{_points(stress['max_drawdown_difference'])} on the maximum drawdown{missed}"
+    )
+
+
+def _points(value: float | None) -> str:
+    return NOT_TO_BE_HAD if value is None or not math.isfinite(value) else _without_zero_sign(f"{100 * value:+.2f}")
+
+
+def _sale(told: Mapping[str, Any]) -> str | None:
+    """What the sale instead is; None where none was asked for."""
+    if "mix_sale" not in told:
+        return None
+    sale = told["mix_sale"]
+    if sale is None:
+        return "sale instead: cannot be had, there is no same-beta mix to take its share from"
+    return (
+        f"sale instead: {percent(sale['share_of_stock'], 0)} of the shares kept, the rest sold at once; "
+        f"{percent(sale['charge'], 2)} of that goes in cost and tax as you stated them (no tax rule is in here)"
+    )
 
 
 def _ladder_table(ladder: Mapping[str, Any], *, whole: bool) -> Table:

@@ -131,6 +131,12 @@ def line_of(text: str, path: KeyPath) -> int | None:
     return None
 
 
+def nearest_line(text: str, path: KeyPath) -> int | None:
+    """Line of a key path, or of the nearest table around it that is written: a key may be missed where it is not."""
+    found = (line_of(text, path[:length]) for length in range(len(path), 0, -1))
+    return next((line for line in found if line is not None), None)
+
+
 def _within(lines: list[str], key: str, path: KeyPath, first: int, stop: int) -> int:
     """Line inside a value of several lines: for the third table of a list, the third that names the key."""
     naming = [number for number in range(first, stop) if key in lines[number]]

@@ -87,39 +87,40 @@ def history_of(
     name: str | None, files: dict[str, Path | None], *, vol_unit: VolUnit | None, last: datetime | None, store: Path
 ) -> tuple[History, str]:
     """A stored history, or one from the files given; and its name."""
+    history, label, _ = history_and_source(name, files, vol_unit=vol_unit, last=last, store=store)
+    return history, label
+
+
+def history_and_source(
+    name: str | None, files: dict[str, Path | None], *, vol_unit: VolUnit | None, last: datetime | None, store: Path
+) -> tuple[History, str, dict[str, Any]]:
+    """A stored history, or one from the files given; its name; and for the manifest where it was had from.
+
+    Paths are as they were typed. Of a stored history the sha256 is that of the very bytes that were read: its version,
+    whatever is loaded meanwhile.
+    """
     from data_loaders import load_history
-    from data_loaders.store import read_history
+    from data_loaders.store import read_stored
 
     given = [f"--{kind}" for kind, path in files.items() if path is not None]
-    if files["vol"] is None and vol_unit is not None:
+    if files.get("vol") is None and vol_unit is not None:
         raise typer.BadParameter("there is no --vol file for it", param_hint="--vol-unit")
     if name is not None:
         if given:
             raise typer.BadParameter(
                 f"{name} is a stored history; leave out {', '.join(given)}, or the name", param_hint="NAME"
             )
-        return read_history(store, name), name
-    prices = files["prices"]
+        history, sha256 = read_stored(store, name)
+        return history, name, {"history": name, "store": str(store), "sha256": sha256}
+    prices = files.get("prices")
     if prices is None:
         raise typer.BadParameter("say which history: a stored NAME, or --prices FILE", param_hint="NAME")
     history = load_history(
-        prices=prices, vol=files["vol"], dividends=files["dividends"], rates=files["rates"],
+        prices=prices, vol=files.get("vol"), dividends=files.get("dividends"), rates=files.get("rates"),
         vol_unit=vol_unit.value if vol_unit else None, needed_to=last.date() if last else None,
     )  # fmt: skip
-    return history, prices.stem
-
-
-def source_of(
-    name: str | None, files: dict[str, Path | None], *, vol_unit: VolUnit | None, store: Path
-) -> dict[str, Any]:
-    """Where :func:`history_of` has the history from, for the manifest: paths as they were typed."""
-    from .results import sha256_of
-    from .runner import history_file
-
-    if name is not None:
-        return {"history": name, "store": str(store), "sha256": sha256_of(history_file(store, name))}
-    given = {kind: str(path) for kind, path in files.items() if path is not None}
-    return {"files": given, "vol_unit": vol_unit.value if vol_unit else None}
+    typed = {kind: str(path) for kind, path in files.items() if path is not None}
+    return history, prices.stem, {"files": typed, "vol_unit": vol_unit.value if vol_unit else None}
 
 
 def replay_and_write(

@@ -9,7 +9,10 @@ from typing import Any
 
 import typer
 
+from data_loaders.versions import SHORT
+
 from .audit import DIFFERS, OTHER_DATA, SAME, SEED, Audit, audit_folder
+from .audited import KeptVersion
 from .results import SCHEMA, json_text
 from .runner import default_workers
 from .wiring import say
@@ -55,6 +58,7 @@ def verdict_table(found: Audit) -> dict[str, Any]:
         "compared": list(found.compared),
         "sample": found.sample,
         "changed_inputs": [asdict(one) for one in found.changed],
+        "kept_versions": [asdict(one) for one in found.kept],
         "differences": [{**one.as_dict(), "sentence": str(one)} for one in found.differences],
         "other_versions": {name: {"then": then, "now": now} for name, (then, now) in found.versions.items()},
         "notes": list(found.notes),
@@ -83,9 +87,21 @@ def verdict_lines(found: Audit) -> list[str]:
         said.append(f"Different: {found.folder} does not come out again from its manifest.")
         if found.sample is not None:
             said.append(f"Compared: {files}.")
+    said += [_kept_words(one) for one in found.kept]
     said += [f"  {one}" for one in found.differences]
     said += [f"  note: {note}" for note in found.notes]
     if found.versions and (found.verdict == DIFFERS or found.notes):
         other = "; ".join(f"{name} {then or 'not noted'}, now {now}" for name, (then, now) in found.versions.items())
         said.append(f"Versions differ: {other}.")
     return [*said, NOT_COMPARED if found.sample is None else NOT_COMPARED_IN_A_SAMPLE]
+
+
+def _kept_words(one: KeptVersion) -> str:
+    """That a history was taken as it was then."""
+    since = (
+        f"has been loaded anew since ({one.now[:SHORT]} now)" if one.now is not None else "is no longer there itself"
+    )
+    return (
+        f"  history: version {one.sha256[:SHORT]} of {one.history}, loaded {one.loaded} UTC, which the store has kept; "
+        f"{one.history} {since}"
+    )

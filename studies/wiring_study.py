@@ -43,7 +43,7 @@ def study_and_write(
             with cluster(scheduler) if scheduler is not None else nullcontext() as executor:
                 found = make_study_folder(
                     asked, folder, store=store, workers=workers or default_workers(), executor=executor, resume=resume,
-                    command=shlex.join(command), progress=progress, telling=telling, against=other,
+                    command=shlex.join(command), progress=progress, telling=telling, noting=_note, against=other,
                 )  # fmt: skip
         except KeyboardInterrupt:
             typer.echo("\nrollband: stopped; what was done is kept: go on with --resume", err=True)
@@ -55,6 +55,11 @@ def study_and_write(
     more = "" if other is None else f", {AGAINST}"
     say(f"Read {folder / PAGE}")
     say(f"Results in {folder}: {PAGE}, pictures, summary.json, overlays.parquet, periods.parquet, manifest.json{more}")
+
+
+def _note(text: str) -> None:
+    """One line on standard error; written to it as it is now, so that a bar in progress moves down."""
+    sys.stderr.write(f"rollband: {text}\n")
 
 
 @contextmanager

@@ -63,7 +63,7 @@ def attribute(replay: Replay) -> Attribution:
     leg_profit = replay.leg_profit[:, 1:] / before
     leg_value = replay.leg_value[:, :-1] / before
     volatility = leg_profit - rate * leg_value - replay.leg_dollar_delta[:, :-1] * hold_excess
-    cost = replay.trading_cost[1:] / before
+    cost = (replay.trading_cost[1:] + replay.borrow_charge[1:]) / before
     # the first wealth is counted before its trades: their cost is missing from the money at work on the next day
     cost[0] += replay.trading_cost[0] * (1.0 + rate[0]) / before[0]
     mean_delta = np.mean(delta)

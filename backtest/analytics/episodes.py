@@ -161,7 +161,7 @@ def _returns(paths: Mapping[str, Array], start: int, stop: int) -> dict[str, flo
 
 
 def _leg_profit(found: Replay, right: str, start: int, stop: int) -> float:
-    rows = [row for row, leg in enumerate(found.overlay.legs) if leg.right == right]
+    rows = [row for row, leg in enumerate(found.overlay.carried) if leg.right == right]
     profit = found.leg_profit[rows, start + 1 : stop + 1].sum()
     return float(profit / found.wealth[start])
 

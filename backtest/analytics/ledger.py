@@ -16,7 +16,8 @@ from dataclasses import dataclass
 import numpy as np
 import numpy.typing as npt
 
-from ..engine.result import LegReplay, Replay, held
+from ..engine.leg_replay import LegReplay, counted
+from ..engine.result import Replay
 
 Array = npt.NDArray[np.float64]
 Dates = npt.NDArray[np.datetime64]
@@ -106,8 +107,8 @@ def _leg_flows(found: Replay, leg: LegReplay) -> tuple[Array, Array]:
     """
     premium, settled = np.zeros(len(found)), np.zeros(len(found))
     opened_on = np.maximum(leg.opened, 1)
-    np.add.at(premium, opened_on, -leg.units * held(leg.signed_ratio, leg.premium))
+    np.add.at(premium, opened_on, -leg.leg.direction * counted(leg.count[leg.opened], leg.premium))
     done = ~leg.schedule.live
-    units_before = found.units[np.maximum(leg.closed - 1, 0)]
-    np.add.at(settled, leg.closed[done], (units_before * held(leg.signed_ratio, leg.close_value))[done])
+    closed = leg.closed[done]
+    np.add.at(settled, closed, leg.leg.direction * counted(leg.count[closed - 1], leg.close_value[done]))
     return premium, settled

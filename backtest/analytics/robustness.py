@@ -13,7 +13,7 @@ import numpy as np
 import numpy.typing as npt
 from scipy.optimize import brentq
 
-from ..calendar import LARGEST_SHIFT_DAYS
+from ..cycles import DAYS_IN_MONTH, LARGEST_SHIFT_DAYS
 from ..engine.replay import replay_many
 from ..engine.result import Replay
 from ..overlay import Overlay
@@ -24,8 +24,6 @@ from .performance import annual_return, daily_excess, regression_beta, sharpe_ra
 
 Array = npt.NDArray[np.float64]
 
-#: Trading days in a month, for the number of offsets of a cycle: 21, 63, 126 or 252.
-DAYS_IN_MONTH = 21
 #: Break-even shifts are looked for up to this many vol points either way.
 WIDEST_SHIFT = 20.0
 
@@ -65,7 +63,7 @@ def roll_day_luck(found: Replay, *, offsets: int | None = None) -> RollDayLuck:
         How many; the trading days of the longest leg's cycle if not given (63 for a quarter).
     """
     overlay = found.overlay
-    count = offsets or overlay.anchor.cycle.months * DAYS_IN_MONTH
+    count = offsets or round(overlay.anchor.cycle.length_months * DAYS_IN_MONTH)
     shifted = [_shift(overlay, days, count) for days in range(count)]
     replays = replay_many(
         found.market, shifted, volatility=found.volatility, inception=found.dates[0], end=found.dates[-1]

@@ -13,7 +13,8 @@ from dataclasses import dataclass
 import numpy as np
 import numpy.typing as npt
 
-from ..engine.result import LegReplay, Replay, held
+from ..engine.leg_replay import LegReplay, held
+from ..engine.result import Replay
 from .performance import years_between
 
 
@@ -82,15 +83,15 @@ def payoffs_at_close(replay: Replay, leg: LegReplay) -> npt.NDArray[np.float64]:
 
     For one that settled this is what it paid; one sold before expiry was worth more, but protected by no more.
     """
-    done = ~leg.schedule.live
-    sign = 1.0 if leg.leg.right == "call" else -1.0
-    return np.maximum(sign * (replay.spot[leg.closed[done]] - leg.strike[done]), 0.0)
+    done = leg.done
+    intrinsic = np.maximum(leg.leg.sign * (replay.spot[leg.closed[done]] - leg.strike[done]), 0.0)
+    return np.where(leg.schedule.settles[done], leg.close_value[done], intrinsic)
 
 
 def _leg_costs(replay: Replay, leg: LegReplay) -> LegCosts:
     spot = replay.spot[leg.opened]
     live = leg.schedule.live
-    ratio = leg.leg.ratio
+    ratio = leg.leg.held_ratio
     premium = float(np.sum(held(ratio, leg.premium) / spot))
     closing = held(ratio, leg.close_value) / spot
     settled = float(np.sum(closing[~live]))
@@ -118,5 +119,5 @@ def _spread(leg: LegCosts, years: float) -> dict[str, object]:
         "paid_off": leg.paid_off,
         "whole": sums,
         "a_year": {name: value / years for name, value in sums.items()},
-        "a_roll": {name: value / leg.rolls for name, value in sums.items()},
+        "a_roll": {name: value / max(leg.rolls, 1) for name, value in sums.items()},
     }

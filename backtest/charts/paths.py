@@ -9,7 +9,8 @@ import numpy as np
 import numpy.typing as npt
 
 from ..analytics.drawdowns import drawdown_path
-from ..engine.result import LegReplay, Replay
+from ..engine.leg_replay import LegReplay
+from ..engine.result import Replay
 from .style import CALL, DASHES, HOLD, MIX, OVERLAY, PUT, bare, legend_above, plain, plain_ink, time_axis
 
 if TYPE_CHECKING:

@@ -19,13 +19,15 @@ therefore show in the first day's return.
 
 from __future__ import annotations
 
-from dataclasses import dataclass, replace
+from dataclasses import dataclass, field, replace
 
 import numpy as np
 import numpy.typing as npt
 
+from .exact_accounts import ExactAccount
 from .legs import LegPaths
 from .plan import BookKey, Family, Plan
+from .trades import at_anchors, counted_flows, leg_trades
 
 Array = npt.NDArray[np.float64]
 Days = npt.NDArray[np.intp]
@@ -134,7 +136,7 @@ def keep_books(plan: Plan, family: Family, legs: list[LegPaths]) -> tuple[Family
         keep = _keep_resize if family.account == "resize" else _keep_cash
         kept = keep(plan, state, leg, key, open_cost, exit_cost, path[number], before[number], price[number])
         profit = key.direction * (leg.close_value[key.row] - leg.premium[key.row]) - open_cost - exit_cost
-        rolls.append(replace(kept, net=float(np.sum(profit / plan.market.spot[leg.group.schedule.opened]))))
+        rolls.append(replace(kept, net=float(np.sum(profit / plan.market.spot[leg.schedule.opened]))))
     return state, Books(path=path, before=before, price=price), rolls
 
 
@@ -142,31 +144,16 @@ def _keep_resize(
     plan: Plan, state: FamilyState, leg: LegPaths, key: BookKey,
     open_cost: Array, exit_cost: Array, path: Array, before: Array, price: Array,
 ) -> BookRolls:  # fmt: skip
-    opened = leg.group.schedule.opened - plan.start
-    mark, premium, closing = leg.mark[key.row], leg.premium[key.row], leg.close_value[key.row]
-    held = leg.roll_of_day[state.anchor_day]  # roll held after each anchor roll
-    rolls_here = opened[held] == state.anchor_day
-    on_anchor = np.zeros(len(opened), dtype=bool)
-    on_anchor[held[rolls_here]] = True
-
-    # what an inner roll throws off per option: the old one's value less the new one's price, after costs
-    flow = np.zeros(len(opened))
-    flow[1:] = key.direction * (closing[:-1] - premium[1:]) - exit_cost[:-1] - open_cost[1:]
-    flow[on_anchor] = 0.0
-    held_cash = np.cumsum(flow / state.cash_growth[opened])
-
-    np.multiply(mark, key.direction, out=path)
-    price[:] = path[state.anchor_day]
-    price[rolls_here] += open_cost[held[rolls_here]]
-    before[:] = path[state.anchor_day]
-    ending = rolls_here & (held > 0)
-    before[ending] = key.direction * closing[held[ending] - 1] - exit_cost[held[ending] - 1]
-    if on_anchor.all():
+    trades = leg_trades(plan, leg, key, open_cost, exit_cost)
+    np.multiply(leg.mark[key.row], key.direction, out=path)
+    before[:], price[:], flow = at_anchors(state.anchor_day, path, trades)
+    if not flow.any():
         return BookRolls(open_cost=open_cost, exit_cost=exit_cost, cash=np.broadcast_to(0.0, path.shape))
-    at_anchor = held_cash[held]
+    held_cash = np.cumsum(flow / state.cash_growth)
+    at_anchor = held_cash[state.anchor_day]
     previous = np.concatenate([[0.0], at_anchor[:-1]])
     before += state.cash_growth[state.anchor_day] * (at_anchor - previous)
-    cash = state.cash_growth * (held_cash[leg.roll_of_day] - at_anchor[state.anchor_of_day])
+    cash = state.cash_growth * (held_cash - at_anchor[state.anchor_of_day])
     path += cash
     return BookRolls(open_cost=open_cost, exit_cost=exit_cost, cash=cash)
 
@@ -175,27 +162,12 @@ def _keep_cash(
     plan: Plan, state: FamilyState, leg: LegPaths, key: BookKey,
     open_cost: Array, exit_cost: Array, path: Array, before: Array, price: Array,
 ) -> BookRolls:  # fmt: skip
-    opened = leg.group.schedule.opened - plan.start
-    mark, premium, closing = leg.mark[key.row], leg.premium[key.row], leg.close_value[key.row]
-    units_of_roll = state.units_cash[state.anchor_of_day[opened]]
-    # the old option was held in the units of the day before; an anchor roll on the same day has changed them since
-    units_before = state.units_cash[state.anchor_of_day[np.maximum(opened - 1, 0)]]
-    flow = -units_of_roll * (key.direction * premium + open_cost)
-    flow[1:] += units_before[1:] * (key.direction * closing[:-1] - exit_cost[:-1])
-    held_cash = np.cumsum(flow / state.cash_growth[opened])
-    cash = held_cash[leg.roll_of_day]
-
-    # at an anchor roll that is not the leg's own, the option count follows the shares at mid
-    held = leg.roll_of_day[state.anchor_day]
-    live = opened[held] != state.anchor_day
-    change = np.diff(state.units_cash, prepend=state.units_cash[0])
-    rematch = np.where(
-        live, -change * key.direction * mark[state.anchor_day] / state.cash_growth[state.anchor_day], 0.0
-    )
-    if live.any():
-        cash = cash + np.cumsum(rematch)[state.anchor_of_day]
-    cash = cash * state.cash_growth
-    np.add(cash, state.units_cash[state.anchor_of_day] * (key.direction * mark), out=path)
+    units = state.units_cash[state.anchor_of_day]
+    mark = key.direction * leg.mark[key.row]
+    trades = leg_trades(plan, leg, key, open_cost, exit_cost)
+    flow = counted_flows(state.anchor_day, state.anchor_of_day, mark, trades, state.units_cash)
+    cash = np.cumsum(flow / state.cash_growth) * state.cash_growth
+    np.add(cash, units * mark, out=path)
     before[:] = price[:] = np.nan  # the cash account has no packages to price
     return BookRolls(open_cost=open_cost, exit_cost=exit_cost, cash=cash)
 
@@ -212,11 +184,24 @@ class Accounts:
         Units held from each anchor roll on, per 1 of starting wealth.
     stock_cost : ndarray, shape (overlay, anchor roll)
         Cost of stock traded at each anchor roll, in money per 1 of starting wealth.
+    exact : dict of int to ExactAccount
+        The accounts of overlays that are carried by themselves, by their row here.
     """
 
     wealth: Array
     units: Array
     stock_cost: Array
+    exact: dict[int, ExactAccount] = field(default_factory=dict)
+
+    def replaced(self, exact: dict[int, ExactAccount]) -> Accounts:
+        """The same with some overlays carried by themselves."""
+        if not exact:
+            return self
+        wealth, units, stock_cost = self.wealth.copy(), np.array(self.units), np.array(self.stock_cost)
+        for row, account in exact.items():
+            wealth[row], units[row], stock_cost[row] = account.wealth, account.units, account.stock_cost
+        _blank_ruin(wealth)
+        return Accounts(wealth=wealth, units=units, stock_cost=stock_cost, exact=exact)
 
 
 def settle_accounts(

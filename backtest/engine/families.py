@@ -17,8 +17,10 @@ from ..market import Market
 from ..overlay import Overlay
 from ..volatility.sources import Volatility
 from .accounts import Accounts, BookRolls, FamilyState, keep_books, settle_accounts
-from .legs import LegPaths, PricedLegs, price_group
-from .plan import Family, Plan, as_day, make_plans
+from .checks import as_day
+from .exact_accounts import ExactAccount, carry, held_legs, is_exact
+from .legs import LegPaths, PricedLegs, price_groups
+from .plan import BookKey, Family, Plan, make_plans
 
 Array = npt.NDArray[np.float64]
 
@@ -113,21 +115,43 @@ def replay_families(
         inception=as_day(inception, "inception"),
     )
     for plan in plans:
-        legs = [price_group(plan, group, priced) for group in plan.groups]
+        legs = price_groups(plan, priced)
         for family in plan.families:
             state, books, book_rolls = keep_books(plan, family, legs)
             for part in _parts(family, at_once):
                 rows, ratio, stock_bps = _holdings(part, overlays)
+                accounts = settle_accounts(state, books, part.account, rows, ratio, stock_bps)
                 yield FamilyReplay(
                     plan=plan,
                     family=part,
                     state=state,
-                    accounts=settle_accounts(state, books, part.account, rows, ratio, stock_bps),
+                    accounts=accounts.replaced(_carried(plan, state, part, overlays, legs, book_rolls)),
                     legs=legs,
                     book_rolls=book_rolls,
                     ratio=ratio,
                     volatilities=[volatilities[number] for number in part.members],
                 )
+
+
+def _carried(
+    plan: Plan,
+    state: FamilyState,
+    family: Family,
+    overlays: Sequence[Overlay],
+    legs: list[LegPaths],
+    book_rolls: list[BookRolls],
+) -> dict[int, ExactAccount]:
+    """Those overlays of a family that need an account of their own, by row."""
+    found = {}
+    keys: list[BookKey] = []
+    for row, (number, held) in enumerate(zip(family.members, family.holdings, strict=True)):
+        overlay = overlays[number]
+        if is_exact(overlay):
+            keys = keys or list(family.books)
+            costs = [(book_rolls[one].open_cost, book_rolls[one].exit_cost) for one in held]
+            holding = held_legs(plan, overlay, legs, [keys[one] for one in held], costs)
+            found[row] = carry(plan, state, overlay, holding)
+    return found
 
 
 def _parts(family: Family, at_once: int | None) -> Iterator[Family]:
@@ -145,6 +169,6 @@ def _holdings(family: Family, overlays: Sequence[Overlay]) -> tuple[npt.NDArray[
     ratio = np.zeros((len(family.members), slots))
     for member, (number, held) in enumerate(zip(family.members, family.holdings, strict=True)):
         rows[member, : len(held)] = held
-        ratio[member, : len(held)] = [leg.ratio for leg in overlays[number].legs]
+        ratio[member, : len(held)] = [leg.held_ratio for leg in overlays[number].carried]
     stock_bps = np.array([overlays[number].costs.stock_bps for number in family.members])
     return rows, ratio, stock_bps

@@ -7,80 +7,28 @@ the same rolls, then broadcast over the strikes.
 
 from __future__ import annotations
 
-from dataclasses import dataclass, replace
+from collections.abc import Sequence
+from dataclasses import dataclass, field, replace
 from typing import Any
 
 import numpy as np
 import numpy.typing as npt
 
+from ..calendar import Schedule
 from ..errors import OverlayError
-from ..market import DAYS_IN_YEAR, Market
+from ..market import Market
 from ..overlay import Costs
-from ..pricing.black import black, black_with_delta
-from ..strikes import OpenState, StrikeRule
-from ..volatility.smile import SmileSlice
-from .plan import GroupKey, Plan, PricingGroup
+from ..pricing.black import black_with_delta
+from ..pricing.day_state import DayState
+from .early import early_schedule
+from .opens import day_state, strike_legs
+from .plan import GroupKey, LegSpec, Plan, PricingGroup
 
 Array = npt.NDArray[np.float64]
 Days = npt.NDArray[np.intp]
 
 #: Values priced in one broadcast call: small enough for a core's second cache, large enough to hide numpy's overhead.
 BLOCK_VALUES = 32_768
-
-
-@dataclass(frozen=True, slots=True, kw_only=True, eq=False)
-class DayState:
-    """What pricing needs of some days, shared by all strikes; every array has shape ``(day,)``."""
-
-    forward: Array
-    log_forward: Array
-    discount: Array
-    growth: Array
-    tau_years: Array
-    smile: SmileSlice
-    vol_shift: float
-
-    @property
-    def root_tau(self) -> Array:
-        """Square root of the years to expiry."""
-        return np.sqrt(self.tau_years)
-
-    def stdev(self, strike: Array) -> Array:
-        """Total standard deviation at each strike, shape ``(leg, day)``."""
-        return self.stdev_at(np.log(strike) - self.log_forward)
-
-    def stdev_at(self, log_moneyness: Array) -> Array:
-        """Total standard deviation at each ``ln(K/F)``; NaN where the shift leaves no vol."""
-        stdev: Array = np.sqrt(self.smile.total_variance(log_moneyness))
-        if self.vol_shift != 0.0:
-            stdev = stdev + self.vol_shift * self.root_tau
-            stdev[stdev <= 0.0] = np.nan
-        return stdev
-
-
-def day_state(market: Market, group: PricingGroup, day: Days | slice, expiry_day: npt.NDArray[np.int64]) -> DayState:
-    """Forward, discount and smile on each day for its own expiry (C5, C7).
-
-    A slice of days is looked at in place; positions are gathered.
-    """
-    tau = (expiry_day - market.day_number[day]) / DAYS_IN_YEAR
-    # in place where it can be: on a few thousand days numpy's overhead is a good part of the cost
-    interest, carry = market.rate[day] * tau, market.dividend_yield[day] * tau
-    discount, growth = np.exp(-interest), np.exp(-carry)
-    forward = market.spot[day] * growth
-    forward /= discount
-    log_forward = interest
-    log_forward -= carry
-    log_forward += market.log_spot[day]
-    return DayState(
-        forward=forward,
-        log_forward=log_forward,
-        discount=discount,
-        growth=growth,
-        tau_years=tau,
-        smile=group.volatility.slice(day, tau),
-        vol_shift=group.vol_shift,
-    )
 
 
 @dataclass(frozen=True, slots=True, kw_only=True, eq=False)
@@ -92,16 +40,22 @@ class LegPaths:
     strike, premium, close_value, vol_open, delta_open : ndarray, shape (leg, roll)
         ``premium`` is the mid at the open; ``close_value`` the intrinsic value where the option settles, the
         model value where it is closed early or still live.
+    schedule : Schedule
+        Opens and closes, early ones among them.
+    flags : ndarray of int, shape (leg, roll)
+        What happened to each strike on its way from the rule; see :func:`backtest.strikes.flag_words`.
     mark, delta : ndarray, shape (leg, day)
-        Mid and spot delta of the option held after the day's trades.
+        Mid and spot delta of the option held after the day's trades; zero while the leg is flat.
     roll_of_day : ndarray of int, shape (day,)
-        Which roll is held after the day's trades.
+        Which roll is held after the day's trades; -1 while the leg is flat.
     """
 
     group: PricingGroup
+    schedule: Schedule
     signs: Array
     roll_of_day: Days
     strike: Array
+    flags: npt.NDArray[np.int64]
     premium: Array
     close_value: Array
     vol_open: Array
@@ -113,25 +67,35 @@ class LegPaths:
     open_state: DayState
     close_state: DayState | None
     early: Days  # rolls closed before expiry, shape (early,)
+    known_costs: dict[tuple[str, Costs], Array] = field(default_factory=dict)
 
     def open_cost(self, costs: Costs) -> Array:
         """Cost per option at each open (C8), shape ``(leg, roll)``."""
-        return _trading_cost(costs, self.premium, self.strike, self.open_state, self.signs)
+        key = ("open", costs)
+        if key not in self.known_costs:
+            self.known_costs[key] = self.open_state.trading_cost(costs, self.premium, self.strike, self.signs)
+        return self.known_costs[key]
 
     def exit_cost(self, costs: Costs) -> Array:
         """Cost per option at each close (C8), shape ``(leg, roll)``: zero for an option still live."""
+        key = ("exit", costs)
+        if key not in self.known_costs:
+            self.known_costs[key] = self._exit_cost(costs)
+        return self.known_costs[key]
+
+    def _exit_cost(self, costs: Costs) -> Array:
         cost = np.zeros(self.strike.shape)
         if self.close_state is not None:
             value, strike = self.close_value[:, self.early], self.strike[:, self.early]
-            cost[:, self.early] = _trading_cost(costs, value, strike, self.close_state, self.signs)
+            cost[:, self.early] = self.close_state.trading_cost(costs, value, strike, self.signs)
         if costs.settlement_fee > 0:
-            in_the_money = self.group.schedule.settles & (self.close_value > 0)
+            in_the_money = self.schedule.settles & (self.close_value > 0)
             cost[in_the_money] = costs.settlement_fee / costs.multiplier
         return cost
 
 
 #: Arrays of a leg that :class:`PricedLegs` keeps, first axis leg.
-KEPT = ("strike", "premium", "close_value", "vol_open", "delta_open", "mark", "delta")
+KEPT = ("strike", "flags", "premium", "close_value", "vol_open", "delta_open", "mark", "delta")
 #: What :class:`PricedLegs` holds at most, in marks and deltas: 400 MB.
 MOST_KEPT = 25_000_000
 
@@ -147,62 +111,70 @@ class PricedLegs:
         self.market = market
         self.priced = 0
         self._most, self._kept = most, 0
-        self._rows: dict[tuple[int, int, GroupKey], dict[tuple[float, StrikeRule], tuple[LegPaths, int]]] = {}
+        self._rows: dict[tuple[int, int, GroupKey], dict[LegSpec, tuple[LegPaths, int]]] = {}
 
-    def group(self, plan: Plan, group: PricingGroup) -> LegPaths:
+    def group(self, plan: Plan, group: PricingGroup, legs: Sequence[LegPaths | None]) -> LegPaths:
         """The paths of a group, those not known yet priced in one go."""
         if plan.market is not self.market:
             raise OverlayError("these legs were priced on another market")
         rows = self._rows.setdefault((plan.start, plan.end, group.key), {})
-        wanted = list(zip(group.signs, group.rules, strict=True))
-        new = [leg for leg in wanted if leg not in rows]
+        new = [number for number, spec in enumerate(group.specs) if spec not in rows]
         if new:
-            fresh = _price(plan, replace(group, signs=[sign for sign, _ in new], rules=[rule for _, rule in new]))
-            rows.update({leg: (fresh, row) for row, leg in enumerate(new)})
+            specs, links = [group.specs[n] for n in new], [group.links[n] for n in new]
+            fresh = _price(plan, replace(group, specs=specs, links=links), legs)
+            rows.update({spec: (fresh, row) for row, spec in enumerate(specs)})
             self.priced += len(new)
             self._kept += len(new) * (plan.end - plan.start + 1)
-        found = [rows[leg] for leg in wanted]
+        found = [rows[spec] for spec in group.specs]
         if self._kept > self._most:
             self._rows, self._kept = {}, 0
         first = found[0][0]
-        if len(new) == len(wanted):
+        if len(new) == len(group.specs):
             return first
         arrays: dict[str, Any] = {name: np.stack([getattr(paths, name)[row] for paths, row in found]) for name in KEPT}
-        return replace(first, group=group, signs=np.array(group.signs)[:, np.newaxis], **arrays)
+        return replace(first, group=group, signs=np.array(group.signs)[:, np.newaxis], known_costs={}, **arrays)
 
 
-def price_group(plan: Plan, group: PricingGroup, priced: PricedLegs | None = None) -> LegPaths:
-    """All legs of a group over the plan's window, from ``priced`` where they are in it."""
-    return _price(plan, group) if priced is None else priced.group(plan, group)
+def price_groups(plan: Plan, priced: PricedLegs | None = None) -> list[LegPaths]:
+    """All legs of a plan over its window, from ``priced`` where they are in it; those that others name come first."""
+    legs: list[LegPaths | None] = [None] * len(plan.groups)
+    for number in sorted(range(len(legs)), key=lambda number: plan.groups[number].level):
+        group = plan.groups[number]
+        legs[number] = _price(plan, group, legs) if priced is None else priced.group(plan, group, legs)
+    return [paths for paths in legs if paths is not None]
 
 
-def _price(plan: Plan, group: PricingGroup) -> LegPaths:
-    market, rolls = plan.market, group.schedule
-    window = slice(plan.start, plan.end + 1)
-    days_held = np.append(rolls.opened[1:], plan.end + 1) - rolls.opened
-    roll_of_day = np.repeat(np.arange(len(rolls.opened)), days_held)
+def _price(plan: Plan, group: PricingGroup, legs: Sequence[LegPaths | None]) -> LegPaths:
+    market = plan.market
+    rolls = group.schedule if group.early is None else early_schedule(plan, group, legs)
+    roll_of_day = rolls.option_of_day(plan.start, plan.end)
     signs = np.array(group.signs)[:, np.newaxis]
 
+    strike, flags = strike_legs(plan, group, rolls, legs)
     opens = day_state(market, group, rolls.opened, rolls.expiry_day)
-    strike = _strikes(market, group, opens)
     stdev_open = opens.stdev(strike)
-    daily = day_state(market, group, window, rolls.expiry_day[roll_of_day])
-    mark, delta = _marks(daily, strike, roll_of_day, signs)
+    mark, delta = _marks(plan, group, rolls, strike, roll_of_day, signs)
     at_open = rolls.opened - plan.start
 
     spot_close = market.spot[rolls.closed]
-    close_value = np.maximum((spot_close - strike) * signs, 0.0)
+    settled_at = spot_close
+    if group.settlement == "open":
+        assert market.open is not None
+        settled_at = market.open[rolls.closed]
+    close_value = np.maximum((settled_at - strike) * signs, 0.0)
     early = np.flatnonzero(~rolls.settles & ~rolls.live)
     close_state = None
     if early.size:
         close_state = day_state(market, group, rolls.closed[early], rolls.expiry_day[early])
-        close_value[:, early], _ = _value_and_delta(close_state, strike[:, early], signs)
-    close_value[:, -1] = mark[:, -1]
+        close_value[:, early], _ = close_state.value_and_delta(strike[:, early], signs)
+    close_value[:, rolls.live] = mark[:, -1:]
     return LegPaths(
         group=group,
+        schedule=rolls,
         signs=signs,
         roll_of_day=roll_of_day,
         strike=strike,
+        flags=flags,
         premium=mark[:, at_open],
         close_value=close_value,
         vol_open=stdev_open / opens.root_tau,
@@ -217,18 +189,24 @@ def _price(plan: Plan, group: PricingGroup) -> LegPaths:
     )
 
 
-def _strikes(market: Market, group: PricingGroup, opens: DayState) -> Array:
-    """Strikes by each leg's rule, shape ``(leg, roll)`` (C6)."""
-    spot = market.spot[group.schedule.opened]
-    strike = np.empty((len(group.rules), len(spot)))
-    for row, (rule, sign) in enumerate(zip(group.rules, group.signs, strict=True)):
-        state = OpenState(spot=spot, forward=opens.forward, tau_years=opens.tau_years, smile=opens.smile, sign=sign)
-        strike[row] = rule.strikes(state)
-    return strike
+def _marks(
+    plan: Plan, group: PricingGroup, rolls: Schedule, strike: Array, roll_of_day: Days, signs: Array
+) -> tuple[Array, Array]:
+    """Mid and delta of every leg on every day; zero on days on which it is flat."""
+    held = np.flatnonzero(roll_of_day >= 0)
+    window = slice(plan.start, plan.end + 1)
+    if len(held) == len(roll_of_day):
+        daily = day_state(plan.market, group, window, rolls.expiry_day[roll_of_day])
+        return _held_marks(daily, strike, roll_of_day, signs)
+    mark, delta = np.zeros((2, len(strike), len(roll_of_day)))
+    if held.size:
+        daily = day_state(plan.market, group, held + plan.start, rolls.expiry_day[roll_of_day[held]])
+        mark[:, held], delta[:, held] = _held_marks(daily, strike, roll_of_day[held], signs)
+    return mark, delta
 
 
-def _marks(daily: DayState, strike: Array, roll_of_day: Days, signs: Array) -> tuple[Array, Array]:
-    """Mid and delta of every leg on every day, in blocks that fit the cache."""
+def _held_marks(daily: DayState, strike: Array, roll_of_day: Days, signs: Array) -> tuple[Array, Array]:
+    """Mid and delta on days that all have an option, in blocks that fit the cache."""
     legs, days = strike.shape[0], len(roll_of_day)
     mark, delta = np.empty((legs, days)), np.empty((legs, days))
     # the logarithm of a strike is taken once per roll, not once per day
@@ -245,26 +223,3 @@ def _marks(daily: DayState, strike: Array, roll_of_day: Days, signs: Array) -> t
         np.multiply(value, daily.discount, out=mark[rows])
         np.multiply(forward_delta, daily.growth, out=delta[rows])
     return mark, delta
-
-
-def _value_and_delta(state: DayState, strike: Array, signs: Array) -> tuple[Array, Array]:
-    value, forward_delta = black_with_delta(
-        state.forward, strike, np.log(strike) - state.log_forward, state.stdev(strike), signs
-    )
-    return value * state.discount, forward_delta * state.growth
-
-
-def _trading_cost(costs: Costs, mid: Array, strike: Array, state: DayState, signs: Array) -> Array:
-    """The largest of the three half-spreads, plus commission (C8).
-
-    The half-spread in vol points is the rise in value when the option is repriced
-    that much higher; bought and sold legs pay the same.
-    """
-    stdev = state.stdev(strike)
-    cost = np.full(mid.shape, costs.half_spread_min, dtype=np.float64)
-    if costs.half_spread_percent > 0:
-        np.maximum(cost, mid * (costs.half_spread_percent / 100.0), out=cost)
-    if costs.half_spread_vol > 0:
-        bumped = black(state.forward, strike, stdev + costs.half_spread_vol / 100.0 * state.root_tau, signs)
-        np.maximum(cost, bumped * state.discount - mid, out=cost)
-    return cost + costs.commission / costs.multiplier

@@ -3,75 +3,24 @@
 from __future__ import annotations
 
 from collections.abc import Iterator, Sequence
-from dataclasses import dataclass
 from functools import cached_property
 from typing import TYPE_CHECKING
 
 import numpy as np
 import numpy.typing as npt
 
-from ..calendar import Schedule
 from ..market import Market
 from ..overlay import Leg, Overlay
 from ..volatility.sources import Volatility
+from .exact_accounts import ExactAccount
 from .families import FamilyReplay
+from .leg_replay import LegReplay, counted, held, leg_labels, of_day
 from .plan import BookKey
 
 if TYPE_CHECKING:
     import pandas as pd
 
 Array = npt.NDArray[np.float64]
-
-
-@dataclass(frozen=True, slots=True, kw_only=True, eq=False)
-class LegReplay:
-    """One leg of one replay.
-
-    Arrays of shape ``(roll,)`` unless said otherwise; prices are per option, ``units`` per 1 of starting
-    wealth. ``close_value`` is intrinsic where the option settled, the model's mid where it was closed early
-    or is still live.
-    """
-
-    label: str
-    leg: Leg
-    schedule: Schedule
-    opened: npt.NDArray[np.intp]  # counted from the first day of the replay
-    closed: npt.NDArray[np.intp]
-    stub: bool
-    strike: Array
-    forward: Array
-    vol: Array
-    premium: Array
-    delta: Array
-    open_cost: Array
-    close_value: Array
-    exit_cost: Array
-    units: Array
-    daily_strike: Array  # (day,)
-    daily_mark: Array  # (day,)
-    daily_delta: Array  # (day,), spot delta of one option, unsigned by position
-
-    @property
-    def signed_ratio(self) -> float:
-        """Options per unit, negative when sold."""
-        return self.leg.direction * self.leg.ratio
-
-    @property
-    def profit(self) -> Array:
-        """Profit of each option held per unit, signed, after its costs; a live one at its mark."""
-        gained = held(self.signed_ratio, self.close_value - self.premium)
-        return gained - held(self.leg.ratio, self.open_cost + self.exit_cost)
-
-    def flags(self) -> list[str]:
-        """A word for each roll that is not the ordinary case."""
-        words: list[list[str]] = [[] for _ in self.opened]
-        if self.stub:
-            words[0].append("stub")
-        if self.leg.direction < 0:
-            for roll in np.flatnonzero(self.premium < self.open_cost):
-                words[int(roll)].append("proceeds below zero")
-        words[-1].append("open")
-        return ["; ".join(w) for w in words]
 
 
 class Replay:
@@ -145,11 +94,27 @@ class Replay:
         return self._state.share_growth / self._state.spot[0]
 
     @cached_property
+    def leg_count(self) -> Array:
+        """Options of each leg held per 1 of starting wealth after each day's trades, shape ``(leg, day)``.
+
+        Counted whether or not the leg has an option on that day; unsigned.
+        """
+        if self._exact is not None:
+            return self._exact.count.take(self._state.anchor_of_day, axis=1)
+        return np.array([held(leg.held_ratio, self.units) for leg in self.overlay.carried])
+
+    @property
+    def _exact(self) -> ExactAccount | None:
+        return self._accounts.exact.get(self._member)
+
+    @cached_property
     def cash(self) -> Array:
         """Cash after each day's trades, shape ``(day,)``; on the first day the trading costs have left it."""
+        if self._exact is not None:
+            return self._exact.cash
         total = np.zeros(len(self))
-        for leg, number in zip(self.overlay.legs, self._rows, strict=True):
-            total += held(leg.ratio, self._book_rolls[number].cash)
+        for leg, number in zip(self.overlay.carried, self._rows, strict=True):
+            total += held(leg.held_ratio, self._book_rolls[number].cash)
         return total * (self.units if self.overlay.account == "resize" else 1.0 / self._state.spot[0])
 
     @cached_property
@@ -160,13 +125,13 @@ class Replay:
     @cached_property
     def leg_value(self) -> Array:
         """Signed value of each leg at mid after each day's trades, shape ``(leg, day)``."""
-        return np.array([self.units * held(leg.signed_ratio, leg.daily_mark) for leg in self.legs])
+        return np.array([leg.leg.direction * counted(leg.count, leg.daily_mark) for leg in self.legs])
 
     @cached_property
     def leg_dollar_delta(self) -> Array:
         """Signed spot delta of each leg times spot, over wealth, shape ``(leg, day)``."""
-        scale = self.units * self.spot / self.wealth
-        return np.array([scale * held(leg.signed_ratio, leg.daily_delta) for leg in self.legs])
+        scale = self.spot / self.wealth
+        return np.array([scale * leg.leg.direction * counted(leg.count, leg.daily_delta) for leg in self.legs])
 
     @cached_property
     def delta(self) -> Array:
@@ -178,10 +143,11 @@ class Replay:
         """Profit at mid of each leg over each day, before costs, shape ``(leg, day)``; zero on the first."""
         profit = np.zeros((len(self.legs), len(self)))
         for row, leg in enumerate(self.legs):
-            # the option held overnight is worth its mark, or what it settles or sells for on a roll day
+            # the option held overnight is worth its mark, or what it settles or sells for on the day it is closed
             ending = leg.daily_mark.copy()
-            ending[leg.opened[1:]] = leg.close_value[:-1]
-            profit[row, 1:] = self.units[:-1] * held(leg.signed_ratio, ending[1:] - leg.daily_mark[:-1])
+            ending[leg.opened] = 0.0
+            ending[leg.closed[leg.done]] = leg.close_value[leg.done]
+            profit[row, 1:] = leg.leg.direction * counted(leg.count[:-1], ending[1:] - leg.daily_mark[:-1])
         return profit
 
     @cached_property
@@ -194,38 +160,44 @@ class Replay:
 
     @cached_property
     def interest(self) -> Array:
-        """Interest on cash over each day, shape ``(day,)``."""
+        """Interest on cash over each day, shape ``(day,)``; less what negative cash costs above the rate."""
         profit = np.zeros(len(self))
         profit[1:] = self.cash[:-1] * self.rate_return[1:]
-        return profit
+        return profit - self.borrow_charge
+
+    @property
+    def borrow_charge(self) -> Array:
+        """What negative cash cost over each day above the rate, shape ``(day,)``, positive."""
+        return np.zeros(len(self)) if self._exact is None else self._exact.borrow_charge
 
     @cached_property
     def trading_cost(self) -> Array:
         """Spread, commission and stock cost paid on each day, shape ``(day,)``, positive."""
         cost = np.zeros(len(self))
-        before = np.concatenate([self.units[:1], self.units[:-1]])
         for leg in self.legs:
-            cost[leg.opened] += self.units[leg.opened] * held(leg.leg.ratio, leg.open_cost)
-            cost[leg.opened[1:]] += before[leg.opened[1:]] * held(leg.leg.ratio, leg.exit_cost[:-1])
+            cost[leg.opened] += counted(leg.count[leg.opened], leg.open_cost)
+            closed = leg.closed[leg.done]
+            cost[closed] += counted(leg.count[closed - 1], leg.exit_cost[leg.done])
         cost[self._state.anchor_day] += self._accounts.stock_cost[self._member]
         return cost
 
     @cached_property
     def legs(self) -> tuple[LegReplay, ...]:
         """The legs, in the overlay's order."""
+        labels, legs = leg_labels(self.overlay), self.overlay.carried
         return tuple(
-            self._leg(label, leg, number)
-            for label, leg, number in zip(leg_labels(self.overlay), self.overlay.legs, self._rows, strict=True)
+            self._leg(label, leg, number, count)
+            for label, leg, number, count in zip(labels, legs, self._rows, self.leg_count, strict=True)
         )
 
     @property
     def _rows(self) -> tuple[int, ...]:
         return self._family.holdings[self._member]
 
-    def _leg(self, label: str, leg: Leg, number: int) -> LegReplay:
+    def _leg(self, label: str, leg: Leg, number: int, count: Array) -> LegReplay:
         key: BookKey = list(self._family.books)[number]
         paths, rolls, row = self._leg_paths[key.group], self._book_rolls[number], key.row
-        schedule = paths.group.schedule
+        schedule = paths.schedule
         opened = schedule.opened - self._plan.start
         return LegReplay(
             label=label,
@@ -233,8 +205,8 @@ class Replay:
             schedule=schedule,
             opened=opened,
             closed=schedule.closed - self._plan.start,
-            stub=not np.isin(self._plan.start, leg.cycle.roll_positions(self.market.dates)),
             strike=paths.strike[row],
+            strike_flags=paths.flags[row],
             forward=paths.forward_open,
             vol=paths.vol_open[row],
             premium=paths.premium[row],
@@ -243,7 +215,9 @@ class Replay:
             close_value=paths.close_value[row],
             exit_cost=rolls.exit_cost,
             units=self.units[opened],
-            daily_strike=paths.strike[row, paths.roll_of_day],
+            count=count,
+            flat=paths.roll_of_day < 0,
+            daily_strike=of_day(paths.strike[row], paths.roll_of_day),
             daily_mark=paths.mark[row],
             daily_delta=paths.delta[row],
         )
@@ -302,6 +276,7 @@ class Replay:
                         "premium": leg.premium,
                         "cost": leg.open_cost,
                         "units": leg.units,
+                        **self._contracts(leg),
                         "delta": leg.delta,
                         "spot_close": np.where(live, np.nan, self.spot[leg.closed]),
                         "settled": np.where(live, np.nan, leg.close_value),
@@ -315,6 +290,13 @@ class Replay:
             )
         rolls = pd.concat(frames, ignore_index=True).sort_values(["opened", "_order"], kind="stable")
         return rolls.drop(columns="_order").reset_index(drop=True)
+
+    def _contracts(self, leg: LegReplay) -> dict[str, Array]:
+        """Whole contracts held of each option from its open, where there is a portfolio."""
+        if self.overlay.portfolio is None:
+            return {}
+        per_contract = self.overlay.costs.multiplier / self.overlay.portfolio
+        return {"contracts": np.round(leg.count[leg.opened] / per_contract)}
 
 
 class Replays(Sequence[Replay]):
@@ -335,19 +317,3 @@ class Replays(Sequence[Replay]):
 
     def __repr__(self) -> str:
         return f"<Replays of {len(self)} overlays>"
-
-
-def held(ratio: float, values: Array) -> Array:
-    """``ratio * values``; what is held at ratio zero counts for nothing, even where it has no price."""
-    return ratio * values if ratio != 0.0 else np.zeros_like(values)
-
-
-def leg_labels(overlay: Overlay) -> list[str]:
-    """``put`` and ``call``, numbered where a right occurs more than once."""
-    rights = [leg.right for leg in overlay.legs]
-    seen: dict[str, int] = {}
-    labels = []
-    for right in rights:
-        seen[right] = seen.get(right, 0) + 1
-        labels.append(right if rights.count(right) == 1 else f"{right}_{seen[right]}")
-    return labels

@@ -1,7 +1,8 @@
 """Where the volatility of an option comes from (C7): source, quote conversion, smile."""
 
 from .smile import FLAT, INDEX, MILD, SMILE_LADDER, STEEP, FlatSmile, Smile, SSVISmile
-from .sources import ImpliedSeries, RealisedVolatility, Volatility
+from .sources import ImpliedSeries, ImpliedSurface, RealisedVolatility, Volatility
+from .surface import SurfaceQuotes
 
 __all__ = [
     "FLAT",
@@ -11,8 +12,10 @@ __all__ = [
     "STEEP",
     "FlatSmile",
     "ImpliedSeries",
+    "ImpliedSurface",
     "RealisedVolatility",
     "SSVISmile",
     "Smile",
+    "SurfaceQuotes",
     "Volatility",
 ]

@@ -15,7 +15,7 @@ from backtest.analytics.verdict import Clause
 
 from ..findings import Findings
 from ..replay_history import Answer
-from . import sections, tables
+from . import beside, sections, tables
 from .blocks import Section
 from .health import DataHealth
 from .luck import bootstrap_blocks, contest_of
@@ -80,6 +80,7 @@ def sections_of(
     data_health: DataHealth | None,
 ) -> list[Section]:
     """In the order of the page; the verdict stands before them."""
+    default = beside.counterparty_section(answer)
     return [
         sections.assumed(answer, history),
         sections.figures(answer),
@@ -90,6 +91,7 @@ def sections_of(
         sections.ledger(answer, findings),
         sections.attribution(answer),
         sections.prices(answer, findings),
+        *([] if default is None else [default]),
         sections.luck(answer, findings, bootstrap_blocks(answer, inference)),
         sections.calendar(answer, findings),
         sections.periods(answer, findings),

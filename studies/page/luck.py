@@ -12,7 +12,7 @@ from backtest.analytics.roll_costs import payoffs_at_close
 from backtest.analytics.verdict import Difference
 
 from ..path_names import PATHS
-from ..replay_history import Answer
+from ..replay_history import SALE, Answer
 from .blocks import Block, Prose, Table
 from .drawn import CONTEST, contest_figures
 from .tables import return_title
@@ -32,7 +32,7 @@ def contest_of(found: Answer, inference: Inference | None) -> Contest:
     assert own is not None
     made: dict[str, dict[str, Difference]] = {}
     for name, other in found.figures.items():
-        if other is None or not (name == "hold" or name.startswith("mix_")):
+        if other is None or name == SALE or not (name == "hold" or name.startswith("mix_")):
             continue
         drawn = None if inference is None else inference.comparisons.get(name)
         row = {}

@@ -11,9 +11,10 @@ from backtest.overlay import Leg
 
 from ..assumptions import CAUTION
 from ..findings import Findings
+from ..leg_words import leg_sentence
 from ..path_names import PATHS
 from ..replay_history import Answer
-from . import costs, drawn, paths, tables
+from . import beside, costs, drawn, paths, tables
 from .blocks import Block, Command, Definitions, Fold, Listing, Prose, Section, Shown, Table
 from .health import DataHealth, health_blocks
 from .luck import Contest, contest_table
@@ -56,7 +57,7 @@ def assumed(found: Answer, history: str) -> Section:
         f"{counted(len(replay), 'trading day')}"
     )
     items = [("Data", words)]
-    for label, leg in zip((leg.label for leg in replay.legs), replay.overlay.legs, strict=True):
+    for label, leg in zip((leg.label for leg in replay.legs), replay.overlay.carried, strict=True):
         items.append((upper_first(label.replace("_", " ")), leg_words(leg)))
     items += [
         (TITLES.get(name, upper_first(name.replace("_", " "))), upper_first(typographic(text)))
@@ -67,24 +68,18 @@ def assumed(found: Answer, history: str) -> Section:
 
 def leg_words(leg: Leg) -> str:
     """One leg as a sentence."""
-    rule = type(leg.strike).__name__
-    percents = {"PercentOfSpot": "of spot", "PercentOfForward": "of forward"}
-    strike = f"{leg.strike.percent:g}% {percents[rule]}" if rule in percents else repr(leg.strike)  # type: ignore[attr-defined]
-    term = counted(leg.term, "month")
-    verb = "Bought" if leg.direction > 0 else "Sold"
-    ratio = "" if leg.ratio == 1 else f", {leg.ratio:g} per share"
-    shift = f", rolled {counted(leg.shift_days, 'trading day')} later" if leg.shift_days > 0 else ""
-    return f"{verb} at {strike}, {term} to expiry, replaced {ROLL_WORDS[leg.roll]}{ratio}{shift}"
+    return upper_first(typographic(leg_sentence(leg)))
 
 
 def figures(found: Answer) -> Section:
     """Headline table, then all figures."""
     return Section(
         anchor="figures", title="Headline figures", question="What did it do, and what would holding less have done?",
-        blocks=[
+        blocks=_blocks(
             tables.headline_table(found),
+            beside.sale_words(found),
             Fold(summary="All figures, for every path", blocks=[tables.full_table(found)]),
-        ],
+        ),
     )  # fmt: skip
 
 
@@ -143,6 +138,7 @@ def ledger(found: Answer, findings: Findings) -> Section:
             if np.isfinite(findings.ledger.overlay).all()
             else None,
             costs.cost_table(found),
+            beside.margin_table(found),
             drawn.yearly_picture(found, findings),
             Fold(summary="Ledger by year", blocks=[by_year]),
         ),
@@ -161,7 +157,7 @@ def attribution(found: Answer) -> Section:
 
 def prices(found: Answer, findings: Findings) -> Section:
     """Smile ladder and break-evens."""
-    has_put = any(leg.right == "put" for leg in found.replay.overlay.legs)
+    has_put = any(leg.right == "put" for leg in found.replay.overlay.carried)
     picture = drawn.ladder_picture(found, findings)
     return Section(
         anchor="prices", title="How far it leans on the prices",

@@ -14,7 +14,7 @@ from markupsafe import Markup
 from matplotlib.figure import Figure
 
 from ..study_answer import StudyAnswer, overlay_names
-from . import study_groups, study_sections
+from . import study_cautions, study_groups, study_sections
 from .build import _style as report_style
 from .study_blocks import Part
 from .study_data import explorer_data
@@ -45,8 +45,8 @@ def build_study_page(found: StudyAnswer, *, command: str) -> str:
         parts.append(study_sections.tried(found, views, first_replay))
         for view in detailed:
             parts += _parts(found, view, alone=len(detailed) == 1, explored=data is not None)
-    parts += [study_sections.cautions(views, first_replay), study_sections.again(command)]
-    keys = study_sections.key_figures(views[0]) if len(views) == 1 else []
+    parts += [study_cautions.cautions(found, views, first_replay), study_sections.again(command)]
+    keys = study_sections.key_figures(views[0], study.comparison) if len(views) == 1 else []
     script = _file("study.js")
     return (
         _environment()
@@ -101,7 +101,7 @@ def _parts(found: StudyAnswer, view: View, *, alone: bool, explored: bool) -> li
 
 
 def _line(found: StudyAnswer, view: View) -> MixLine | None:
-    return mix_line(one_replay(found, view), view.group.first)
+    return mix_line(one_replay(found, view))
 
 
 def _subject(found: StudyAnswer, views: list[View]) -> str:

@@ -36,7 +36,7 @@ def search(found: StudyAnswer, view: View, prefix: str) -> Part:
         blocks.append(Prose(f"The tests that draw the history again cannot be had: {typographic(reason)}."))
     else:
         blocks.append(tests_table(check))
-    walk = walk_table(view)
+    walk = walk_table(view, mix)
     if walk is not None:
         blocks += [walk, Prose(_walked(view))]
     elif group.tried > 1:
@@ -84,7 +84,7 @@ def _probability(view: View) -> str:
     )
 
 
-def walk_table(view: View) -> Table | None:
+def walk_table(view: View, comparison: str) -> Table | None:
     """Chosen on the days before, judged on the days after; None where there was no choice."""
     steps = view.group.steps
     if not steps or view.group.tried == 1:
@@ -103,7 +103,11 @@ def walk_table(view: View) -> Table | None:
         rows=rows, words=frozenset({0, 1, 6}), dense=True,
         notes=[
             "Each time the overlay that was best so far is chosen and followed over the next part of the days. Beside "
-            "it stand the median of all overlays there, and the share of them that did better."
+            "it stand the median of all overlays there, and the share of them that did better.",
+            "Best so far is the one with the highest Sharpe ratio less the hold's on the days before.",
+            "Sharpe ratios, here and in the pictures, need no share of stock found with hindsight, since every mix of "
+            "stock and cash has the hold's; the best of all days is the one with the highest information ratio "
+            f"against {comparison}, which is made of the daily differences that the tests look at.",
         ],
     )  # fmt: skip
 

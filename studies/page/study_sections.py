@@ -7,19 +7,19 @@ from math import prod
 
 from backtest import Replay
 
-from ..assumptions import CAUTION, assumptions_of, warnings_of
+from ..assumptions import assumptions_of
 from ..axes import Axis
 from ..overlay_files import overlay_from_table
 from ..study import Study
 from ..study_answer import StudyAnswer
 from . import study_pictures, study_tables
-from .blocks import Command, Definitions, Listing, Prose, Shown
+from .blocks import Command, Definitions, Prose, Shown
 from .pictures import Picture
 from .sections import TITLES, leg_words
 from .study_blocks import Explorer, Heading, Part, StudyBlock
 from .study_data import MOST_EXPLORED, key_of
 from .study_search import chance, search
-from .study_view import SHARPE_GAIN, MixLine, View
+from .study_view import SHARPE_GAIN, SHARPE_GAIN_ON_HOLD, MixLine, View
 from .words import counted, date, known, listed, percent, ratio, typographic, upper_first
 from .words import span as length
 
@@ -34,16 +34,16 @@ def _pictures(*found: Picture | None) -> list[StudyBlock]:
 # ---------------------------------------------------------------- the whole study
 
 
-def key_figures(view: View) -> list[tuple[str, str, str]]:
+def key_figures(view: View, comparison: str) -> list[tuple[str, str, str]]:
     """What the page begins with: title, figure, what it is of."""
     group = view.group
+    gain, over = (SHARPE_GAIN_ON_HOLD, "the hold") if comparison == "hold" else (SHARPE_GAIN, "its same-beta mix")
     sizes = " × ".join(f"{len(axis.values):,}" for axis in view.axes)
     check = group.check
     tested = check is not None and known(check.luck)
     return [
         ("Overlays tried", f"{group.tried:,}", sizes if len(view.axes) > 1 else ""),
-        ("Gain of the best", SHARPE_GAIN.written(view.worth(SHARPE_GAIN.field, view.best)),
-         "of Sharpe ratio over its same-beta mix"),
+        ("Gain of the best", gain.written(view.worth(gain.field, view.best)), f"of Sharpe ratio over {over}"),
         ("As good by luck", chance(check.luck, check.resamples) if check and tested else "–",
          "chance, the search allowed for"),
         ("Any advantage", percent(group.deflated.probability, 0), "probability after so many trials"),
@@ -109,8 +109,8 @@ def _days(views: Sequence[View]) -> list[tuple[str, str]]:
             "Days" if len(views) == 1 else f"Days of {view.title}",
             (f"{view.title}: " if len(views) == 1 else "")
             + f"{date(view.group.first)} to {date(view.group.last)}, {length(view.group.first, view.group.last)}, "
-            "the days that all overlays have in common; tests, halves and walk-forward stand on these, an overlay's "
-            "own figures and those of its hold begin on its own first roll day, on the first of these at the latest",
+            "the same for every overlay and the hold: from the latest of the overlays' first roll days on. One whose "
+            "own came earlier begins with options under way (stubs), held to its next roll day",
         )
         for view in views
     ]
@@ -123,18 +123,6 @@ def _touched(study: Study, field: str, *, but: str = "?") -> list[str]:
         for axis in study.axes
         if any((f"{f}.".startswith(f"{field.rstrip('.')}.")) and not f.startswith(but) for f in axis.fields)
     ]
-
-
-def cautions(views: Sequence[View], replay: Replay) -> Part:
-    """What may mislead; of one overlay, as most of it holds for all."""
-    view = views[0]
-    row = next(row for row in (view.own, view.best, 0) if row is not None)
-    said = [f"{upper_first(typographic(text))}." for text in warnings_of(replay)]
-    whose = "yours" if view.own is not None else "the best" if view.best is not None else "the first"
-    blocks: list[StudyBlock] = []
-    if said:
-        blocks += [Prose(f"Of one overlay, {whose} ({view.names[row]}) on {view.title}:"), Listing(said)]
-    return Part(anchor="cautions", title="Cautions", blocks=[*blocks, Prose(CAUTION)])
 
 
 def again(command: str) -> Part:

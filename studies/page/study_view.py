@@ -9,7 +9,7 @@ import numpy as np
 import numpy.typing as npt
 import pandas as pd
 
-from backtest import Replay, replay
+from backtest import Replay
 from backtest.analytics.comparisons import mix_wealth
 from backtest.analytics.drawdowns import drawdown_path
 from backtest.analytics.performance import DAYS_IN_CALENDAR_YEAR, annual_return, daily_excess
@@ -18,8 +18,7 @@ from backtest.analytics.resampling import TIE
 from ..axes import Axis
 from ..batches import FIGURES
 from ..expansion import Expansion
-from ..runner import market_of
-from ..study_answer import GroupAnswer, StudyAnswer
+from ..study_answer import GroupAnswer, StudyAnswer, replay_member
 from .words import number
 
 Array = npt.NDArray[np.float64]
@@ -53,6 +52,9 @@ SHARPE_GAIN = FigureWords(
     field="sharpe_less_mix", title="Sharpe ratio less the same-beta mix's", head="Sharpe less mix's",
     unit="Sharpe ratio",
 )  # fmt: skip
+SHARPE_GAIN_ON_HOLD = FigureWords(
+    field="sharpe_less_hold", title="Sharpe ratio less the hold's", head="Sharpe less hold's", unit="Sharpe ratio"
+)
 RETURN_GAIN = FigureWords(
     field="return_less_hold", title="return a year less the hold's", head="return less hold's, points",
     unit="points a year", scale=100.0,
@@ -200,9 +202,7 @@ def one_replay(found: StudyAnswer, view: View) -> Replay:
     """The reader's own overlay replayed, or else the best, or else the first."""
     planned = found.plan.groups[view.number - 1]
     row = next(row for row in (view.own, view.best, 0) if row is not None)
-    (point,) = Expansion(found.plan.study).many(planned.points[row : row + 1])
-    market = market_of(found.plan, planned)
-    return replay(market, point.overlay, volatility=point.volatility, start=point.start, end=point.end)
+    return replay_member(found.plan, Expansion(found.plan.study), planned, row)
 
 
 @dataclass(frozen=True, slots=True, kw_only=True, eq=False)
@@ -222,10 +222,9 @@ class MixLine:
         return np.asarray(np.interp(removed, self.removed[order], self.cost[order], left=np.nan, right=np.nan))
 
 
-def mix_line(found: Replay, first: np.datetime64) -> MixLine | None:
-    """The mixes of share 1 to 0 from a day on; None where the days are too few."""
-    offset = int(np.searchsorted(found.dates, first))
-    hold, cash, dates = found.hold[offset:], found.rate_return[offset:], found.dates[offset:]
+def mix_line(found: Replay) -> MixLine | None:
+    """The mixes of share 1 to 0; None where the days are too few."""
+    hold, cash, dates = found.hold, found.rate_return, found.dates
     if len(dates) < 3:
         return None
     excess = daily_excess(hold, cash)

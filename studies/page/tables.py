@@ -12,7 +12,7 @@ from backtest.analytics.robustness import BreakEven
 
 from ..findings import Findings
 from ..path_names import PATHS
-from ..replay_history import Answer
+from ..replay_history import SALE, Answer
 from .blocks import Cell, Table
 from .words import DASH, date, days, number, percent, points, ratio
 
@@ -102,6 +102,8 @@ def _share(found: Answer, name: str) -> str:
         return percent(1.0, 0)
     if not name.startswith("mix_"):
         return ""
+    if name == SALE:
+        return DASH if found.sale is None else percent(found.sale.share, 0)
     mix = dict(found.mixes.items())[name.removeprefix("mix_")]
     return DASH if mix is None else percent(mix.share, 0)
 

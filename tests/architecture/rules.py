@@ -19,7 +19,7 @@ OURS = (*PACKAGES, "tests")
 OUT_OF_REACH = "<out of reach>"
 
 #: Where pandas enters and leaves the engine; everything between is numpy.
-PANDAS_DOORS = ("backtest/market.py", "backtest/engine/result.py")
+PANDAS_DOORS = ("backtest/market.py", "backtest/volatility/surface.py", "backtest/engine/result.py")
 #: Where the engine's figures become pictures.
 PICTURES = "backtest/charts"
 

@@ -19,7 +19,8 @@ import pytest
 from dateutil.easter import easter  # type: ignore[import-untyped]
 
 from backtest import OverlayError, PlanError
-from backtest.calendar import ListedCycle, Schedule, inception_position, leg_schedule, listed_expiry, third_friday
+from backtest.calendar import Schedule, inception_position, leg_schedule
+from backtest.cycles import ListedCycle, listed_expiry, third_friday
 
 Dates = npt.NDArray[np.datetime64]
 MONTH, QUARTER, HALF, YEAR = (ListedCycle(months=n) for n in (1, 3, 6, 12))

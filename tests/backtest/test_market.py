@@ -20,7 +20,7 @@ from backtest.errors import MarketError
 
 # Thursday, Friday, Monday, Tuesday: 1, 3 and 1 calendar days apart
 DAYS = pd.DatetimeIndex(["2020-01-02", "2020-01-03", "2020-01-06", "2020-01-07"])
-EVERY_ARRAY = [f.name for f in dataclasses.fields(Market)]
+EVERY_ARRAY = [f.name for f in dataclasses.fields(Market) if f.name != "surface"]
 
 
 def frame(**columns: Any) -> pd.DataFrame:
@@ -58,10 +58,11 @@ def test_a_close_alone() -> None:
 
 
 def test_other_columns_and_the_order_of_columns_do_not_matter() -> None:
-    plain = frame(vol=0.2, rate=0.01, dividend=0.1)
-    more = plain.assign(open="x", volatility=99.0, vol_index=50.0, vol_=7.0, vol_0=7.0, VOL=7.0)[
-        ["VOL", "vol_0", "vol_", "vol_index", "volatility", "open", "dividend", "rate", "vol", "close"]
-    ]
+    plain = frame(vol=0.2, rate=0.01, dividend=0.1, open=100.5, high=103.0, low=98.0, signal=1.0)
+    more = plain.assign(opening="x", volatility=99.0, vol_index=50.0, vol_=7.0, vol_0=7.0, VOL=7.0, signals="x")[
+        ["VOL", "vol_0", "vol_", "vol_index", "volatility", "opening", "signals", "signal", "low", "high", "open",
+         "dividend", "rate", "vol", "close"]
+    ]  # fmt: skip
     a, b = Market.from_frame(plain), Market.from_frame(more)
     for name in EVERY_ARRAY:
         np.testing.assert_array_equal(getattr(a, name), getattr(b, name))
@@ -198,7 +199,7 @@ def test_a_constant_yield_beside_dividends_is_for_the_forwards_only() -> None:
 
 @pytest.mark.parametrize("name", EVERY_ARRAY)
 def test_arrays_are_read_only(name: str) -> None:
-    market = Market.from_frame(frame(vol=0.2, rate=0.01, dividend=0.1))
+    market = Market.from_frame(frame(vol=0.2, rate=0.01, dividend=0.1, open=100.5, high=103.0, low=98.0, signal=1.0))
     with pytest.raises(ValueError, match="read-only"):
         getattr(market, name)[:] = getattr(market, name)
     with pytest.raises(dataclasses.FrozenInstanceError):

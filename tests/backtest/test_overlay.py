@@ -14,7 +14,7 @@ import numpy as np
 import pytest
 
 from backtest import Costs, Leg, Overlay, OverlayError, PercentOfForward, PercentOfSpot
-from backtest.calendar import ListedCycle
+from backtest.cycles import ListedCycle
 from backtest.overlay import ACCOUNTS, NO_COSTS
 
 
@@ -63,9 +63,9 @@ LEG_ERRORS = [
     ({"position": "bought"}, "position is 'bought'; it takes one of: long, short", "position"),
     ({"position": None}, "position is None; it takes one of: long, short", "position"),
     ({"right": "puts"}, "right is 'puts'; it takes one of: put, call", "right"),
-    ({"roll": "weekly"}, "roll is 'weekly'; it takes one of: month, quarter, half, year", "roll"),
-    ({"roll": 3}, "roll is 3; it takes one of: month, quarter, half, year", "roll"),
-    ({"roll": ["month"]}, "roll is ['month']; it takes one of: month, quarter, half, year", "roll"),
+    ({"roll": "weekly"}, "roll is 'weekly'; it takes one of: month, quarter, half, year, days", "roll"),
+    ({"roll": 3}, "roll is 3; it takes one of: month, quarter, half, year, days", "roll"),
+    ({"roll": ["month"]}, "roll is ['month']; it takes one of: month, quarter, half, year, days", "roll"),
     ({"strike": 95}, "strike is 95; give a strike rule such as PercentOfSpot(95)", "strike"),
     ({"strike": None}, "strike is None; give a strike rule such as PercentOfSpot(95)", "strike"),
     ({"phase": 3}, "phase is 3; it takes a whole number from 0 to 2 for a cycle of 3 month(s)", "phase"),
@@ -126,6 +126,7 @@ def test_costs_by_default_and_none() -> None:
         "multiplier": 100.0,
         "settlement_fee": 0.0,
         "stock_bps": 0.0,
+        "borrow_spread": 0.0,
     }
     assert dataclasses.asdict(Costs()) == expected
     assert dataclasses.asdict(NO_COSTS) == {**expected, "half_spread_vol": 0.0}
@@ -140,7 +141,10 @@ COST_LIMITS: dict[str, float | None] = {
     "multiplier": None,
     "settlement_fee": None,
     "stock_bps": 1000.0,
+    "borrow_spread": 100.0,
 }
+#: what else the message says
+UNITS = {"borrow_spread": " percent a year"}
 
 
 @pytest.mark.parametrize("name", COST_LIMITS)
@@ -148,6 +152,7 @@ COST_LIMITS: dict[str, float | None] = {
 def test_costs_that_are_none(name: str, value: Any) -> None:
     most = COST_LIMITS[name]
     limit = "of at least 0" if most is None else f"from 0 to {most:g}"
+    limit += UNITS.get(name, "")
     assert refusal(Costs, **{name: value}) == (f"{name} is {value!r}; it takes a number {limit}", name)
 
 
@@ -158,7 +163,7 @@ def test_costs_at_their_limits(name: str) -> None:
         assert getattr(Costs(**{name: 0}), name) == 0
     assert getattr(Costs(**{name: most or 1e9}), name) == (most or 1e9)
     if most is not None:
-        message = f"{name} is {most + 0.5}; it takes a number from 0 to {most:g}"
+        message = f"{name} is {most + 0.5}; it takes a number from 0 to {most:g}{UNITS.get(name, '')}"
         assert refusal(Costs, **{name: most + 0.5}) == (message, name)
 
 

@@ -1,7 +1,7 @@
-"""Where vols come from: realised estimator, smiles, quotes of one or several tenors (C7, C7a).
+"""Where vols come from: smiles, quotes of one or several tenors (C7); realised vol is in ``test_realised.py``.
 
-Rung: identity (points of smiles and term structures worked by hand), independent library (pandas for realised vol;
-scipy's quadrature of two integrals of the fair variance that share no code with the product) and behaviour (messages).
+Rung: identity (points of smiles and term structures worked by hand), independent library (scipy's quadrature of two
+integrals of the fair variance that share no code with the product) and behaviour (messages).
 """
 
 from __future__ import annotations
@@ -30,7 +30,6 @@ from backtest.volatility import (
     RealisedVolatility,
     SSVISmile,
 )
-from backtest.volatility.realised import close_to_close
 from backtest.volatility.smile import fair_variance
 
 Array = npt.NDArray[np.float64]
@@ -50,62 +49,6 @@ def at_the_money(volatility: Volatility, on: Market, day: list[int], tau_days: l
     """Total variances at ``x = 0``."""
     tau = np.array(tau_days) / 365.0
     return volatility.on(on).slice(np.array(day), tau).total_variance(np.zeros(len(day)))
-
-
-# ---------------------------------------------------------------- realised
-
-
-def random_closes(count: int = 400) -> Array:
-    return 100.0 * np.exp(np.cumsum(0.012 * np.random.default_rng(5).standard_t(4, count)))
-
-
-def test_realised_by_hand() -> None:
-    # log returns +.01 -.01 +.03: the first two have mean 0 and variance (.0001 + .0001) / 1, the last two mean .01
-    # and variance .0004 + .0004
-    close = np.exp([0.0, 0.01, 0.0, 0.03])
-    expected = [np.nan, np.nan, (2e-4 * 252) ** 0.5, (8e-4 * 252) ** 0.5]
-    np.testing.assert_allclose(close_to_close(close, window=2), expected, rtol=1e-12)
-
-
-@pytest.mark.parametrize("window", [2, 21, 63, 252])
-def test_realised_against_pandas(window: int) -> None:
-    close = random_closes()
-    expected = pd.Series(np.log(close)).diff().rolling(window).std(ddof=1) * 252**0.5
-    found = close_to_close(close, window)
-    # nothing before the window is full: its first return needs one close more
-    assert np.isnan(found[:window]).all()
-    assert np.isfinite(found[window:]).all()
-    np.testing.assert_allclose(found, expected, rtol=1e-10)
-    assert found[-1] == pytest.approx(np.std(np.diff(np.log(close[-window - 1 :])), ddof=1) * 252**0.5, rel=1e-12)
-
-
-def test_realised_window_of_63_unless_given() -> None:
-    close = random_closes(70)
-    np.testing.assert_array_equal(close_to_close(close), close_to_close(close, window=63))
-
-
-@pytest.mark.parametrize(("closes", "known"), [(5, 0), (6, 1), (3, 0), (1, 0)])
-def test_realised_of_short_histories(closes: int, known: int) -> None:
-    assert np.isfinite(close_to_close(random_closes(closes), window=5)).sum() == known
-
-
-def test_realised_looks_back_only() -> None:
-    close = random_closes(100)
-    changed = close.copy()
-    changed[60:] *= 1.7
-    np.testing.assert_array_equal(close_to_close(close, 21)[:60], close_to_close(changed, 21)[:60])
-    assert close_to_close(close, 21)[60] != close_to_close(changed, 21)[60]
-
-
-def test_realised_source_on_a_market() -> None:
-    close = random_closes(40)
-    bound = Volatility(source=RealisedVolatility(window=21, markup=1.1), smile=FLAT).on(market({}, 40, close))
-    assert bound.first_day == 21
-    assert (bound.missing(21, 39), bound.missing(15, 39), bound.missing(20, 20)) == (None, 15, 20)
-    # one vol for every tenor: total variance is (1.1 realised)^2 tau
-    day, tau = np.array([21, 30, 39]), np.array([0.1, 0.5, 2.0])
-    expected = (1.1 * close_to_close(close, 21)[day]) ** 2 * tau
-    np.testing.assert_allclose(bound.slice(day, tau).total_variance(np.array([-0.3, 0.0, 0.2])), expected, rtol=1e-14)
 
 
 # ---------------------------------------------------------------- smiles
@@ -289,22 +232,26 @@ def test_a_quote_that_is_the_at_the_money_vol(smile: AnySmile, quote: str) -> No
     np.testing.assert_allclose(found, [0.04 * 30 / 365, 0.16 * 91 / 365], rtol=1e-14)
 
 
-def test_realised_vol_is_never_converted() -> None:
-    close = random_closes(30)
-    source = RealisedVolatility(window=10)
-    read = [
-        at_the_money(Volatility(source=source, quote=quote), market({}, 30, close), [15], [30])
-        for quote in ("at the money", "variance swap")
-    ]
-    np.testing.assert_array_equal(read[0], read[1])
-    assert read[0][0] == pytest.approx(close_to_close(close, 10)[15] ** 2 * 30 / 365, rel=1e-14)
-
-
 def test_each_tenor_is_converted_at_its_own_tenor() -> None:
     quotes = market({"vol_30": 0.2, "vol_365": 0.25})
     theta = at_the_money(Volatility(smile=STEEP, quote="variance swap"), quotes, [0, 0], [30, 365])
     for found, swap in zip(theta, (0.04 * 30 / 365, 0.0625)):
         assert fair_by_options(STEEP, float(found)) == pytest.approx(swap, rel=1e-12)
+
+
+@pytest.mark.parametrize("tenor", [9, 30, 93, 365])
+@pytest.mark.parametrize(
+    ("smile", "within"),
+    [*((smile, 1e-11) for smile in SMILES.values()), (SSVISmile(rho=-0.97, eta=1.0, gamma=0.5), 1e-8)],
+    ids=[*SMILES, "nearly one-sided"],
+)
+def test_a_variance_swap_quote_against_direct_integration(smile: AnySmile, within: float, tenor: int) -> None:
+    """The integral of C7, done numerically with the vol that a market's quote became, gives the quote back."""
+    quotes = [0.09, 0.2, 0.45, 0.6]
+    on = market({f"vol_{tenor}": quotes})
+    theta = at_the_money(Volatility(smile=smile, quote="variance swap"), on, [0, 1, 2, 3], [tenor] * 4)
+    for quote, found in zip(quotes, theta):
+        assert fair_by_options(smile, float(found)) == pytest.approx(quote**2 * tenor / 365, rel=within)
 
 
 # vols of 20%, 30% and 25% at 30, 90 and 180 days: total variances, times 365, of 1.2, 8.1 and 11.25

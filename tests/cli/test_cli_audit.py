@@ -6,6 +6,7 @@ Rung: behaviour (what was made is spoilt by hand).
 from __future__ import annotations
 
 import json
+import os
 import shutil
 from collections.abc import Callable
 from pathlib import Path
@@ -95,9 +96,31 @@ def test_the_same_and_different(replayed: Run, home: Path) -> None:
     assert told["other_versions"] == {"numpy": {"then": "1.0", "now": np.__version__}}
 
 
+def test_a_version_that_the_store_has_kept(replayed: Run, home: Path, files: list[object]) -> None:
+    file = home / "histories" / "mine.parquet"
+    then = sha256_of(file)
+    os.utime(file, (1_600_000_000, 1_600_000_000))  # 2020-09-13 12:26:40 UTC
+    assert replayed("load", "mine", *files, "--from", "2020-01-01", "--to", "2021-11-30").code == 0
+    now = sha256_of(file)
+    ran = replayed("audit", "o")
+    assert (ran.code, ran.err) == (0, "")
+    same = "Same: daily.parquet, rolls.parquet and summary.json of o come out again, value for value.\n"
+    version = f"  history: version {then[:12]} of mine, loaded 2020-09-13 12:26 UTC, which the store has kept; mine "
+    assert ran.out == f"{same}{version}has been loaded anew since ({now[:12]} now)\n{NOT_COMPARED}"
+    told = json.loads(replayed("audit", "o", "--json").out)
+    assert (told["verdict"], told["changed_inputs"]) == ("same", [])
+    assert told["kept_versions"] == [{
+        "history": "mine", "file": f"histories/.versions/mine/000001-20200913T122640Z-{then}.parquet", "sha256": then,
+        "loaded": "2020-09-13 12:26", "now": now,
+    }]  # fmt: skip
+    file.unlink()
+    assert replayed("audit", "o").out == f"{same}{version}is no longer there itself\n{NOT_COMPARED}"
+
+
 def test_other_data(replayed: Run, home: Path, files: list[object]) -> None:
     then = sha256_of(home / "histories" / "mine.parquet")
     assert replayed("load", "mine", *files, "--from", "2020-01-01", "--to", "2021-11-30").code == 0
+    assert replayed("histories", "--prune", 0).code == 0
     now = sha256_of(home / "histories" / "mine.parquet")
     changed = f"  histories/mine.parquet: sha256 was {then}, is {now}\n"
     ran = replayed("audit", "o")
@@ -107,7 +130,7 @@ def test_other_data(replayed: Run, home: Path, files: list[object]) -> None:
         "Nothing was made again; --anyway does so with the inputs of now.\n"
     )
     told = json.loads(replayed("audit", "o", "--json").out)
-    assert (told["verdict"], told["compared"]) == ("other data", [])
+    assert (told["verdict"], told["compared"], told["kept_versions"]) == ("other data", [], [])
     assert told["changed_inputs"] == [{"file": "histories/mine.parquet", "then": then, "now": now}]
     ran = replayed("audit", "o", "--anyway")
     assert ran.code == 4

@@ -107,7 +107,8 @@ def test_an_overlay_file_with_a_mistake(stored: Run, refused: Refused, home: Pat
     said = refused(2, "replay", "mine", "--overlay", "band.toml")
     assert said == (
         "rollband: band.toml, line 15, leg.2.strike.percent_of_spt: unknown key; did you mean percent_of_spot? "
-        "Known here: percent_of_spot, percent_of_forward\n"
+        "Known here: percent_of_spot, percent_of_forward, deviations, delta, premium_percent, financed_share, "
+        "mirrored_leg, of_legs, kept_until_moved, ratchet, not_below, not_above, not_below_leg, strike_step\n"
     )
 
 

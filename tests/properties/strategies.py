@@ -30,7 +30,7 @@ from backtest import (
     Volatility,
     replay,
 )
-from backtest.calendar import ROLL_MONTHS
+from backtest.cycles import ROLL_MONTHS
 
 Array = npt.NDArray[np.float64]
 
@@ -176,6 +176,7 @@ def overlays(*, ratio: float | None = None) -> st.SearchStrategy[Overlay]:
         legs=st.lists(legs(ratio=ratio), min_size=1, max_size=4).map(tuple),
         account=st.sampled_from(["resize", "cash"]),
         costs=costs(),
+        crossed=st.just(True),
     )
 
 

@@ -41,6 +41,7 @@ values = ["month", "quarter", "half", "year"]
 roll = "quarter"
 """
 ROLLS = ("month", "quarter", "half", "year")
+STRIKES = (80, 85, 90, 95, 100)
 
 
 def rollband(*arguments: object) -> None:
@@ -79,11 +80,24 @@ def test_the_hold_is_the_index(home: Path, overlays: pd.DataFrame) -> None:
         assert row["hold_annual_return"] == pytest.approx(grown ** (1 / years) - 1, rel=1e-12)
 
 
+def put_alone(strike: float, roll: str) -> Overlay:
+    return Overlay(legs=(Leg(position="long", right="put", roll=roll, strike=PercentOfSpot(strike)),))
+
+
+def test_all_rows_begin_on_the_first_roll_day_of_the_yearly_put(home: Path, overlays: pd.DataFrame) -> None:
+    market = Market.from_frame(read_history(home / "store", "index").frame)
+    own = {roll: {str(replay(market, put_alone(strike, roll)).dates[0]) for strike in STRIKES} for roll in ROLLS}
+    # by hand: third Fridays, once the vol of 63 returns is there, on 1950-04-04
+    assert own == {"month": {"1950-04-21"}, "quarter": {"1950-06-16"}, "half": {"1950-06-16"}, "year": {"1950-12-15"}}
+    assert {str(day.date()) for day in overlays["inception"]} == {"1950-12-15"}
+    for name in ("hold_annual_return", "hold_volatility", "hold_sharpe", "hold_max_drawdown"):
+        assert len(set(overlays[name])) == 1, name
+
+
 def test_rows_are_single_replays(home: Path, overlays: pd.DataFrame) -> None:
     market = Market.from_frame(read_history(home / "store", "index").frame)
     for strike, roll in ((80, "month"), (95, "quarter"), (100, "year")):
-        put = Leg(position="long", right="put", roll=roll, strike=PercentOfSpot(strike))
-        found = replay(market, Overlay(legs=(put,)))
+        found = replay(market, put_alone(strike, roll), inception="1950-12-15")
         figures = performance(found.wealth, dates=found.dates, rate_return=found.rate_return, hold=found.hold)
         row = overlays.loc[(strike, roll)]
         for name in ("annual_return", "volatility", "sharpe", "max_drawdown", "beta", "expected_shortfall_monthly"):
@@ -114,5 +128,9 @@ def test_what_is_said_of_the_best(home: Path, overlays: pd.DataFrame) -> None:
 
 
 def test_the_audit_finds_the_same(home: Path, capsys: pytest.CaptureFixture[str]) -> None:
-    rollband("audit", home / "out", "--sample", 5, "--store", home / "store")
-    assert "same" in capsys.readouterr().out.lower()
+    # of the rows drawn with seed 2 none is of a yearly put, whose first roll day is the first of all their days
+    drawn = pd.read_parquet(home / "out" / "overlays.parquet").iloc[[1, 4, 5, 8, 13]]
+    assert sorted(drawn["roll"]) == ["month", "month", "quarter", "quarter", "quarter"]
+    rollband("audit", home / "out", "--sample", 5, "--seed", 2, "--store", home / "store")
+    said = capsys.readouterr().out
+    assert said.startswith("Same: 5 of 20 rows of overlays.parquet and periods.parquet (drawn with --seed 2) ")

@@ -1,4 +1,4 @@
-"""What the slow twin knows of dates, prices and vols: raw columns, listed expiries, Black, SSVI (C1, C2, C5, C7).
+"""What the slow twin knows of prices and vols: raw columns, Black, SSVI, values of options (C1, C5, C7, C8).
 
 Plain Python, borrowing nothing from ``backtest``; see ``slow_twin.py``.
 """
@@ -6,15 +6,13 @@ Plain Python, borrowing nothing from ``backtest``; see ``slow_twin.py``.
 from __future__ import annotations
 
 import math
-from dataclasses import dataclass, field
+from dataclasses import dataclass
 from datetime import date, timedelta
 from functools import cache
 from itertools import pairwise
 from typing import Any
 
 from scipy.optimize import brentq
-
-MONTHS_IN_ROLL = {"month": 1, "quarter": 3, "half": 6, "year": 12}
 
 
 @dataclass
@@ -27,6 +25,8 @@ class History:
     rate: list[float]
     dividend_yield: list[float]
     vols: dict[int, list[float]]  # tenor in days -> decimal quotes
+    open: list[float] | None = None
+    signal: list[float] | None = None  # NaN where a day brings none
 
 
 def history_from_frame(frame: Any, rate: float | None = None, dividend_yield: float | None = None) -> History:
@@ -54,63 +54,17 @@ def history_from_frame(frame: Any, rate: float | None = None, dividend_yield: fl
     for name in frame.columns:
         if name == "vol" or name.startswith("vol_"):
             vols[30 if name == "vol" else int(name[4:])] = [float(v) for v in frame[name]]
-    continuous = [math.log(1.0 + y) for y in effective]  # C5
-    return History(days=days, close=close, dividend=cash, rate=continuous, dividend_yield=carry, vols=vols)
-
-
-# ---------------------------------------------------------------- dates (C1, C2)
-
-
-def third_friday(month: int) -> date:
-    """Third Friday of a month counted as ``12 * year + (1..12) - 1``."""
-    first = date(month // 12, month % 12 + 1, 1)
-    return first + timedelta(days=(4 - first.weekday()) % 7 + 14)
-
-
-@dataclass
-class Calendar:
-    """Listed expiries on the days of the price file."""
-
-    days: list[date]
-    known: set[date] = field(init=False)
-
-    def __post_init__(self) -> None:
-        self.known = set(self.days)
-
-    def expiry(self, month: int) -> date | None:
-        """C2; None for a third Friday before the file begins, where nothing can be known."""
-        day = third_friday(month)
-        if day > self.days[-1]:
-            return day  # after the last price: taken as it falls
-        if day < self.days[0]:
-            return None
-        while day not in self.known:
-            day -= timedelta(days=1)
-        return day
-
-    def roll_months(self, leg: Any) -> list[int]:
-        """Months in which the leg rolls, from before the file to well after it."""
-        step = MONTHS_IN_ROLL[leg.roll]
-        first, last = 12 * self.days[0].year, 12 * self.days[-1].year + 12 + 2 * step
-        return [m for m in range(first, last) if (m % 12 + 1 - leg.phase) % step == 0]
-
-    def roll_month_of(self, leg: Any, day: date) -> int | None:
-        """The roll month whose roll date is ``day``, if there is one."""
-        return next((m for m in self.roll_months(leg) if self.expiry(m) == day), None)
-
-    def terms(self, leg: Any, day: date) -> tuple[date, date, bool]:
-        """For an option opened on ``day``: its expiry, the day it is closed or settled, whether it is a stub (C3)."""
-        step = MONTHS_IN_ROLL[leg.roll]
-        month = self.roll_month_of(leg, day)
-        stub = month is None
-        if month is None:
-            # held to the leg's next roll; the option is the one the rule would be holding already
-            upcoming = next(m for m in self.roll_months(leg) if (e := self.expiry(m)) is not None and e > day)
-            month = upcoming - step
-        expiry, close = self.expiry(month + leg.term), self.expiry(month + step)
-        assert expiry is not None
-        assert close is not None
-        return expiry, close, stub
+    opens, signal = ([float(v) for v in frame[name]] if name in frame else None for name in ("open", "signal"))
+    return History(
+        days=days,
+        close=close,
+        dividend=cash,
+        rate=[math.log(1.0 + y) for y in effective],  # C5
+        dividend_yield=carry,
+        vols=vols,
+        open=opens,
+        signal=signal,
+    )
 
 
 # ---------------------------------------------------------------- prices (C5)
@@ -187,6 +141,7 @@ class Vols:
     volatility: Any
 
     def __post_init__(self) -> None:
+        self.seen: dict[int, list[tuple[float, float]]] = {}
         source = self.volatility.source
         self.realised = None
         if hasattr(source, "window") or (source is None and not self.history.vols):
@@ -199,7 +154,12 @@ class Vols:
         return not any(math.isnan(series[t]) for series in self.history.vols.values())
 
     def atm_variances(self, t: int) -> list[tuple[float, float]]:
-        """Pairs of tenor in years and annual at-the-money variance."""
+        """Pairs of tenor in years and annual at-the-money variance; worked out once a day."""
+        if t not in self.seen:
+            self.seen[t] = self.variances_of_the_day(t)
+        return self.seen[t]
+
+    def variances_of_the_day(self, t: int) -> list[tuple[float, float]]:
         if self.realised is not None:
             window, markup = self.realised
             close = self.history.close
@@ -228,3 +188,61 @@ class Vols:
                     share = (tau - years0) / (years1 - years0)
                     theta = (1.0 - share) * var0 * years0 + share * var1 * years1
         return math.sqrt(smile_total_variance(self.volatility.smile, theta, math.log(strike / forward)) / tau)
+
+
+# ---------------------------------------------------------------- options (C5, C8)
+
+
+@dataclass(frozen=True)
+class Contract:
+    """What an option pays, whoever holds it."""
+
+    right: str
+    expiry: date
+    strike: float
+
+
+@dataclass
+class Pricer:
+    """Values of options on a day, from the day's own data (C4, C5, C7, C8)."""
+
+    history: History
+    vols: Vols
+
+    def tau(self, t: int, expiry: date) -> float:
+        return (expiry - self.history.days[t]).days / 365.0
+
+    def forward(self, t: int, expiry: date) -> float:
+        h = self.history
+        return h.close[t] * math.exp((h.rate[t] - h.dividend_yield[t]) * self.tau(t, expiry))
+
+    def sigma(self, t: int, option: Contract) -> float:
+        return self.vols.sigma(t, self.tau(t, option.expiry), self.forward(t, option.expiry), option.strike)
+
+    def at_vol(self, t: int, option: Contract, sigma: float) -> float:
+        tau = self.tau(t, option.expiry)
+        value = black(option.right, self.forward(t, option.expiry), option.strike, sigma * math.sqrt(tau))
+        return math.exp(-self.history.rate[t] * tau) * value
+
+    def mid(self, t: int, option: Contract) -> float:
+        if option.expiry == self.history.days[t]:
+            return black(option.right, self.history.close[t], option.strike, 0.0)
+        return self.at_vol(t, option, self.sigma(t, option))
+
+    def delta(self, t: int, option: Contract) -> float:
+        """Spot delta at the strike's own volatility (C5)."""
+        tau, forward = self.tau(t, option.expiry), self.forward(t, option.expiry)
+        stdev = self.sigma(t, option) * math.sqrt(tau)
+        d1 = math.log(forward / option.strike) / stdev + 0.5 * stdev
+        sign = 1.0 if option.right == "call" else -1.0
+        return sign * math.exp(-self.history.dividend_yield[t] * tau) * normal(sign * d1)
+
+    def trading_cost(self, t: int, option: Contract, costs: Any) -> float:
+        """C8: per option, for bought and sold alike."""
+        mid, sigma = self.mid(t, option), self.sigma(t, option)
+        half_spread = max(
+            costs.half_spread_percent / 100.0 * mid,
+            self.at_vol(t, option, sigma + costs.half_spread_vol / 100.0) - mid,
+            costs.half_spread_min,
+        )
+        return half_spread + costs.commission / costs.multiplier

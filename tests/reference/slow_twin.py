@@ -1,9 +1,11 @@
 """The slow, readable twin of the engine: one day after another, one option at a time, in plain Python.
 
 It is written from the conventions alone and borrows nothing from ``backtest`` but the fields of the objects
-that say what was agreed (``Overlay``, ``Leg``, ``Costs``, ``Volatility``): calendar, prices, smile, vol
-conversion (``slow_prices.py``), costs, interest and accounts (here) are all worked out anew, so that the
-two can be wrong only independently. Clauses are cited as C1, C2, ...; read it from :func:`replay_slowly`.
+that say what was agreed (``Overlay``, ``Leg``, strike rules, ``Gate``, ``Early``, ``Costs``, ``Volatility``), so
+that the two can be wrong only independently. Everything else is worked out anew: dates in ``slow_calendar.py``,
+prices, smile and vol conversion in ``slow_prices.py``, ladders in ``slow_lines.py``, strikes in ``slow_strikes.py``,
+gates and early replacements in ``slow_rules.py``, money in ``slow_accounts.py``, the day itself here. Clauses are
+cited as C1, C2, ...; read it from :func:`replay_slowly`.
 """
 
 from __future__ import annotations
@@ -13,82 +15,17 @@ from dataclasses import dataclass, field
 from datetime import date
 from typing import Any
 
-from .slow_prices import MONTHS_IN_ROLL, Calendar, History, Vols, black, normal
-
-
-@dataclass
-class Option:
-    """An option of one leg, from its open to its close."""
-
-    label: str
-    leg: Any
-    expiry: date
-    closes: date
-    stub: bool
-    strike: float = math.nan
-    row: dict[str, Any] = field(default_factory=dict)
-
-    @property
-    def signed_ratio(self) -> float:
-        return self.leg.ratio if self.leg.position == "long" else -self.leg.ratio
-
-    @property
-    def price_to_open(self) -> float:
-        """Per unit: mid plus cost of a bought option, less mid plus cost of a sold one (C8)."""
-        return self.signed_ratio * self.row["premium"] + self.leg.ratio * self.row["cost"]
-
-
-@dataclass
-class Pricer:
-    """Values of options on a day, from the day's own data (C4, C5, C7, C8)."""
-
-    history: History
-    vols: Vols
-
-    def tau(self, t: int, option: Option) -> float:
-        return (option.expiry - self.history.days[t]).days / 365.0
-
-    def forward(self, t: int, option: Option) -> float:
-        h = self.history
-        return h.close[t] * math.exp((h.rate[t] - h.dividend_yield[t]) * self.tau(t, option))
-
-    def sigma(self, t: int, option: Option) -> float:
-        return self.vols.sigma(t, self.tau(t, option), self.forward(t, option), option.strike)
-
-    def at_vol(self, t: int, option: Option, sigma: float) -> float:
-        tau = self.tau(t, option)
-        value = black(option.leg.right, self.forward(t, option), option.strike, sigma * math.sqrt(tau))
-        return math.exp(-self.history.rate[t] * tau) * value
-
-    def mid(self, t: int, option: Option) -> float:
-        if option.expiry == self.history.days[t]:
-            return self.intrinsic(t, option)
-        return self.at_vol(t, option, self.sigma(t, option))
-
-    def intrinsic(self, t: int, option: Option) -> float:
-        return black(option.leg.right, self.history.close[t], option.strike, 0.0)
-
-    def delta(self, t: int, option: Option) -> float:
-        tau, forward = self.tau(t, option), self.forward(t, option)
-        stdev = self.sigma(t, option) * math.sqrt(tau)
-        d1 = math.log(forward / option.strike) / stdev + 0.5 * stdev
-        sign = 1.0 if option.leg.right == "call" else -1.0
-        return sign * math.exp(-self.history.dividend_yield[t] * tau) * normal(sign * d1)
-
-    def trading_cost(self, t: int, option: Option, costs: Any) -> float:
-        """C8: per option, for bought and sold alike."""
-        mid, sigma = self.mid(t, option), self.sigma(t, option)
-        half_spread = max(
-            costs.half_spread_percent / 100.0 * mid,
-            self.at_vol(t, option, sigma + costs.half_spread_vol / 100.0) - mid,
-            costs.half_spread_min,
-        )
-        return half_spread + costs.commission / costs.multiplier
+from .slow_accounts import Account, Option
+from .slow_calendar import Calendar, Cycle
+from .slow_lines import Line, anchor_of, lines_of, linked_line, named_legs
+from .slow_prices import History, Pricer, Vols
+from .slow_rules import early_reason, gate_is_on
+from .slow_strikes import Linked, Wanted, agreed_strike
 
 
 @dataclass
 class TwinReplay:
-    """Daily lists from inception to the end, and a row per option opened, in order of opening then leg."""
+    """Daily lists from inception to the end, and a row per option opened, in order of opening then line."""
 
     days: list[date] = field(default_factory=list)
     wealth: list[float] = field(default_factory=list)
@@ -100,30 +37,6 @@ class TwinReplay:
     rolls: list[dict[str, Any]] = field(default_factory=list)
 
 
-def labels(legs: Any) -> list[str]:
-    """``put`` and ``call``, numbered where a right occurs more than once."""
-    rights = [leg.right for leg in legs]
-    return [r if rights.count(r) == 1 else f"{r}_{rights[: i + 1].count(r)}" for i, r in enumerate(rights)]
-
-
-def anchor_of(overlay: Any) -> Any:
-    """The leg with the longest roll, the first listed among equals (C3); a leg of ratio zero takes no part."""
-    anchor = None
-    for leg in overlay.legs:
-        longer = anchor is None or MONTHS_IN_ROLL[leg.roll] > MONTHS_IN_ROLL[anchor.roll]
-        if leg.ratio > 0 and longer:
-            anchor = leg
-    return anchor
-
-
-def packages(wealth: float, per_unit: float, spot: float, shares: float, stock_bps: float) -> float:
-    """C9 resize: ``units * per_unit = wealth - stock cost``, the cost being that of the shares bought or sold."""
-    fee = stock_bps / 1e4 * spot
-    bought = (wealth + fee * shares) / (per_unit + fee)  # if shares are bought: fee * (units - shares)
-    sold = (wealth - fee * shares) / (per_unit - fee)  # if shares are sold: fee * (shares - units)
-    return bought if bought >= shares else sold
-
-
 def replay_slowly(
     history: History,
     overlay: Any,
@@ -133,134 +46,203 @@ def replay_slowly(
     inception: date | None = None,
 ) -> TwinReplay:
     """Replay one overlay day by day."""
-    calendar, vols = Calendar(history.days), Vols(history, volatility)
-    anchor_dates = {calendar.expiry(m) for m in calendar.roll_months(anchor_of(overlay))}
+    calendar, vols, lines = Calendar(history.days), Vols(history, volatility), lines_of(overlay)
+    cycles = {line.label: Cycle(calendar, line) for line in lines}
+    anchor_dates = cycles[anchor_of(lines).label].roll_dates
+    lag = overlay.decide_lag
 
-    # C3: inception is the first roll date of the anchor in the window on which price, vol and rate are known
+    # C3: inception is the first roll date of the anchor in the window on which price, vol and rate are known,
+    # and on the day before if that is the day on which strikes are decided
     def may_begin(t: int) -> bool:
         day = history.days[t]
         wanted = day == inception if inception else day in anchor_dates and (start is None or day >= start)
-        return wanted and vols.known(t) and not math.isnan(history.rate[t])
+        return wanted and t >= lag and all(vols.known(d) and not math.isnan(history.rate[d]) for d in {t, t - lag})
 
     days = range(len(history.days))
     first = next(t for t in days if may_begin(t))
     last = max(t for t in days if end is None or history.days[t] <= end)
 
-    holder = Holder(overlay, calendar, Pricer(history, vols), shares=1.0 / history.close[first])
+    account = Account(overlay, lines, shares=1.0 / history.close[first])
+    holder = Holder(overlay, lines, cycles, Pricer(history, vols), account)
     for t in range(first, last + 1):
+        today, spot = history.days[t], history.close[t]
         if t > first:
-            holder.earn(t)
-        holder.settle(t)
-        opening = holder.choose(t)
-        if t == first or history.days[t] in anchor_dates:
-            holder.resize(t, opening)
-        holder.buy_and_sell(opening)
+            # interest at the rate of the previous day (C11)
+            account.earn(history.rate[t - 1], (today - history.days[t - 1]).days / 365.0, history.dividend[t], spot)
+        leaving = holder.close_options(t)
+        opening = holder.choose(t, leaving, is_first=t == first)
+        if t == first or today in anchor_dates:
+            live = [(o.line, holder.pricer.mid(t, o.contract)) for o in holder.live.values()]
+            account.anchor_roll(spot, live, list(opening.values()))
+        holder.open_options(opening)
         holder.mark(t, is_first=t == first)
     holder.mark_open_rolls(last)
     return holder.out
 
 
+AS_SCHEDULED, BY_ITS_GATE = "as scheduled", "closed by its gate"
+
+
+@dataclass
+class Leaving:
+    """An option that a line held up to today's close, and whether it is replaced before its time."""
+
+    option: Option
+    early: bool
+
+
 @dataclass
 class Holder:
-    """Somebody who holds shares, cash and options, and does each day what was agreed."""
+    """Somebody who holds options beside an account, and does each day what was agreed."""
 
     overlay: Any
-    calendar: Calendar
+    lines: list[Line]
+    cycles: dict[str, Cycle]
     pricer: Pricer
-    shares: float
-    cash: float = 0.0
-    units: float = 0.0
+    account: Account
     live: dict[str, Option] = field(default_factory=dict)
     out: TwinReplay = field(default_factory=TwinReplay)
 
-    def earn(self, t: int) -> None:
-        """Interest at the rate of the previous day (C11); dividends into shares at the ex-date close (C9)."""
-        h = self.pricer.history
-        self.cash *= math.exp(h.rate[t - 1] * (h.days[t] - h.days[t - 1]).days / 365.0)
-        self.shares *= 1.0 + h.dividend[t] / h.close[t]
+    def decision_day(self, t: int) -> int:
+        """The day whose data decide what is traded at today's close (C4)."""
+        return t - self.overlay.decide_lag
 
-    def settle(self, t: int) -> None:
-        """Settle what expires today, buy or sell back what is replaced before its expiry (C3, C8)."""
-        today, costs = self.pricer.history.days[t], self.overlay.costs
-        for name, option in list(self.live.items()):
-            if option.closes != today:
+    def gate_is_on(self, line: Line, t: int) -> bool:
+        return line.gate is None or gate_is_on(line.gate.condition, self.pricer.history, self.decision_day(t))
+
+    # ------------------------------------------------------------ closing
+
+    def close_options(self, t: int) -> dict[str, Leaving]:
+        """Settle what expires today; sell or buy back what is replaced before, or what a gate closes (C3, C8)."""
+        leaving = {}
+        for label, option in list(self.live.items()):
+            reason = self.reason_to_close(option, t)
+            if reason is None:
                 continue
-            value = self.pricer.mid(t, option)
-            if option.expiry == today:
-                exit_cost = costs.settlement_fee / costs.multiplier if value > 0.0 else 0.0
-            else:
-                exit_cost = self.pricer.trading_cost(t, option, costs)
-            self.cash += self.units * (option.signed_ratio * value - option.leg.ratio * exit_cost)
-            row = option.row
-            row.update(closed=today, spot_close=self.pricer.history.close[t], settled=value, exit_cost=exit_cost)
-            row["profit"] = option.signed_ratio * (value - row["premium"])
-            row["profit"] -= option.leg.ratio * (row["cost"] + exit_cost)
-            del self.live[name]
+            self.close(t, option)
+            if reason != AS_SCHEDULED:
+                option.row["flag"].add(reason)
+            leaving[label] = Leaving(option, early=reason not in (AS_SCHEDULED, BY_ITS_GATE))
+            del self.live[label]
+        return leaving
 
-    def choose(self, t: int) -> dict[str, Option]:
-        """Strike and price an option for every leg that has none: all of them on inception (C3, C6)."""
-        today, spot = self.pricer.history.days[t], self.pricer.history.close[t]
-        opening: dict[str, Option] = {}
-        for name, leg in zip(labels(self.overlay.legs), self.overlay.legs):
-            if name in self.live:
-                continue
-            expiry, closes, stub = self.calendar.terms(leg, today)
-            option = Option(label=name, leg=leg, expiry=expiry, closes=closes, stub=stub)
-            forward = self.pricer.forward(t, option)
-            option.strike = (forward if "Forward" in type(leg.strike).__name__ else spot) * leg.strike.percent / 100.0
-            option.row = {"leg": name, "right": leg.right, "position": leg.position, "ratio": leg.ratio, "stub": stub}
-            option.row.update(opened=today, expiry=expiry, closed=None, spot_open=spot, forward=forward)
-            option.row.update(
-                strike=option.strike, vol=self.pricer.sigma(t, option), delta=self.pricer.delta(t, option)
-            )
-            option.row["premium"] = self.pricer.mid(t, option)
-            option.row["cost"] = self.pricer.trading_cost(t, option, self.overlay.costs)
-            opening[name] = option
-            self.out.rolls.append(option.row)
-        return opening
+    def reason_to_close(self, option: Option, t: int) -> str | None:
+        line, decided = option.line, self.decision_day(t)
+        if option.closes == self.pricer.history.days[t]:
+            return AS_SCHEDULED
+        if not self.gate_is_on(line, t):  # then it runs out as it is, without being replaced early, or is closed
+            return BY_ITS_GATE if line.gate.when_off == "close" else None
+        if option.opened < self.pricer.history.days[decided]:  # an early rule is looked at from the day after the open
+            rule, contract = line.leg.early, option.contract
+            return early_reason(rule, decided, self.pricer, contract, option.premium, option.spot_open)
+        return None
 
-    def resize(self, t: int, opening: dict[str, Option]) -> None:
-        """The anchor's roll: all wealth into packages, or as many options as there are shares (C9)."""
-        spot, stock_bps = self.pricer.history.close[t], self.overlay.costs.stock_bps
-        live_per_unit = math.fsum(o.signed_ratio * self.pricer.mid(t, o) for o in self.live.values())
-        if self.overlay.account == "resize":
-            wealth = self.shares * spot + self.cash + self.units * live_per_unit
-            per_unit = spot + live_per_unit + math.fsum(o.price_to_open for o in opening.values())
-            units = packages(wealth, per_unit, spot, self.shares, stock_bps)
-            traded = units - self.shares
-            self.cash -= traded * spot + stock_bps / 1e4 * spot * abs(traded)
-            self.shares = units
+    def close(self, t: int, option: Option) -> None:
+        h, costs, line, row = self.pricer.history, self.overlay.costs, option.line, option.row
+        today = h.days[t]
+        value = self.pricer.mid(t, option.contract)
+        if option.contract.expiry == today:
+            if line.leg.settlement == "open":
+                assert h.open is not None
+                to_pay = h.open[t] - option.contract.strike
+                value = max(to_pay if line.leg.right == "call" else -to_pay, 0.0)
+            exit_cost = costs.settlement_fee / costs.multiplier if value > 0.0 else 0.0
         else:
-            units = self.shares
-        self.cash -= (units - self.units) * live_per_unit  # legs still live change their count at mid, without cost
-        self.units = units
+            exit_cost = self.pricer.trading_cost(t, option.contract, costs)
+        self.account.receive(line, value, exit_cost)
+        row.update(closed=today, spot_close=h.close[t], settled=value, exit_cost=exit_cost)
+        row["profit"] = line.held * (line.sign * (value - option.premium) - option.cost - exit_cost)
 
-    def buy_and_sell(self, opening: dict[str, Option]) -> None:
-        """Open what was chosen: mid plus cost for a bought option, mid minus cost for a sold one (C8)."""
-        for name, option in opening.items():
-            self.cash -= self.units * option.price_to_open
-            option.row["units"] = self.units
-            self.live[name] = option
+    # ------------------------------------------------------------ opening
+
+    def choose(self, t: int, leaving: dict[str, Leaving], *, is_first: bool) -> dict[str, Option]:
+        """Strike and price an option for every line that opens one, after the lines that its strike needs (C3, C6)."""
+        waiting = [line for line in self.lines if self.opens(line, t, leaving, is_first=is_first)]
+        opening: dict[str, Option] = {}
+        while waiting:
+            line = next(x for x in waiting if not any(other in waiting for other in self.named_by(x)))
+            waiting.remove(line)
+            opening[line.label] = self.new_option(line, t, leaving.get(line.label), opening)
+        in_order = {line.label: opening[line.label] for line in self.lines if line.label in opening}
+        self.out.rolls += [option.row for option in in_order.values()]
+        return in_order
+
+    def named_by(self, line: Line) -> list[Line]:
+        return [linked_line(self.lines, line, number) for number in named_legs(line.leg.strike)]
+
+    def opens(self, line: Line, t: int, leaving: dict[str, Leaving], *, is_first: bool) -> bool:
+        """Whether a line opens an option today: on inception, on its roll, early, or as its gate comes on again."""
+        if line.label in self.live or not self.gate_is_on(line, t):
+            return False
+        replaced_early = line.label in leaving and leaving[line.label].early
+        rolls = self.pricer.history.days[t] in self.cycles[line.label].roll_dates
+        comes_on = line.gate is not None and line.gate.when_on == "at once"
+        return is_first or rolls or replaced_early or comes_on
+
+    def new_option(self, line: Line, t: int, leaving: Leaving | None, opening: dict[str, Option]) -> Option:
+        today, spot, decided = self.pricer.history.days[t], self.pricer.history.close[t], self.decision_day(t)
+        if leaving is not None and leaving.early:
+            expiry, closes, stub = leaving.option.contract.expiry, leaving.option.closes, False
+        else:
+            expiry, closes, stub = self.cycles[line.label].terms(today)
+
+        def linked(number: int) -> Linked | None:
+            other = linked_line(self.lines, line, number)
+            if other.label in self.live:
+                option = self.live[other.label]
+                return Linked(other, option.contract.strike, option.premium, option.cost)
+            if other.label not in opening:
+                return None
+            contract = opening[other.label].contract  # opened today as well: as it was worth when this was decided
+            cost = self.pricer.trading_cost(decided, contract, self.overlay.costs)
+            return Linked(other, contract.strike, self.pricer.mid(decided, contract), cost)
+
+        wanted = Wanted(decided, line, expiry, linked, self.pricer, self.overlay.costs)
+        agreed = agreed_strike(wanted, None if leaving is None else leaving.option.agreed)
+        contract = wanted.struck(agreed.strike)
+        premium = self.pricer.mid(t, contract)
+        cost = self.pricer.trading_cost(t, contract, self.overlay.costs)
+        flags = agreed.flags | ({"stub"} if stub else set())
+        if line.sign < 0.0 and premium < cost:
+            flags.add("proceeds below zero")
+        row = {"leg": line.label, "right": line.leg.right, "position": line.leg.position, "ratio": line.ratio}
+        row["flag"] = flags
+        row.update(opened=today, expiry=expiry, closed=None, spot_open=spot, forward=self.pricer.forward(t, expiry))
+        row.update(strike=agreed.strike, vol=self.pricer.sigma(t, contract), delta=self.pricer.delta(t, contract))
+        row.update(premium=premium, cost=cost)
+        row.update(spot_close=math.nan, settled=math.nan, exit_cost=math.nan, open_value=math.nan)
+        return Option(line, contract, today, closes, agreed, premium, cost, spot, row)
+
+    def open_options(self, opening: dict[str, Option]) -> None:
+        """Mid plus cost for a bought option, mid minus cost for a sold one (C8)."""
+        for label, option in opening.items():
+            self.account.pay_for(option)
+            option.row["units"] = self.account.units
+            self.live[label] = option
+
+    # ------------------------------------------------------------ marking
 
     def mark(self, t: int, *, is_first: bool) -> None:
         """Wealth after the day's trades (C9); 1 on the first day, before them; NaN once nothing is left."""
-        spot, live, out = self.pricer.history.close[t], self.live.values(), self.out
-        option_value = self.units * math.fsum(o.signed_ratio * self.pricer.mid(t, o) for o in live)
-        option_delta = self.units * math.fsum(o.signed_ratio * self.pricer.delta(t, o) for o in live)
-        wealth = 1.0 if is_first else self.shares * spot + self.cash + option_value
+        spot, out, account = self.pricer.history.close[t], self.out, self.account
+        options = [(o.line, o.contract) for o in self.live.values()]
+        option_value = account.value_of([(line, self.pricer.mid(t, contract)) for line, contract in options])
+        option_delta = account.value_of([(line, self.pricer.delta(t, contract)) for line, contract in options])
+        wealth = 1.0 if is_first else account.shares * spot + account.cash + option_value
         if not wealth > 0.0 or (out.wealth and math.isnan(out.wealth[-1])):
             wealth = math.nan
         out.days.append(self.pricer.history.days[t])
         out.wealth.append(wealth)
-        out.cash.append(self.cash)
-        out.shares.append(self.shares)
-        out.units.append(self.units)
+        out.cash.append(account.cash)
+        out.shares.append(account.shares)
+        out.units.append(account.units)
         out.option_value.append(option_value)
-        out.delta.append((self.shares + option_delta) * spot / wealth)
+        out.delta.append((account.shares + option_delta) * spot / wealth)
 
     def mark_open_rolls(self, t: int) -> None:
         """An option still live at the end is reported open at its mark, never as settled (C3)."""
         for option in self.live.values():
-            row = option.row
-            row["open_value"] = self.pricer.mid(t, option)
-            row["profit"] = option.signed_ratio * (row["open_value"] - row["premium"]) - option.leg.ratio * row["cost"]
+            line, row = option.line, option.row
+            row["open_value"] = self.pricer.mid(t, option.contract)
+            row["profit"] = line.held * (line.sign * (row["open_value"] - option.premium) - option.cost)
+            row["flag"].add("open")

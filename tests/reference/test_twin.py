@@ -7,132 +7,71 @@ below. One case is replayed once by each and then compared from several sides.
 from __future__ import annotations
 
 import math
-from dataclasses import dataclass
 from datetime import date
 from itertools import pairwise
 from pathlib import Path
 
 import numpy as np
-import pandas as pd
 import pytest
 from scipy.integrate import quad
 
-from backtest import INDEX, MILD, Costs, Market, Overlay, PercentOfSpot, Replay, SSVISmile, Volatility, replay
+from backtest import INDEX, MILD, Costs, Overlay, PercentOfSpot, SSVISmile, Volatility
 
-from .slow_prices import Calendar, black, fair_total_variance, history_from_frame, smile_total_variance, third_friday
-from .slow_twin import TwinReplay, replay_slowly
+from . import twin_comparisons as twins
+from .slow_calendar import Calendar, third_friday
+from .slow_prices import black, fair_total_variance, smile_total_variance
 from .twin_cases import CASES, Case, call, market_frame
-
-# Wealth grows from 1 through a few hundred rounded steps; 1e-12 is some thousands of units in the last place.
-RTOL = 1e-12
-# A premium is a difference of two numbers of the size of spot, and a far option is worth a tiny part of it:
-# what is claimed of prices is 1e-12 of spot, not of the premium.
-ATOL_OF_SPOT = 1e-12
-# Cash is what is left of sums of the size of wealth.
-ATOL_CASH = 1e-12
-
-
-@dataclass(frozen=True)
-class Pair:
-    """One case as replayed by both."""
-
-    case: Case
-    engine: Replay
-    twin: TwinReplay
-
-
-def demo_folder(tmp_path_factory: pytest.TempPathFactory) -> Path:
-    return tmp_path_factory.getbasetemp() / "twin_demo_market"
+from .twin_comparisons import Pair, demo_folder
 
 
 @pytest.fixture(scope="module", params=CASES, ids=lambda case: case.name)
 def pair(request: pytest.FixtureRequest, tmp_path_factory: pytest.TempPathFactory) -> Pair:
-    case: Case = request.param
-    frame = market_frame(case.market, demo_folder(tmp_path_factory))
-    constants = {"rate": case.rate, "dividend_yield": case.dividend_yield}
-    window = {"start": case.start, "end": case.end, "inception": case.inception}
-    engine = replay(Market.from_frame(frame, **constants), case.overlay, volatility=case.volatility, **window)
-    twin = replay_slowly(history_from_frame(frame, **constants), case.overlay, case.volatility, **window)
-    return Pair(case, engine, twin)
+    return twins.replay_both(request.param, market_frame(request.param.market, demo_folder(tmp_path_factory)))
 
 
 # ---------------------------------------------------------------- day by day
 
 
 def test_days(pair: Pair) -> None:
-    assert pair.engine.dates.astype(object).tolist() == pair.twin.days
-    assert len(pair.twin.days) > 500
+    twins.check_days(pair)
 
 
 def test_wealth_every_day(pair: Pair) -> None:
-    assert pair.engine.wealth[0] == pair.twin.wealth[0] == 1.0
-    assert np.min(pair.twin.wealth) > 0.05
-    np.testing.assert_allclose(pair.engine.wealth, pair.twin.wealth, rtol=RTOL, atol=0.0)
+    twins.check_wealth(pair)
 
 
-@pytest.mark.parametrize("name", ["shares", "units"])
-def test_holdings_every_day(pair: Pair, name: str) -> None:
-    np.testing.assert_allclose(getattr(pair.engine, name), getattr(pair.twin, name), rtol=RTOL, atol=0.0)
-
-
-@pytest.mark.parametrize("name", ["cash", "option_value", "delta"])
-def test_cash_options_and_delta_every_day(pair: Pair, name: str) -> None:
-    np.testing.assert_allclose(getattr(pair.engine, name), getattr(pair.twin, name), rtol=RTOL, atol=ATOL_CASH)
+@pytest.mark.parametrize("name", twins.HOLDINGS + twins.SMALL_DIFFERENCES)
+def test_holdings_cash_options_and_delta_every_day(pair: Pair, name: str) -> None:
+    twins.check_daily(pair, name)
 
 
 def test_daily_frame(pair: Pair) -> None:
-    frame = pair.engine.to_frame()
-    assert [stamp.date() for stamp in frame.index] == pair.twin.days
-    np.testing.assert_allclose(frame["overlay"], pair.twin.wealth, rtol=RTOL, atol=0.0)
-    np.testing.assert_allclose(frame["delta"], pair.twin.delta, rtol=RTOL, atol=ATOL_CASH)
+    twins.check_daily_frame(pair)
 
 
 # ---------------------------------------------------------------- roll by roll
 
 
-@dataclass(frozen=True)
-class Rolls:
-    """Both lists of rolls as frames of the same rows."""
-
-    engine: pd.DataFrame
-    twin: pd.DataFrame
+def test_roll_legs_and_dates(pair: Pair) -> None:
+    twins.check_legs_and_dates(pair)
 
 
-@pytest.fixture(scope="module")
-def rolls(pair: Pair) -> Rolls:
-    twin = pd.DataFrame(pair.twin.rolls)
-    for name in ("opened", "expiry", "closed"):
-        twin[name] = pd.to_datetime(twin[name])
-    return Rolls(pair.engine.rolls_frame(), twin)
+def test_roll_flags(pair: Pair) -> None:
+    twins.check_flags(pair)
 
 
-def test_roll_legs_and_dates(rolls: Rolls) -> None:
-    assert len(rolls.twin) > 5
-    for name in ("leg", "right", "position", "ratio"):
-        assert rolls.engine[name].tolist() == rolls.twin[name].tolist()
-    for name in ("opened", "expiry", "closed"):
-        theirs, ours = (frame[name].dt.date.astype(object).tolist() for frame in (rolls.engine, rolls.twin))
-        assert [str(day) for day in theirs] == [str(day) for day in ours]
-    assert rolls.engine["flag"].str.contains("stub").tolist() == rolls.twin["stub"].tolist()
-    assert rolls.engine["flag"].str.contains("open").tolist() == rolls.twin["closed"].isna().tolist()
+@pytest.mark.parametrize("name", twins.ROLL_QUANTITIES)
+def test_roll_quantities(pair: Pair, name: str) -> None:
+    twins.check_roll_quantity(pair, name)
 
 
-@pytest.mark.parametrize("name", ["spot_open", "forward", "strike", "vol", "units", "spot_close"])
-def test_roll_quantities(rolls: Rolls, name: str) -> None:
-    np.testing.assert_allclose(rolls.engine[name], rolls.twin[name], rtol=RTOL, atol=0.0)
+@pytest.mark.parametrize("name", twins.ROLL_AMOUNTS)
+def test_roll_amounts(pair: Pair, name: str) -> None:
+    twins.check_roll_amount(pair, name)
 
 
-@pytest.mark.parametrize("name", ["premium", "cost", "settled", "exit_cost", "open_value", "profit"])
-def test_roll_amounts(rolls: Rolls, name: str) -> None:
-    floor = ATOL_OF_SPOT * rolls.twin["spot_open"].to_numpy()
-    theirs, ours = rolls.engine[name].to_numpy(), rolls.twin[name].to_numpy()
-    assert np.isnan(theirs).tolist() == np.isnan(ours).tolist()
-    excess = np.abs(theirs - ours) - floor - RTOL * np.abs(ours)
-    assert np.nan_to_num(excess, nan=-1.0).max() <= 0.0
-
-
-def test_roll_delta(rolls: Rolls) -> None:
-    np.testing.assert_allclose(rolls.engine["delta"], rolls.twin["delta"], rtol=0.0, atol=RTOL)
+def test_roll_delta(pair: Pair) -> None:
+    twins.check_roll_delta(pair)
 
 
 # ---------------------------------------------------------------- ruin
@@ -146,14 +85,19 @@ def test_ruin_on_the_same_day(account: str, tmp_path_factory: pytest.TempPathFac
         account=account,
         costs=Costs(half_spread_vol=0.25),
     )
-    frame, volatility = market_frame("demo", demo_folder(tmp_path_factory)), Volatility(smile=INDEX)
-    window = {"start": date(2003, 1, 1), "end": date(2006, 12, 31)}
-    engine = replay(Market.from_frame(frame), overlay, volatility=volatility, **window)
-    twin = replay_slowly(history_from_frame(frame), overlay, volatility, **window)
-    lost = np.isnan(twin.wealth)
+    case = Case(
+        name="ruin",
+        market="demo",
+        overlay=overlay,
+        volatility=Volatility(smile=INDEX),
+        start=date(2003, 1, 1),
+        end=date(2006, 12, 31),
+    )
+    pair = twins.replay_both(case, market_frame("demo", demo_folder(tmp_path_factory)))
+    lost = np.isnan(pair.twin.wealth)
     assert 0 < lost.sum() < len(lost)
     # near ruin wealth is a small difference of large positions, hence the floor
-    np.testing.assert_allclose(engine.wealth, twin.wealth, rtol=RTOL, atol=RTOL, equal_nan=True)
+    np.testing.assert_allclose(pair.engine.wealth, pair.twin.wealth, rtol=twins.RTOL, atol=twins.RTOL, equal_nan=True)
 
 
 # ---------------------------------------------------------------- what the markets are chosen for

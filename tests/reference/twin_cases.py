@@ -38,7 +38,7 @@ def demo_frame(folder: Path) -> pd.DataFrame:
     vol = pd.read_csv(files.vol, parse_dates=["date"], index_col="date")["vol"] / 100.0
     rate = pd.read_csv(files.rates, parse_dates=["date"], index_col="date")["rate"].dropna() / 100.0
     dividend = pd.read_csv(files.dividends, parse_dates=["date"], index_col="date")["dividend"]
-    frame = prices[["close"]].copy()
+    frame = prices[["open", "close"]].copy()
     frame["vol"] = vol.reindex(frame.index, method="ffill")
     frame["rate"] = rate.reindex(frame.index, method="ffill")
     frame["dividend"] = dividend.reindex(frame.index).fillna(0.0)
@@ -55,13 +55,13 @@ def three_tenors(frame: pd.DataFrame) -> pd.DataFrame:
 
 @functools.cache
 def sp500_frame() -> pd.DataFrame:
-    """Closes of 1999 to 2018, with the 30-day index where the package has it (2014 on)."""
+    """Opens and closes of 1999 to 2018, with the 30-day index where the package has it (2014 on)."""
     with warnings.catch_warnings():
         warnings.simplefilter("ignore")  # the package's own reading of its files is not under test
         from arch.data import sp500, vix
 
         prices, index_vol = sp500.load(), vix.load()["vix"].dropna() / 100.0
-    frame = pd.DataFrame({"close": prices["Close"]})
+    frame = pd.DataFrame({"open": prices["Open"], "close": prices["Close"]})
     frame["vol"] = index_vol.reindex(frame.index, method="ffill")
     return frame
 
@@ -77,7 +77,7 @@ def market_frame(name: str, folder: Path) -> pd.DataFrame:
             frame.loc[:"2001-03-16", "vol"] = float("nan")  # to the first roll of that March, included
             frame.loc[:"2001-07-02", "rate"] = float("nan")
         return frame
-    frame = sp500_frame().dropna() if name.startswith("sp500 index vol") else sp500_frame()[["close"]]
+    frame = sp500_frame().dropna() if name.startswith("sp500 index vol") else sp500_frame()[["open", "close"]]
     if " from " in name:
         return frame.loc[name.split(" from ")[1] :]
     if " to " in name:

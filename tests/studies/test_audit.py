@@ -292,7 +292,7 @@ HOSTILE: dict[str, tuple[tuple[str, ...], Any, str]] = {
     "no source": (("source",), None, "does not say where its data are: replay again, and audit that"),
     "settings": (("settings",), [1], "has no table settings"),
     "overlay": (("settings", "overlay"), 5, "has no table settings.overlay"),
-    "unknown leg": (("settings", "overlay", "leg"), [7], "cannot be used: settings.overlay.leg.1: is 7; it takes a table with keys: position, right, roll, term, phase, shift_days, ratio, strike"),  # noqa: E501
+    "unknown leg": (("settings", "overlay", "leg"), [7], "cannot be used: settings.overlay.leg.1: is 7; it takes a table with keys: position, right, strike, roll, roll_day, every, term, term_days, phase, shift_days, close_before, settlement, ratio, ladder, stagger, early, gate, reference"),  # noqa: E501
     "rate": (("settings", "rate"), 1e300, "asks for what cannot be replayed: --rate is 1e+300; it takes a number from -99 to 100 percent a year"),  # noqa: E501
     "resamples": (("settings", "resamples"), 10**9, "asks for what cannot be replayed: --resamples is 1000000000; it takes a whole number from 100 to 1000000"),  # noqa: E501
     "seed": (("seed",), "x", "asks for what cannot be replayed: --seed is 'x'; it takes a whole number from 0 to 4294967295"),  # noqa: E501

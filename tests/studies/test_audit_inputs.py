@@ -5,6 +5,7 @@ Rung: behaviour (folders made here and changed by hand; sentences and hashes are
 
 from __future__ import annotations
 
+import os
 from dataclasses import replace
 from pathlib import Path
 
@@ -13,9 +14,10 @@ import pandas as pd
 import pytest
 
 from data_loaders import DataProblems, History, load_history
-from data_loaders.store import write_history
+from data_loaders.store import prune_versions, write_history
 from studies.answer_folder import make_answer_folder
 from studies.audit import DIFFERS, OTHER_DATA, SAME, audit_folder
+from studies.audited import KeptVersion
 from studies.errors import ResultsError
 from studies.results import sha256_of
 from tests.studies.audit_homes import BAND, copy_home, inputs_of, make_home, two_years
@@ -52,15 +54,55 @@ def test_a_store_that_has_moved(home: Path) -> None:
     assert audit_folder(Path("results"), store=Path("elsewhere")).verdict == SAME
 
 
-def test_a_stored_history_that_has_changed(home: Path, history: History) -> None:
-    file = home / "histories" / "demo.parquet"
-    then = sha256_of(file)
+def load_anew(home: Path, history: History) -> None:
+    """Store the history with one other close, from another price file."""
     frame = history.frame.copy()
     frame["close"] = np.where(np.arange(len(frame)) == 300, 1.01, 1.0) * frame["close"]
     sources = (replace(history.sources[0], sha256="ab" * 32), *history.sources[1:])
     write_history(replace(history, frame=frame, sources=sources), home / "histories", "demo")
+
+
+def test_a_stored_history_that_has_been_loaded_anew(home: Path, history: History) -> None:
+    file = home / "histories" / "demo.parquet"
+    then = sha256_of(file)
+    os.utime(file, (1_600_000_000, 1_600_000_000))  # 2020-09-13 12:26:40 UTC
+    load_anew(home, history)
     found = audit_folder(Path("results"))
-    assert (found.verdict, found.compared, found.differences) == (OTHER_DATA, (), ())
+    assert (found.verdict, found.changed, found.differences) == (SAME, (), ())
+    (kept,) = found.kept
+    assert kept == KeptVersion(
+        history="demo", file=f"histories/.versions/demo/000001-20200913T122640Z-{then}.parquet", sha256=then,
+        loaded="2020-09-13 12:26", now=sha256_of(file),
+    )  # fmt: skip
+    # leave to go on with what has changed is not needed, and changes nothing
+    assert audit_folder(Path("results"), anyway=True) == found
+    # of two versions of then, the one whose content is right
+    kept_file = home / kept.file
+    kept_file.rename(home / "aside")
+    kept_file.write_bytes(b"another file of that name")
+    kept_file.with_name(f"000007-20210101T000000Z-{then}.parquet").write_bytes((home / "aside").read_bytes())
+    (kept,) = audit_folder(Path("results")).kept
+    assert kept.loaded == "2021-01-01 00:00"
+    # back to what it was: no version is needed
+    write_history(history, home / "histories", "demo")
+    assert audit_folder(Path("results")).kept == ()
+    # and without the history itself
+    file.unlink()
+    found = audit_folder(Path("results"))
+    assert (found.verdict, [one.now for one in found.kept]) == (SAME, [None])
+
+
+def test_a_stored_history_of_which_the_version_is_not_kept(home: Path, history: History) -> None:
+    file = home / "histories" / "demo.parquet"
+    then = sha256_of(file)
+    load_anew(home, history)
+    (kept,) = audit_folder(Path("results")).kept
+    # a version that is not what it is called is none
+    (home / kept.file).write_bytes(b"PAR1 half a file")
+    assert audit_folder(Path("results")).verdict == OTHER_DATA
+    prune_versions(home / "histories", ["demo"], 0)
+    found = audit_folder(Path("results"))
+    assert (found.verdict, found.compared, found.differences, found.kept) == (OTHER_DATA, (), (), ())
     assert [(one.file, one.then, one.now) for one in found.changed] == [
         ("histories/demo.parquet", then, sha256_of(file)),
         ("prices.csv", history.sources[0].sha256, "ab" * 32),
@@ -68,7 +110,7 @@ def test_a_stored_history_that_has_changed(home: Path, history: History) -> None
     found = audit_folder(Path("results"), anyway=True)
     assert (found.verdict, len(found.changed)) == (DIFFERS, 2)
     assert {one.file for one in found.differences} == {"daily.parquet", "summary.json"}
-    day = frame.index[300].date()
+    day = history.frame.index[300].date()
     assert str(found.differences[0]).startswith(f"daily.parquet: 'overlay' on {day} is ")
 
 

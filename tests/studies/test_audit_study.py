@@ -15,7 +15,7 @@ import pandas as pd
 import pytest
 
 from data_loaders import History
-from data_loaders.store import write_history
+from data_loaders.store import prune_versions, write_history
 from studies.audit import DIFFERS, OTHER_DATA, SAME, audit_folder
 from studies.errors import ResultsError
 from studies.results import sha256_of, write_parquet
@@ -211,10 +211,29 @@ def test_many_overlays_are_not_run_for_a_small_table(home: Path, unrun: None) ->
     assert sentences(found)[-1] == "periods.parquet: has 12 rows, and the study in manifest.json has 200,000"
 
 
+def load_early_anew(home: Path, demo_history: History) -> None:
+    write_history(replace(demo_history, frame=demo_history.frame.loc["2011":"2014"]), home / "histories", "early")
+
+
+@pytest.mark.parametrize("sample", [None, ROWS - 1])
+def test_a_history_that_has_been_loaded_anew(home: Path, demo_history: History, sample: int | None) -> None:
+    file = home / "histories" / "early.parquet"
+    then = sha256_of(file)
+    load_early_anew(home, demo_history)
+    before = {path: path.read_bytes() for path in home.rglob("*") if path.is_file()}
+    found = audit_folder(Path("results"), sample=sample)
+    assert (found.verdict, found.changed, found.differences) == (SAME, (), ())
+    assert [(one.history, one.sha256, one.now) for one in found.kept] == [("early", then, sha256_of(file))]
+    assert {path: path.read_bytes() for path in home.rglob("*") if path.is_file()} == before
+    file.unlink()
+    assert [(one.history, one.now) for one in audit_folder(Path("results"), sample=1).kept] == [("early", None)]
+
+
 def test_a_history_that_has_changed_or_is_gone(home: Path, demo_history: History) -> None:
     file = home / "histories" / "early.parquet"
     then = sha256_of(file)
-    write_history(replace(demo_history, frame=demo_history.frame.loc["2011":"2014"]), home / "histories", "early")
+    load_early_anew(home, demo_history)
+    prune_versions(home / "histories", ["early"], 0)
     found = audit_folder(Path("results"))
     assert (found.verdict, found.compared) == (OTHER_DATA, ())
     assert [(one.file, one.then, one.now) for one in found.changed] == [

@@ -6,10 +6,14 @@ Rung: behaviour.
 from __future__ import annotations
 
 import errno
+import json
 from collections.abc import Callable
 from pathlib import Path
 
 import pytest
+
+from studies.results import json_text
+from studies.working_folder import PLAN
 
 from .small_studies import store_history
 from .study_command import STUDY, Here, Home, kept
@@ -58,6 +62,18 @@ def test_a_history_that_has_changed(unfinished: Here) -> None:
     ran = unfinished("--resume")
     assert (ran.code, ran.out) == (5, "")
     assert "differs from this one in history 'one', which has been stored anew: put that back" in ran.err
+    assert kept(unfinished.home) == 1
+
+
+def test_batches_of_a_program_whose_overlays_began_on_days_of_their_own(unfinished: Here) -> None:
+    """Its plan says nothing of the days; with all else as it is now its rows stand on other days than these would."""
+    file = unfinished.home / ".out.unfinished" / PLAN
+    plan = json.loads(file.read_text())
+    assert plan.pop("days") == "in common"
+    file.write_text(json_text(plan))
+    ran = unfinished("--resume")
+    assert (ran.code, ran.out) == (5, "")
+    assert "differs from this one in the days: put that back" in ran.err
     assert kept(unfinished.home) == 1
 
 

@@ -21,7 +21,7 @@ from backtest.errors import PlanError
 from studies.batches import FIGURES, SPAN
 from studies.errors import StudyFileError
 from studies.expansion import Expansion
-from studies.runner import market_of, plan_study
+from studies.runner import market_of
 from studies.study import Study, parse_study
 from studies.study_answer import (
     GroupAnswer,
@@ -46,20 +46,22 @@ def store(tmp_path_factory: pytest.TempPathFactory) -> Path:
     return folder
 
 
-ROLLS = axis("roll", "leg.1.roll", '["quarter", "half"]')
+#: Puts from January, April, ... on are under way on the first day, a day in March; the first overlay is one of them.
+PHASES = axis("phase", "leg.1.phase", "[1, 0]")
 
 
 @pytest.fixture(scope="module", params=["same-beta mix", "hold"], ids=["mix", "hold"])
 def found(request: pytest.FixtureRequest, store: Path) -> StudyAnswer:
-    head = f'comparison = "{request.param}"\nresamples = 40\nown = {{ put = 97, call = 102, roll = "half" }}'
-    return run_study(grid(4, 3, head=head, tail=ROLLS), store=store)
+    head = f'comparison = "{request.param}"\nresamples = 40\nown = {{ put = 97, call = 102, phase = 1 }}'
+    return run_study(grid(4, 3, head=head, tail=PHASES), store=store)
 
 
 def excess_of(found: StudyAnswer, number: int) -> tuple[Array, Array, Any]:
-    """Daily excess returns of an overlay and of the hold from its own inception on, and the days they end on."""
+    """Daily excess returns of an overlay and of the hold on the common days, and the days they end on."""
     group = found.plan.groups[0]
     (point,) = Expansion(found.plan.study).many(group.points[number : number + 1])
-    one = replay(market_of(found.plan, group), point.overlay, volatility=point.volatility)
+    one = replay(market_of(found.plan, group), point.overlay, volatility=point.volatility, inception=group.span.first)
+    assert len(one.dates) == group.span.days + 1
     own = [one.wealth[t] / one.wealth[t - 1] - 1 - one.rate_return[t] for t in range(1, len(one.dates))]
     hold = [one.hold[t] / one.hold[t - 1] - 1 - one.rate_return[t] for t in range(1, len(one.dates))]
     return np.array(own), np.array(hold), one.dates[1:]
@@ -74,9 +76,7 @@ def gains(found: StudyAnswer, begin: int, end: int) -> list[float]:
     made = []
     for number in range(found.plan.overlays):
         own, hold, _ = excess_of(found, number)
-        offset = len(own) - found.plan.groups[0].span.days
-        days = slice(offset + begin, offset + end)
-        made.append(plain_sharpe(own[days]) - plain_sharpe(hold[days]))
+        made.append(plain_sharpe(own[begin:end]) - plain_sharpe(hold[begin:end]))
     return made
 
 
@@ -84,7 +84,6 @@ def test_the_walk_forward_chooses_before_and_judges_after(found: StudyAnswer) ->
     (group,) = found.groups
     days = found.plan.groups[0].span.days
     _, _, dates = excess_of(found, 0)
-    dates = dates[-days:]
     cuts = [days * part // 8 for part in range(9)]
     assert len(group.steps) == 7
     for step, begin, end in zip(group.steps, cuts[1:-1], cuts[2:], strict=True):
@@ -105,7 +104,7 @@ def test_the_halves_and_the_decades(found: StudyAnswer) -> None:
     days = found.plan.groups[0].span.days
     middle = days * 4 // 8
     _, _, dates = excess_of(found, 0)
-    turn = int(np.count_nonzero(dates[-days:] < np.datetime64("2010-01-01")))
+    turn = int(np.count_nonzero(dates < np.datetime64("2010-01-01")))
     assert 0 < turn < days
     for stability, cut in ((group.halves, middle), (group.decades[0], turn)):
         first, second = gains(found, 0, cut), gains(found, cut, days)
@@ -122,12 +121,22 @@ def test_the_best_and_the_reader_s_own(found: StudyAnswer) -> None:
     assert group.best == ratios.index(max(ratios))
     assert (group.tried, group.ruined, group.rows) == (24, 0, slice(0, 24))
     assert group.own is not None
-    assert [found.overlays[name].iloc[group.own] for name in ("put", "call", "roll")] == [97, 102, "half"]
+    assert [found.overlays[name].iloc[group.own] for name in ("put", "call", "phase")] == [97, 102, 1]
     assert (group.history, group.last) == ("one", excess_of(found, 0)[2][-1])
-    # the anchor, the leg that rolls least often, opens in March or in June
-    assert str(group.first)[:7] == "2008-06"
     assert group.check is not None
     assert (group.check.tried, group.check.resamples) == (24, 40)
+
+
+def test_the_days_are_those_from_the_latest_of_all_first_roll_days_on(found: StudyAnswer) -> None:
+    (group,) = found.groups
+    market = market_of(found.plan, found.plan.groups[0])
+    every = Expansion(found.plan.study).many(found.plan.groups[0].points)
+    own = {str(replay(market, one.overlay, volatility=one.volatility).dates[0]) for one in every}
+    # by hand: the third Friday of January, and of March the day before Good Friday
+    assert own == {"2008-01-18", "2008-03-20"}
+    assert str(group.first) == "2008-03-20"
+    assert {str(day.date()) for day in found.overlays["inception"]} == {"2008-03-20"}
+    assert {str(day.date()) for day in found.overlays["end"]} == {str(market.dates[-1])} == {str(group.last)}
 
 
 def test_the_deflated_sharpe_ratio_is_that_of_the_paper(found: StudyAnswer) -> None:
@@ -155,22 +164,22 @@ def test_the_deflated_sharpe_ratio_is_that_of_the_paper(found: StudyAnswer) -> N
 
 def test_tables_have_a_row_an_overlay(found: StudyAnswer) -> None:
     blocks = len(found.plan.groups[0].span.edges) - 1
-    assert found.overlays.columns.tolist() == ["number", "history", "put", "call", "roll", *SPAN, *FIGURES]
+    assert found.overlays.columns.tolist() == ["number", "history", "put", "call", "phase", *SPAN, *FIGURES]
     assert found.periods.columns.tolist() == [
         "number",
         *(f"{name}_{block}" for block in range(1, blocks + 1) for name in ("growth", "total", "square")),
     ]
     assert len(found.overlays) == len(found.periods) == 24
-    assert overlay_names(found)[:2] == ["put 96, call 101, roll quarter", "put 96, call 101, roll half"]
+    assert overlay_names(found)[:2] == ["put 96, call 101, phase 1", "put 96, call 101, phase 0"]
 
 
 @pytest.mark.parametrize("name", ["sharpe", "history", "number", "inception", "information_ratio"])
-def test_an_axis_with_the_name_of_a_column_is_refused_before_anything_is_done(store: Path, name: str) -> None:
-    study = parse_study(grid_text(2, 2).replace("name = 'call'", f"name = '{name}'"))
-    with pytest.raises(
-        StudyFileError, match=rf"^study, axis.2.name: {name} is the name of a column of the results; gi"
-    ):
-        plan_study(study, store=store)
+def test_an_axis_with_the_name_of_a_column_is_refused_before_anything_is_done(name: str) -> None:
+    text = grid_text(2, 2).replace("name = 'call'", f"name = '{name}'")
+    with pytest.raises(StudyFileError) as refused:
+        parse_study(text)
+    problem = f"{name} is the name of a column of the results; give the axis another"
+    assert str(refused.value) == f"study, line 21, axis.2.name: {problem}"
 
 
 # ---------------------------------------------------------------- studies with little to say
@@ -325,5 +334,6 @@ def test_the_settings_of_a_group_stand_beside_its_history(store: Path) -> None:
     for group, start in zip(found.groups, ("2008-01-01", "2009-06-01"), strict=True):
         mine: pd.DataFrame = found.overlays.iloc[group.rows]
         assert set(mine["from"]) == {start}
+        assert set(mine["inception"]) == {pd.Timestamp(group.first)}
         assert mine["information_ratio"].idxmax() == group.best
         assert group.check is None

@@ -160,7 +160,7 @@ def twin(study: Study, at: tuple[int, ...]) -> Point:
                 place = place[step]
             place[last] = copy.deepcopy(value)
     window = table.pop("window")
-    made = overlay_from_table({**table, "name": ""})
+    made = overlay_from_table({**table, "name": "", "crossed": True})
     return Point(
         overlay=made.overlay, volatility=made.volatility, start=window.get("from"), end=window.get("to")
     )  # fmt: skip
@@ -284,5 +284,11 @@ def test_fields_and_which_of_them_overlap() -> None:
     together = {pair for pair in itertools.combinations(known, 2) if overlap(known[pair[0]], known[pair[1]])}
     assert ("leg.1.strike", "leg.1.strike.percent_of_spot") in together
     assert {("volatility.smile", "volatility.smile.rho"), ("window", "window.to")} < together
-    # strike with 2 rules on each of 2 legs, smile with 3 parameters, window with 2 ends
-    assert len(together) == 2 * 2 + 3 + 2
+    assert {
+        ("gate", "gate.window"),
+        ("leg.2.early", "leg.2.early.days_left"),
+        ("leg.1.gate", "leg.1.gate.signal"),
+    } < together
+    # strike with 14 keys, early with 4 and gate with 8 on each of 2 legs, the gate of all with 8, smile with 3
+    # parameters, window with 2 ends
+    assert len(together) == 2 * (14 + 4 + 8) + 8 + 3 + 2

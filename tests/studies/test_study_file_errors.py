@@ -136,7 +136,7 @@ WRONG = [
     wrong("name padded", swap('name = "both rolls"', 'name = "rolls "'), 27, "axis.3.name", "is 'rolls '; it takes a few words in quotes"),
     wrong("name long", swap('name = "both rolls"', f'name = "{"x" * 61}"'), 27, "axis.3.name", "has 61 characters; the limit is 60"),
     # fields
-    of_axis("unknown field", "leg.1.strikes", "[1]", "there is no field leg.1.strikes; did you mean leg.1.strike? Known here: account, leg.1 to leg.2 (.position, .right, .roll,", key="axis.4.field"),
+    of_axis("unknown field", "leg.1.strikes", "[1]", "there is no field leg.1.strikes; did you mean leg.1.strike? Known here: account, decide_lag, portfolio, gate (.signal, .vol_above_percentile, ", "leg.1 to leg.2 (.position, .right, .strike, .roll,", key="axis.4.field"),
     of_axis("leg beyond", "leg.3.ratio", "[1]", "there is no field leg.3.ratio; did you mean leg.2.ratio?", "leg.1 to leg.2", key="axis.4.field"),
     of_axis("leg nought", "leg.0.ratio", "[1]", "there is no field leg.0.ratio", key="axis.4.field"),
     of_axis("name of the overlay", "name", '["a"]', "there is no field name", key="axis.4.field"),
@@ -159,7 +159,7 @@ WRONG = [
     wrong("labels no list", swap(ROLLS, ROLLS + '\nlabels = "m"'), 30, "axis.3.labels", "is 'm'; it takes a list of texts, one for each value"),
     wrong("label a number", swap(ROLLS, ROLLS + '\nlabels = ["m", 3]'), 30, "axis.3.labels.2", "is 3; it takes a text in quotes"),
     wrong("label empty", swap(ROLLS, ROLLS + '\nlabels = ["m", ""]'), 30, "axis.3.labels", "holds an empty label"),
-    wrong("labels alike", swap("[101, 105, 110]", '[101, "101"]'), None, "axis.2.labels", 'has "101" twice; give labels that tell the values apart'),
+    wrong("labels alike", swap("[101, 105, 110]", '[101, "101"]'), 21, "axis.2.labels", 'has "101" twice; give labels that tell the values apart'),
     # ranges
     wrong("no step", swap(LADDER, "{ from = 80, to = 99 }"), 19, "axis.1.values", "has no step; a range needs from, to and step"),
     wrong("range key", swap(LADDER, "{ from = 80, to = 99, stpe = 1 }"), 19, "axis.1.values.stpe", "unknown key; did you mean step? Known here: from, to, step"),
@@ -174,8 +174,8 @@ WRONG = [
     wrong("beyond counting", swap(LADDER, "{ from = -1e150, to = 1e150, step = 1e-150 }"), 16, "axis", "about 10^300 x 3 x 2 = about 10^301 combinations"),
     wrong("many axes", without_own() + "".join(f'[[axis]]\nname = "a{n}"\nfield = "account"\nvalues = ["cash"]\n' for n in range(18)), 16, "axis", "there are 21 axes; the limit is 20"),
     # values that make no overlay
-    wrong("strike", swap("from = 80", "from = 0"), 19, "axis.1.values", "axis put strike, value 0: leg.1.strike: percent_of_spot is 0; it takes a number from 1 to 1000, in percent"),
-    wrong("roll of one leg of two", swap('["month", "quarter"]', '["month", "weekly"]'), 29, "axis.3.values", 'axis both rolls, value "weekly": leg.1.roll: roll is \'weekly\'; it takes one of: month, quarter, half, year'),
+    wrong("strike", swap("from = 80", "from = 0"), 19, "axis.1.values", "axis put strike, value 0: leg.1.strike.percent_of_spot: percent_of_spot is 0; it takes a number from 1 to 1000, in percent"),
+    wrong("roll of one leg of two", swap('["month", "quarter"]', '["month", "weekly"]'), 29, "axis.3.values", 'axis both rolls, value "weekly": leg.1.roll: roll is \'weekly\'; it takes one of: month, quarter, half, year, days'),
     wrong("account", more("[[axis]]", 'name = "x"', 'field = "account"', 'values = ["cash", "margin"]'), 34, "axis.4.values", "axis x, value \"margin\": account: account is 'margin'; it takes one of: resize, cash"),
     of_axis("cost", "costs.commission", "[0, -1]", "axis x, value -1: costs.commission: commission is -1; it takes a number of at least 0"),
     of_axis("truth", "leg.2.ratio", "[0, true]", "axis x, value true: leg.2.ratio: ratio is True; it takes a number from 0 to 100"),

@@ -10,7 +10,6 @@ import pickle
 import tomllib
 from dataclasses import FrozenInstanceError, replace
 from decimal import Decimal
-from pathlib import Path
 from typing import Any
 
 import numpy as np
@@ -18,10 +17,10 @@ import pytest
 from hypothesis import given
 from hypothesis import strategies as st
 
-import studies
+from studies.axes import SETTINGS
+from studies.batches import FIGURES, SPAN
 from studies.errors import StudyFileError
-from studies.expansion import Expansion, points
-from studies.study import Axis, Study, parse_study, read_study, study_from_table, study_to_table, study_to_toml
+from studies.study import Axis, Study, parse_study, study_from_table, study_to_table, study_to_toml
 
 EVERYTHING = """\
 question = "Which?"
@@ -134,13 +133,17 @@ def test_what_a_file_need_not_say() -> None:
 def test_the_overlay_in_normal_form() -> None:
     """Every field, but a term that follows its roll unless it is given, and what belongs to realised vol only."""
     table = parse_study(EVERYTHING).overlay
-    assert list(table) == ["name", "account", "leg", "costs", "volatility"]
+    assert list(table) == ["name", "account", "decide_lag", "leg", "costs", "volatility"]
     first, second = table["leg"]
-    assert first == {**PUT, "roll": "quarter", "phase": 0, "shift_days": 0, "ratio": 1.0}
+    assert first == {
+        **PUT, "roll": "quarter", "roll_day": "third friday", "phase": 0, "shift_days": 0, "close_before": 0,
+        "settlement": "close", "ratio": 1.0, "ladder": 1, "stagger": True, "reference": False,
+    }  # fmt: skip
     assert (second["roll"], second["term"]) == ("month", 6)
     assert (table["costs"]["commission"], table["costs"]["half_spread_vol"]) == (1, 0.5)
     assert table["volatility"] == {
-        "smile": "index", "quote": "variance swap", "source": "auto", "put_shift": 0.0, "call_shift": 0.0
+        "smile": "index", "quote": "variance swap", "source": "auto", "put_shift": 0.0, "call_shift": 0.0,
+        "term_structure": "flat", "kappa": 2.0,
     }  # fmt: skip
     said = study_of(
         Axis(name="x", fields=("volatility.smile.rho",), values=(-0.5, 0)),
@@ -208,11 +211,13 @@ def test_the_normal_form_comes_back_exactly() -> None:
 
 NUMBERS = st.one_of(st.integers(0, 10**18), st.floats(0, 1e300))
 WORDS = st.text(min_size=1, max_size=20).filter(lambda word: word.isprintable() and word == word.strip())
+#: An axis does not have the name of another column of the results.
+AXIS_NAMES = WORDS.filter(lambda word: word not in (*SETTINGS, *SPAN, *FIGURES))
 
 
 @given(
     question=st.text(min_size=1).filter(str.strip),
-    names=st.lists(WORDS, min_size=2, max_size=2, unique=True),
+    names=st.lists(AXIS_NAMES, min_size=2, max_size=2, unique=True),
     numbers=st.lists(NUMBERS, min_size=1, max_size=4, unique=True),
     labels=st.lists(WORDS.map("l{}".format), min_size=4, max_size=4, unique=True),
     seed=st.integers(0, 2**32 - 1),
@@ -273,37 +278,3 @@ def test_own_is_looked_up_again_when_axes_change() -> None:
     assert changed.own_point == (1, 0, 1, 2)
     with pytest.raises(StudyFileError, match="is 85, no value of this axis: 70"):
         replace(study, axes=(replace(axes[0], values=(70,), labels=()), *axes[1:]), leave_out=())
-
-
-# ---------------------------------------------------------------- the standing studies
-
-FOLDER = Path(studies.__file__).parent
-
-
-@pytest.mark.parametrize(
-    ("name", "sizes", "own"),
-    [
-        ("moneyness", {"put strike": 20, "call strike": 20}, (15, 9)),
-        ("roll_frequency", {"put roll": 4, "call roll": 4, "put strike": 2, "call strike": 2}, (1, 0, 1, 1)),
-        ("roll_day", {"roll day": 63}, (0,)),
-        ("smile_and_cost", {"smile": 4, "half-spread": 5, "put strike": 2}, (2, 2, 1)),
-    ],
-)
-def test_standing_studies(name: str, sizes: dict[str, int], own: tuple[int, ...]) -> None:
-    study = read_study(FOLDER / f"{name}.toml")
-    assert study.histories == ("demo",)
-    assert {axis.name: len(axis.values) for axis in study.axes} == sizes
-    assert study.own_point == own
-    assert parse_study(study_to_toml(study)) == study
-    # the reader's own is the band of the demo in each of them: a quarterly 95 put and a monthly 110 call
-    (mine,) = Expansion(study).many([own])
-    put, call = mine.overlay.legs
-    assert (put.roll, put.strike.percent, call.roll, call.strike.percent) == ("quarter", 95, "month", 110)  # type: ignore[attr-defined]
-    assert (mine.volatility.quote, mine.volatility.smile.name) == ("variance swap", "index")
-    assert len(points(study)) == np.prod(list(sizes.values()))
-
-
-def test_standing_studies_are_all_tested_and_go_along_in_the_package() -> None:
-    assert {path.stem for path in FOLDER.glob("*.toml")} == {
-        "moneyness", "roll_frequency", "roll_day", "smile_and_cost",
-    }  # fmt: skip

@@ -15,9 +15,12 @@ from pathlib import Path
 from typing import Any
 
 import numpy as np
+import pandas as pd
 import pytest
 from markupsafe import Markup
 
+from backtest import Market, replay
+from backtest.analytics import performance
 from data_loaders import History
 from studies.assumptions import CAUTION
 from studies.page.study import build_study_page
@@ -210,14 +213,28 @@ def test_maps_are_medians_over_the_other_axes(found: StudyAnswer) -> None:
                 assert grid[down, across] == pytest.approx(np.median(chosen), rel=1e-14)
 
 
+def test_one_s_own_is_replayed_on_the_days_of_its_row(demo_history: History, found: StudyAnswer) -> None:
+    (view,) = views_of(found, overlay_names(found))
+    one = one_replay(found, view)
+    assert view.group.own is not None
+    row = found.overlays.iloc[view.group.own]
+    assert one.overlay.legs[0].strike.percent == 95  # type: ignore[attr-defined]
+    # by hand: the third Fridays of March and of June 1999; by itself a quarterly one begins with the first
+    alone = replay(Market.from_frame(demo_history.frame), one.overlay, volatility=one.volatility)
+    assert (str(alone.dates[0]), str(one.dates[0])) == ("1999-03-19", "1999-06-18")
+    assert (one.dates[0], one.dates[-1]) == (view.group.first, view.group.last)
+    assert (pd.Timestamp(one.dates[0]), pd.Timestamp(one.dates[-1])) == (row["inception"], row["end"])
+    figures = performance(one.wealth, dates=one.dates, rate_return=one.rate_return, hold=one.hold)
+    for name in ("annual_return", "volatility", "max_drawdown", "beta"):
+        assert row[name] == pytest.approx(getattr(figures, name), rel=1e-12), name
+
+
 def test_mixes_are_grown_day_by_day_and_counted_against(found: StudyAnswer, tree: Node) -> None:
     (view,) = views_of(found, overlay_names(found))
-    replay = one_replay(found, view)
-    assert replay.overlay.legs[0].strike.percent == 95  # type: ignore[attr-defined]  # one's own
-    line = mix_line(replay, view.group.first)
+    one = one_replay(found, view)
+    line = mix_line(one)
     assert line is not None
-    offset = int(np.searchsorted(replay.dates, view.group.first))
-    hold, cash, dates = replay.hold[offset:], replay.rate_return[offset:], replay.dates[offset:]
+    hold, cash, dates = one.hold, one.rate_return, one.dates
     years = int((dates[-1] - dates[0]).astype(int)) / 365.25
     ends: dict[float, tuple[float, float]] = {}
     for share in (1.0, 0.4):
