@@ -6,7 +6,9 @@ condition is one class here and one entry in :data:`GATE_CONDITIONS`.
 
 from __future__ import annotations
 
+import math
 from dataclasses import dataclass
+from fractions import Fraction
 from typing import Any, Protocol
 
 import numpy as np
@@ -16,7 +18,6 @@ from .arguments import number, one_of, whole_number
 from .errors import MarketError, OverlayError
 from .market import Market
 
-Array = npt.NDArray[np.float64]
 Flags = npt.NDArray[np.bool_]
 
 WHEN_OFF = ("run out", "close")
@@ -25,7 +26,7 @@ WHEN_ON = ("next roll", "at once")
 LONGEST_WINDOW = 2520
 #: Three years of trading days.
 VOL_WINDOW = 756
-#: A value this near to its mean or percentile, relatively, is taken to be on it.
+#: A close this near to its mean, relatively, is taken to be on it.
 ROUNDING = 1e-12
 
 
@@ -84,9 +85,16 @@ class VolPercentile:
         held = np.zeros(len(vol), dtype=bool)
         if len(vol) < self.window:
             return held
-        limit = np.percentile(np.lib.stride_tricks.sliding_window_view(vol, self.window), self.percent, axis=1)
-        newest = vol[self.window - 1 :]
-        held[self.window - 1 :] = _beyond(newest, limit, above=self.above)
+        windows = np.lib.stride_tricks.sliding_window_view(vol, self.window)
+        newest = windows[:, -1:]
+        # today lies above the value at this place among the ordered ones if more than so many are less than today's:
+        # counted, not interpolated, so that nothing is lost to rounding (or to sorting every window)
+        place = Fraction(float(self.percent)) * (self.window - 1) / 100
+        if self.above:
+            on = np.count_nonzero(windows < newest, axis=1) > math.floor(place)
+        else:
+            on = np.count_nonzero(windows <= newest, axis=1) <= math.ceil(place)
+        held[self.window - 1 :] = on & ~np.isnan(windows).any(axis=1)
         return held
 
 
@@ -108,13 +116,9 @@ class PriceMean:
             return held
         mean = np.lib.stride_tricks.sliding_window_view(market.spot, self.window).mean(axis=1)
         newest = market.spot[self.window - 1 :]
-        held[self.window - 1 :] = _beyond(newest, mean, above=self.above)
+        # by more than rounding: the mean of closes that are all alike is that close
+        held[self.window - 1 :] = newest > mean * (1.0 + ROUNDING) if self.above else newest < mean * (1.0 - ROUNDING)
         return held
-
-
-def _beyond(values: Array, level: Array, *, above: bool) -> Flags:
-    """Strictly above or below, by more than rounding: the mean of closes that are all alike is that close."""
-    return values > level * (1.0 + ROUNDING) if above else values < level * (1.0 - ROUNDING)
 
 
 @dataclass(frozen=True, slots=True, kw_only=True)

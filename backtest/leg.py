@@ -137,6 +137,7 @@ class Leg:
     gate: Gate | None = None
     reference: bool = False
     cycle: ListedCycle | LastDayCycle | DaysCycle = field(init=False, repr=False, compare=False)
+    plain: bool = field(init=False, repr=False, compare=False)  # neither split into tranches nor naming another leg
 
     def __post_init__(self) -> None:
         one_of("position", self.position, ("long", "short"))
@@ -161,6 +162,7 @@ class Leg:
                 f"trading days later; together at most {LARGEST_SHIFT_DAYS}",
                 field="shift_days",
             )
+        object.__setattr__(self, "plain", self.ladder == 1 and not self.named_legs)
         for name in ("stagger", "reference"):
             if not isinstance(getattr(self, name), bool):
                 raise OverlayError(f"{name} is {getattr(self, name)!r}; it takes true or false", field=name)

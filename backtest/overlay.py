@@ -143,11 +143,13 @@ class Overlay:
             raise OverlayError(f"legs is {self.legs!r}; give a tuple of backtest.Leg objects", field="leg") from None
         if not self.legs:
             raise OverlayError("an overlay needs at least one leg", field="leg")
+        count, plain = 0, True
         for leg in self.legs:
             if not isinstance(leg, Leg):
                 raise OverlayError(f"a leg is {leg!r}; give backtest.Leg objects", field="leg")
-        if sum(leg.ladder for leg in self.legs) > MOST_LEGS:
-            count = sum(leg.ladder for leg in self.legs)
+            count += leg.ladder
+            plain = plain and leg.plain
+        if count > MOST_LEGS:
             raise OverlayError(f"an overlay of {count} legs; the limit is {MOST_LEGS}", field="leg")
         one_of("account", self.account, ACCOUNTS)
         if not isinstance(self.costs, Costs):
@@ -164,10 +166,13 @@ class Overlay:
             raise OverlayError(f"gate is {self.gate!r}; give a backtest.Gate", field="gate")
         if not isinstance(self.crossed, bool):
             raise OverlayError(f"crossed is {self.crossed!r}; it takes true or false", field="crossed")
-        _check_order(self.legs)
-        _check_crossing(self)
-        object.__setattr__(self, "carried", _carried(self))
-        object.__setattr__(self, "anchor", _anchor(self.carried))
+        if not plain:
+            _check_order(self.legs)
+        if not self.crossed:
+            _check_crossing(self)
+        carried = self.legs if plain and self.gate is None else _carried(self)
+        object.__setattr__(self, "carried", carried)
+        object.__setattr__(self, "anchor", _anchor(carried))
 
 
 def _anchor(legs: tuple[Leg, ...]) -> Leg:
@@ -215,8 +220,6 @@ def _check_order(legs: tuple[Leg, ...]) -> None:
 
 def _check_crossing(overlay: Overlay) -> None:
     """A sold call struck under a bought put by the same rule is taken for a mistake, unless agreed to."""
-    if overlay.crossed:
-        return
     puts = [leg for leg in overlay.legs if leg.right == "put" and leg.position == "long" and leg.held_ratio > 0]
     calls = [leg for leg in overlay.legs if leg.right == "call" and leg.position == "short" and leg.held_ratio > 0]
     for put in puts:

@@ -4,7 +4,9 @@
 """
 
 from .errors import DataProblems, LoadError, Problem, StoreError
-from .history import History, SourceFile, load_history
+from .history import History, SourceFile
+from .loading import load_histories, load_history
+from .reading import Reading, ReadingError, readings
 from .repairs import Repair
 from .store import check_name, history_names, read_history, write_history
 
@@ -13,12 +15,16 @@ __all__ = [
     "History",
     "LoadError",
     "Problem",
+    "Reading",
+    "ReadingError",
     "Repair",
     "SourceFile",
     "StoreError",
     "check_name",
     "history_names",
+    "load_histories",
     "load_history",
     "read_history",
+    "readings",
     "write_history",
 ]

@@ -13,9 +13,9 @@ import numpy as np
 
 from . import checks
 from .cells import Dates, Floats, Lines, Mask
-from .csv_files import Table
 from .errors import Problems
 from .schema import CARRY_DAYS, FILES, Kind
+from .tables import Table
 from .words import counted, some
 
 #: Rows lost to these would make dates look missing that are in the file.
@@ -58,6 +58,16 @@ def dividend_column(
     known = np.isin(table.dates, days)
     dividend[np.searchsorted(days, table.dates[known])] = table.numbers["dividend"][known]
     return {"dividend": dividend}
+
+
+def signal_column(table: Table, days: Dates) -> dict[str, Floats]:
+    """Column ``signal``: on each trading day the last value up to it, however old; NaN before the first."""
+    if "signal" not in table.numbers:
+        return {}
+    known = ~table.missing["signal"]
+    dates, values = table.dates[known], table.numbers["signal"][known]
+    last = np.searchsorted(dates, days, side="right") - 1
+    return {"signal": np.append(values, np.nan)[last]}
 
 
 def carried_columns(
@@ -135,8 +145,9 @@ def _add_gaps(table: Table, role: str, days: Dates, until: np.datetime64, proble
             )
         line = int(lines[np.searchsorted(value_days, gap.before)])
         problems.add(
-            "gap-too-long", file=table.file, kind=table.kind, line=line, column=table.names[role], role=role,
-            end=end, days=int((end - gap.before).astype(np.int64)), limit=CARRY_DAYS, advice=advice, **facts,
+            "gap-too-long", file=table.file, kind=table.kind, line=line, place=table.place,
+            column=table.names[role], role=role, end=end, days=int((end - gap.before).astype(np.int64)),
+            limit=CARRY_DAYS, advice=advice, **facts,
         )  # fmt: skip
 
 

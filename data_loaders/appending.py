@@ -159,12 +159,13 @@ def _agree(was: Floats, now: Floats) -> Mask:
 
 
 def _was_carried(former: History, column: str, days: Dates) -> Mask:
-    """Days after the last one of the file that the column came from."""
+    """Days after the last one of the file that the column came from last."""
     if not is_carried(column):
         return np.zeros(len(days), dtype=np.bool_)
     kind = "rates" if column == "rate" else "vol"
     ends = [source.last for source in former.sources if source.kind == kind]
-    return np.asarray(days > np.datetime64(max(ends), "D")) if ends else np.zeros(len(days), dtype=np.bool_)
+    # of files that were appended, the last stands last
+    return np.asarray(days > np.datetime64(ends[-1], "D")) if ends else np.zeros(len(days), dtype=np.bool_)
 
 
 def _days_apart(before: Dates, fresh: Dates) -> Iterator[tuple[str, str]]:

@@ -34,7 +34,7 @@ def dates_from_text(column: pa.Array) -> tuple[Dates, Mask, Mask]:
     shaped = to_numpy(pc.match_substring_regex(text, _DATE_PATTERN))
     good = text if shaped.all() else pc.if_else(pa.array(shaped), text, "1970-01-01")
     year, month, day = (
-        toto_numpy(pc.cast(pc.utf8_slice_codeunits(good, start, stop), pa.int64()))
+        to_numpy(pc.cast(pc.utf8_slice_codeunits(good, start, stop), pa.int64()))
         for start, stop in ((0, 4), (5, 7), (8, 10))
     )
     dates, impossible = civil_dates(year, month, day)
@@ -78,7 +78,7 @@ def numbers_from_text(column: pa.Array) -> tuple[Floats, Mask, Mask, Mask, Mask]
     numeric = pc.utf8_ltrim(text, characters="+")
     if not plain.all():
         numeric = pc.if_else(pa.array(plain), numeric, pa.scalar(None, pa.string()))
-    values = np.array(pc.cast(numeric, pa.float64()).toto_numpy(zero_copy_only=False), dtype=np.float64)
+    values = np.array(pc.cast(numeric, pa.float64()).to_numpy(zero_copy_only=False), dtype=np.float64)
     lower = pc.utf8_lower(text)
     missing, nan, infinite = (
         to_numpy(pc.is_in(lower, value_set=pa.array(texts))) for texts in (MISSING_TEXTS, NAN_TEXTS, INFINITE_TEXTS)
@@ -88,6 +88,19 @@ def numbers_from_text(column: pa.Array) -> tuple[Floats, Mask, Mask, Mask, Mask]
     return values, missing, nan, infinite | too_large, ~(plain | missing | nan | infinite)
 
 
+def text_of(column: pa.Array, row: int) -> str:
+    """Text of one cell, whatever the column is made of; empty if it holds nothing.
+
+    >>> text_of(pa.array([1.5, None]), 0), text_of(pa.array([1.5, None]), 1)
+    ('1.5', '')
+    """
+    try:
+        value = column[int(row)].as_py()
+    except (OverflowError, ValueError):  # a date that Python has no name for
+        value = pc.cast(column[int(row) : int(row) + 1], pa.string())[0].as_py()
+    return "" if value is None else str(value)
+
+
 def to_numpy(column: pa.Array) -> npt.NDArray[Any]:
     """An array of pyarrow as one of numpy."""
-    return np.asarray(column.toto_numpy(zero_copy_only=False))
+    return np.asarray(column.to_numpy(zero_copy_only=False))

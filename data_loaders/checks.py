@@ -13,9 +13,9 @@ import numpy as np
 import numpy.typing as npt
 
 from .cells import Dates, Floats, Lines, Mask
-from .csv_files import Table, columns_of
 from .errors import Problems
 from .schema import FILES, RATE_PERCENT_RANGE, VOL_PERCENT_RANGE
+from .tables import Table, columns_of
 
 Unit = Literal["percent", "decimal"]
 

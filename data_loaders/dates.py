@@ -38,7 +38,7 @@ _MONTH_NAMES = dict(zip(_MONTHS, range(1, 13))) | dict(zip(_LONG_MONTHS, range(1
 
 _CLOCK = r"(?P<time>[0-2]?\d:[0-5]\d(?::[0-6]\d(?:[.,]\d+)?)?(?: ?[AaPp]\.?[Mm]\.?)?)"
 _ZONE = r"(?P<zone>Z|[A-Z]{2,5}|[+-]\d{2}(?::?\d{2})?)"
-_TIME = rf"(?:(?:[T,]| ),? ?{_CLOCK}(?: ?{_ZONE})?)?$"
+_TIME = rf"(?:(?:T|,? ){_CLOCK}(?: ?{_ZONE})?)?$"
 _MIDNIGHT = r"^(?:0?0:00(?::00(?:[.,]0+)?)?(?: ?[Aa]\.?[Mm]\.?)?|12:00(?::00(?:[.,]0+)?)? ?[Aa]\.?[Mm]\.?)$"
 _WEEKDAY = r"^(?:(?i:mon|tue|wed|thu|fri|sat|sun)[a-z]*[,.]? +)?"
 _NAME = r"(?P<m>[A-Za-z]{3,9})\.?"
@@ -118,6 +118,21 @@ class AskedDates:
     system: int = 1900
 
 
+@dataclass(frozen=True, slots=True, kw_only=True)
+class Unclear:
+    """Two forms that fit as many cells, and a cell that they read differently.
+
+    ``other_date`` is None where `other` cannot read that cell; then it alone can read the one of ``other_row``.
+    """
+
+    form: DateForm
+    other: DateForm
+    row: int
+    date: np.datetime64
+    other_date: np.datetime64 | None
+    other_row: int | None = None
+
+
 @dataclass(frozen=True, slots=True, kw_only=True, eq=False)
 class DatesRead:
     """A column of dates.
@@ -133,8 +148,8 @@ class DatesRead:
         The one of the column, :data:`ISO` if it has none.
     settled_by : int or None
         Row that only this form can read, where there was another to choose from.
-    unclear : tuple or None
-        Two forms that fit alike, a row, and its two dates.
+    unclear : Unclear or None
+        Two forms that fit alike; then neither is meant to be used.
     """
 
     dates: Dates
@@ -143,7 +158,7 @@ class DatesRead:
     too_late: Mask
     form: DateForm
     settled_by: int | None = None
-    unclear: tuple[DateForm, DateForm, int, np.datetime64, np.datetime64] | None = None
+    unclear: Unclear | None = None
 
 
 def asked_dates(text: str) -> AskedDates:
@@ -290,17 +305,24 @@ def _read(text: pa.Array, form: DateForm) -> DatesRead:
 def _best(text: pa.Array, forms: list[DateForm]) -> DatesRead:
     """The form in which most cells are dates; unclear where two that give other dates are as good."""
     tried = [_read(text, form) for form in forms]
-    good = [~(read.bad | read.outside) for read in tried]
+    good = [~(read.bad | read.outside | read.too_late) for read in tried]
     counts = [int(np.count_nonzero(one)) for one in good]
     order = sorted(range(len(tried)), key=lambda i: -counts[i])
     best = order[0]
     for other in order[1:]:
         differs = good[best] & (~good[other] | (tried[best].dates != tried[other].dates))
         if counts[other] == counts[best] and differs.any():
-            both = good[best] & good[other] & differs
+            both = differs & good[other]
             row = int(np.argmax(both if both.any() else differs))
-            dates = tried[best].dates[row], tried[other].dates[row]
-            return replace(tried[best], unclear=(forms[best], forms[other], row, *dates))
+            unclear = Unclear(
+                form=forms[best],
+                other=forms[other],
+                row=row,
+                date=tried[best].dates[row],
+                other_date=tried[other].dates[row] if both.any() else None,
+                other_row=None if both.any() else int(np.argmax(good[other] & ~good[best])),
+            )
+            return replace(tried[best], unclear=unclear)
     settling = good[best] & ~good[order[1]]
     return replace(tried[best], settled_by=int(np.argmax(settling)) if settling.any() else None)
 
@@ -312,7 +334,8 @@ def _serial(text: pa.Array, form: DateForm) -> DatesRead:
     if not weekend.any() or weekend_1904.any():
         return read
     row = int(np.flatnonzero(~read.bad)[np.argmax(weekend)])
-    return replace(read, unclear=(form, other.form, row, read.dates[row], other.dates[row]))
+    dates = {"date": read.dates[row], "other_date": other.dates[row]}
+    return replace(read, unclear=Unclear(form=form, other=other.form, row=row, **dates))
 
 
 def _serial_dates(number: Numbers, system: int) -> tuple[Dates, Mask]:

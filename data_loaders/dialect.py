@@ -29,7 +29,8 @@ _SHOWN_LINES, _SHOWN_CHARACTERS = 3, 40
 _WINDOW = 1 << 22
 
 _DATE_LIKE = re.compile(
-    r"\s*(\d{1,4}[-/. ]\d{1,2}[-/. ]\d{1,4}|\d{8}|\d{5}|\d{1,2}[- ]?[A-Za-z]{3,9}[- ,]+\d{2,4}|[A-Za-z]{3,9} \d{1,2},? \d{4})\b.*"
+    r"\s*(\d{1,4}[-/. ]\d{1,2}[-/. ]\d{1,4}|\d{8}|\d{5}"
+    r"|\d{1,2}[- ]?[A-Za-z]{3,9}[- ,]*\d{2,4}|[A-Za-z]{3,9} \d{1,2},? \d{4})\s*(?:[T ,].*)?"
 )
 _NUMBER_LIKE = re.compile(r"\s*[-+($€£¥₹]*\s*\d[\d.,'’\s]*([eE][-+]?\d+)?\s*[)%$€£¥₹]*\s*")
 
@@ -90,12 +91,12 @@ class Dialect:
         else:
             text += [self.encoding, f"columns separated by {SEPARATORS[self.separator]}s"]
         if self.decimal is not None:
-            settled = f" (settled by {self.decimal_settled_by!r})" if self.decimal_settled_by else ""
+            settled = f" (settled by '{self.decimal_settled_by}')" if self.decimal_settled_by else ""
             text.append(f"decimal {self.decimal}{settled}")
         if self.thousands:
             marks = dict.fromkeys(MARK_NAMES[mark] for mark in self.thousands)
             text.append(f"{' and '.join(marks)} between thousands")
-        dates = [self.dates + (f", settled by {self.dates_settled_by!r}" if self.dates_settled_by else "")]
+        dates = [self.dates + (f", settled by '{self.dates_settled_by}'" if self.dates_settled_by else "")]
         if self.two_digit_years:
             dates.append("years 69 to 99 as 1969 to 1999, 00 to 68 as 2000 to 2068")
         if self.timed:
@@ -159,8 +160,8 @@ def as_utf8(data: bytes | bytearray) -> tuple[bytes | bytearray, str]:
     """Text of any encoding we know as UTF-8 without a byte order mark, lines ending in a line feed; and its encoding.
 
     A byte order mark decides, then zero bytes at every other place (UTF-16), then whether it is UTF-8. What is not is
-    taken for Windows-1252, in which ``£`` and ``é`` of older spreadsheets come out right, if it has no byte that has no
-    meaning there.
+    taken for Windows-1252, in which ``£`` and ``é`` of older spreadsheets come out right, if nothing speaks for UTF-8
+    and every byte has a meaning there.
 
     Raises
     ------
@@ -169,8 +170,8 @@ def as_utf8(data: bytes | bytearray) -> tuple[bytes | bytearray, str]:
 
     Examples
     --------
-    >>> as_utf8("é\\r\\n".encode("utf-16"))[1], as_utf8("é".encode("latin-1"))
-    ('UTF-16 (little-endian)', (b'\\xc3\\xa9', 'Windows-1252'))
+    >>> as_utf8("é".encode("utf-16"))[1], as_utf8("é".encode("latin-1"))[1]
+    ('UTF-16 (little-endian)', 'Windows-1252')
     """
     name, codec, start = _marked(data)
     if codec != "utf-8":
@@ -182,11 +183,13 @@ def as_utf8(data: bytes | bytearray) -> tuple[bytes | bytearray, str]:
     if b"\0" in data:
         raise Refused("binary-file", what="binary data")
     if codec == "utf-8" and (wrong := _not_utf8(data)) is not None:
+        # a mark of UTF-8, or letters of it further up, and it is UTF-8 with a fault
+        is_utf8 = start > 0 or re.search(rb"[\x80-\xff]", data[:wrong]) is not None
         try:
             recoded = _recoded(data, "cp1252", "Windows-1252")
         except Refused:
             recoded = bytearray()
-        if not recoded or re.search(rb"[\x01-\x08\x0e-\x1f]", data):
+        if not recoded or is_utf8 or re.search(rb"[\x01-\x08\x0e-\x1f]", data):
             line = data.count(b"\n", 0, wrong) + 1
             raise Refused("not-utf-8", line=line, byte=f"0x{data[wrong]:02x}")
         data, name = recoded, "Windows-1252"
@@ -319,20 +322,22 @@ def _standing(schema: FileSchema, names: list[str], reading: Reading) -> int | N
 
 def _likeliest(lines: list[str], candidates: list[int]) -> Layout:
     """The line above the first that looks like data; where none does, the first line, as finely as it can be cut."""
-    best: tuple[int, int, str] | None = None
+    best: tuple[tuple[bool, int], int, str] | None = None
     for separator in SEPARATORS:
         for i in candidates:
             fields, _ = _fields(lines[i:], separator)
-            if _is_data(fields):
-                if best is None or len(fields) > best[0]:
-                    best = (len(fields), i, separator)
-                break
+            if not _is_data(fields):
+                continue
+            before = [j for j in candidates if j < i]
+            fits = not before or len(_fields(lines[before[-1] :], separator)[0]) == len(fields)
+            if best is None or (fits, len(fields)) > best[0]:
+                best = ((fits, len(fields)), i, separator)
+            break
     if best is not None:
         _, first, separator = best
         above = [i for i in candidates if i < first]
         if not above:
-            shown = lines[first].strip()
-            raise Refused("no-header", line=first + 1, value=shown)
+            raise Refused("no-header", line=first + 1, value=lines[first].strip())
         fields, count = _fields(lines[above[-1] :], separator)
         return _layout(lines, above[-1], separator, fields, count)
     i = candidates[0]

@@ -13,9 +13,12 @@ from __future__ import annotations
 from collections import Counter
 from collections.abc import Iterable, Mapping, Sequence
 from dataclasses import dataclass, field
-from typing import Any
+from typing import Any, Literal
 
 from .schema import FILES, Kind
+
+#: What the places of a file are counted in: rows where it has no lines.
+Place = Literal["line", "row"]
 
 #: Problems of one code that are written out by ``str(DataProblems)``; the rest are counted.
 SHOWN_PER_CODE = 20
@@ -30,30 +33,71 @@ REASONS: Mapping[str, str] = {
     "missing-file": "there is no such file. Check the path; it was read as {path}.",
     "not-a-file": "this is {what}, not a regular file. Give the path of one CSV file.",
     "unreadable-file": "the file could not be read ({reason}). Check its permissions and the disk.",
+    "file-too-large": "the file holds {size}{packed}; at most {limit} can be read. "
+    "Split it, by years or by symbols, and load the parts.",
+    "grows-too-much": "the file has {size} and unpacks to more than {unpacked}, over {limit} times as much, as no "
+    "table does; the rest was not unpacked. If you trust it, unpack it yourself.",
+    "many-members": "the archive holds {count} files{names}. Give an archive of one file, or the file itself.",
+    "damaged-file": "this is {what} and cannot be read ({reason}). Get the file again.",
     "binary-file": "this is {what}, not CSV text. Save it as plain CSV, UTF-8.",
     "not-utf-8": "byte {byte} is not UTF-8 text. Save the file as CSV with UTF-8 encoding.",
+    "damaged-text": "the text is {encoding} by its first bytes, but breaks off here. Save the file as CSV with UTF-8 "
+    "encoding.",
     "empty-file": "the file is empty. It needs a header line and at least one row.",
     "no-rows": "the file has a header but no row with data. It needs at least one row.",
-    "not-comma-separated": "the header is one single column containing {separator}. "
-    "Columns are separated by commas and the decimal mark is a point; save the file that way.",
+    "line-too-long": "the line is longer than {limit:,} bytes, so this is no table. "
+    "Save it as plain CSV: a header line, then one row a line.",
     "unclosed-quote": 'there is a double quote (") that is never closed, so rows run into each other. '
     "Close it, or remove it.",
+    "rows-in-quotes": "whole rows stand inside a pair of double quotes, {value}, and would be lost. "
+    "Remove the quote that is too many, here or some lines further down.",
     "ragged-row": "the row has {came} and the header has {expected}. "
     "Give every row as many fields as the header; a decimal comma or a thousands separator splits a number in two.",
     "unreadable-csv": "the file could not be split into rows and columns ({reason}). "
     "Save it as plain CSV: a header line, then one row a line, separated by commas.",
     # the header
-    "missing-column": "no column for '{role}' ({meaning}). The header has {header}. Name it {names}.{hint}",
+    "no-header": "the first row, {value}, is data. Put a line with the names of the columns above it, "
+    "such as date and close.",
+    "rows-above-header": "{value} looks like a row of data but stands above the header on line {header_line}. "
+    "Put the header first, or remove the row.",
+    "no-separator": "the header is one single column, {header}. Columns have to be separated by commas, semicolons, "
+    "tabs or vertical bars.",
+    "missing-column": "no column for '{role}' ({meaning}). The header has {header}. Name it {names}.{hint} "
+    "Or say which it is: rollband load ... --map {option}=NAME.",
     "ambiguous-column": "columns {columns} could each be '{role}' ({meaning}). "
-    "Keep one of them, or name the right one '{exact}'.",
+    "Keep one of them, or name the right one '{exact}', or say rollband load ... --map {option}=NAME.",
+    "unknown-column": "there is no column {name!r}, or more than one, for --map {option}. The header has {header}.",
+    "column-type": "the column holds {type}, not {wanted}. Save it as {wanted} or as text.",
+    # files of many symbols
+    "many-symbols": "the column holds {count} ({symbols}). Say rollband load ... --symbol {first} for one of them, or "
+    "--symbol-column {named} to make a history of each.",
+    "no-symbol-column": "there is no {named}. The header has {header}. Say which it is: --symbol-column NAME.",
+    "unknown-symbol": "no row has symbol {symbol!r}. The column holds {count}: {symbols}.{meant} "
+    "Write it as it stands there.",
+    "missing-symbol": "the row has no symbol, as {count:,} in all. Put it in, or remove the row.",
     # single values
-    "bad-date": "{value} is not a date of the form YYYY-MM-DD (for example 2008-03-20). "
+    "bad-date": "{value} is not a date of the form {form} (for example {example}). "
     "Write every date that way, or remove the row.",
+    "date-form-unclear": "the dates of the column fit {form} and {other} alike: {value} is {date} or {other_date}. "
+    "Say which it is: rollband load ... --date-format {form} or --date-format {other}.",
+    "date-forms-mixed": "{value} can only be {form}, and {other_value} on {place} {other_line} only {other}. "
+    "Write all dates of the column the same way.",
+    "two-digit-year": "{value} read as {date} is yet to come: two-digit years from {pivot} on are of the 1900s, the "
+    "others of the 2000s. Write the years with four digits.",
     "date-out-of-range": "{value} is outside {low} to {high}, the dates that can be used. Correct the year.",
-    "duplicate-date": "{value} is already on line {first_line}. "
+    "duplicate-date": "{value} is already on {place} {first_line}. "
     "Each date may stand once; remove one of the rows.{hint}",
-    "not-a-number": "{value} is not a number. Write plain numbers with a point as decimal mark, without "
-    "thousands separators or signs such as % and $.",
+    "not-a-number": "{value} is not a number. Write plain numbers with a {decimal} as decimal mark, "
+    "best without thousands separators.",
+    "decimal-unclear": "{value} is {as_point} with a decimal point and {as_comma} with a decimal comma, and no number "
+    "of the file settles which. Say rollband load ... --decimal point or --decimal comma.",
+    "thousands-mixed": "{value} has a {mark} between thousands, and other large numbers of the column have none: it "
+    "may be meant for the decimal {decimal}. Write all numbers of the column the same way.",
+    "percent-mixed": "{value} and other values of the file do not agree on whether there is a percent sign. "
+    "Write all of them with it, or none.",
+    "percent-unit": "the vols have percent signs, and --vol-unit decimal says that they are decimals. Leave it out.",
+    "currency-mixed": "{value} is in {sign}, and the value on {place} {first_line} in {first}. "
+    "A history is in one money; give a file of one.",
     "not-finite": "{value} is not a finite number. Put in the value, or remove the row.",
     "missing-price": "the price is missing (found {value}). Every row of the price file needs its {column}; "
     "put in the price, or remove the row if it was not a trading day.",
@@ -97,13 +141,15 @@ class Problem:
     file, kind : str
         Name of the file (no folders) and what it was read as: ``prices``, ``vol``, ``dividends``, ``rates``.
     line : int or None
-        Line in the file; the first line is 1.
+        Line in the file; the first line is 1. The row where a file has no lines, as ``place`` says.
     column, value : str or None
         Name of the column as the file spells it, and the text found there.
     code : str
         A key of :data:`REASONS`.
     message : str
         What is wrong, the rule, and what to do.
+    symbol : str or None
+        Of a file of many symbols, the one it concerns.
     """
 
     file: str
@@ -113,11 +159,15 @@ class Problem:
     line: int | None = None
     column: str | None = None
     value: str | None = None
+    symbol: str | None = None
+    place: Place = "line"
 
     def __str__(self) -> str:
         place = [self.file]
+        if self.symbol is not None:
+            place.append(f"symbol {self.symbol}")
         if self.line is not None:
-            place.append(f"line {self.line}")
+            place.append(f"{self.place} {self.line}")
         if self.column is not None:
             place.append(f"column {self.column}")
         return f"{', '.join(place)}: {self.message}"
@@ -196,6 +246,7 @@ class Problems:
 
     found: list[Problem] = field(default_factory=list)
     totals: Counter[str] = field(default_factory=Counter)
+    symbol: str | None = None
     _kept: Counter[tuple[str, str, str, str | None]] = field(default_factory=Counter)
 
     def add(
@@ -207,6 +258,7 @@ class Problems:
         line: int | None = None,
         column: str | None = None,
         value: str | None = None,
+        place: Place = "line",
         **facts: Any,
     ) -> None:
         """Note one problem; `facts` fill the sentence of the code."""
@@ -215,10 +267,13 @@ class Problems:
         self._kept[key] += 1
         if self._kept[key] > KEPT_PER_CODE:
             return
-        message = REASONS[code].format(**{"column": column, "value": quoted(value), **facts})
+        message = REASONS[code].format(**{"column": column, "value": quoted(value), "place": place, **facts})
         self.found.append(
-            Problem(file=file, kind=kind, code=code, message=message, line=line, column=column, value=value)
-        )
+            Problem(
+                file=file, kind=kind, code=code, message=message, line=line, column=column, value=value,
+                symbol=self.symbol, place=place,
+            )
+        )  # fmt: skip
 
     def count_rest(self, code: str, number: int) -> None:
         """Count problems of a code that are too many to note one by one."""

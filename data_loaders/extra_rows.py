@@ -12,7 +12,7 @@ import numpy as np
 import pyarrow as pa
 import pyarrow.compute as pc
 
-from .cells import Mask, to_numpy
+from .cells import Mask, text_of, to_numpy
 from .csv_files import Ragged, TextTable
 
 #: Rows below the last day that may be notes and totals; more are no notes.
@@ -24,6 +24,8 @@ _TOTALS = re.compile(
 )
 _NUMBER = re.compile(r"[-+($€£¥₹]*\s*[\d.,'’\s]*\d[\d.,'’\s]*([eE][-+]?\d+)?\s*[)%$€£¥₹]*")
 _DATE = re.compile(r"\d{1,4}\s*[-/.]\s*\d.*|\d{5,8}.*", re.DOTALL)
+#: Several words, and no digit: no date that went wrong.
+_PROSE = re.compile(r"\W*[^\W\d]{2,}\W+[^\W\d]{2,}\D*", re.DOTALL)
 _MONTH_OR_WEEKDAY = re.compile(
     r"(jan|feb|mar|apr|may|jun|jul|aug|sep|oct|nov|dec|mon|tue|wed|thu|fri|sat|sun)", re.IGNORECASE
 )
@@ -74,8 +76,8 @@ def repeated_headers(text: TextTable, date_at: int) -> Mask:
 def rows_below(text: TextTable, dated: Mask, separator: str | None) -> ExtraRows:
     """Notes and totals below the last row with a date.
 
-    A note has no number and no date in it, nor begins like a date. A total begins with a word such as `Total` or
-    `Average`, whatever follows.
+    A note begins with several words, or has no number and no date in it, nor begins like a date. A total begins with
+    a word such as `Total` or `Average`, whatever follows.
     """
     none = ExtraRows(rows=np.zeros(len(text.lines), dtype=np.bool_), ragged=frozenset(), texts=())
     if separator is None or not dated.any():
@@ -88,7 +90,7 @@ def rows_below(text: TextTable, dated: Mask, separator: str | None) -> ExtraRows
     found: list[tuple[int, str]] = []
     mask, loose = none.rows.copy(), set()
     for i in rows:
-        cells = [str(column[i].as_py()) for column in text.columns]
+        cells = [text_of(column, i) for column in text.columns]
         if _is_extra(cells):
             mask[i] = True
             found.append((int(text.lines[i]), _row_text(text, i)))
@@ -109,9 +111,11 @@ def _is_extra(cells: list[str]) -> bool:
         return True
     if filled[0][0].isdigit() or _MONTH_OR_WEEKDAY.match(filled[0]):
         return False
+    if _PROSE.fullmatch(filled[0]):
+        return True
     return not any(_NUMBER.fullmatch(cell) or _DATE.fullmatch(cell) for cell in filled)
 
 
 def _row_text(text: TextTable, row: int) -> str:
-    cells = [str(column[row].as_py()).strip() for column in text.columns]
+    cells = [text_of(column, row).strip() for column in text.columns]
     return " ".join(cell for cell in cells if cell)

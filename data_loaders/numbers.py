@@ -138,7 +138,7 @@ def decimal_mark(columns: Sequence[NumberCells], *, usual: Decimal | None) -> De
     Parameters
     ----------
     usual : {"point", "comma"} or None
-        Taken for numbers such as ``1.234`` that nothing in the file settles. A file that separates its columns by commas
+        Taken for numbers such as ``1.234`` that nothing in the file settles. A file with commas between its columns
         has the point: a decimal comma would have had to be quoted. A quoted ``1,234`` stays unclear there too.
     """
     with_comma = [to_numpy(pc.match_substring(cells.bare, ",")) for cells in columns]
@@ -150,8 +150,8 @@ def decimal_mark(columns: Sequence[NumberCells], *, usual: Decimal | None) -> De
     open_commas: list[tuple[str, int]] = []
     for cells, has_comma in zip(columns, with_comma):
         reads = {mark: to_numpy(pc.match_substring_regex(cells.bare, pattern)) for mark, pattern in _PATTERNS.items()}
-        for mark, other in (("point", "comma"), ("comma", "point")):
-            only = reads[mark] & ~reads[other]
+        for mark in _PATTERNS:
+            only = reads[mark] & ~reads["comma" if mark == "point" else "point"]
             votes[mark] += int(np.count_nonzero(only))
             if only.any():
                 firsts.setdefault(mark, (cells.role, int(np.argmax(only))))

@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+from collections.abc import Iterable, Iterator
 from typing import Any
 
 import numpy as np
@@ -31,32 +32,21 @@ def read_parquet(source: Source, kind: Kind) -> TextTable:
         If it is damaged, too large, or has no rows.
     """
     try:
-        file = pq.ParquetFile(
-            pa.BufferReader(pa.py_buffer(source.data)),
-            thrift_string_size_limit=_DESCRIPTION, thrift_container_size_limit=_DESCRIPTION // 16,
-            page_checksum_verification=True,
-        )  # fmt: skip
+        file = _opened(source, [])
         if file.metadata.num_rows > MOST_ROWS:
             raise Refused("file-too-large", size=f"{file.metadata.num_rows:,} rows", limit=f"{MOST_ROWS:,}", packed="")
         flat = [field.name for field in file.schema_arrow if not pa.types.is_nested(field.type)]
         # text that repeats is kept once while it is read: a few bytes could stand for gigabytes
         text = [field.name for field in file.schema_arrow if _is_text(field.type)]
-        file = pq.ParquetFile(pa.BufferReader(pa.py_buffer(source.data)), read_dictionary=text)
-        batches, size = [], 0
-        for batch in file.iter_batches(batch_size=_BATCH, columns=flat):
-            size += batch.nbytes
-            if size > LARGEST_FILE:
-                raise Refused(
-                    "file-too-large", size="more", limit=in_units(LARGEST_FILE), packed=" when it is unpacked"
-                )
-            batches.append(batch)
-        table = pa.Table.from_batches(batches) if batches else None
-    except (pa.ArrowException, OSError, ValueError, MemoryError, UnicodeDecodeError) as error:
+        batches = list(_within_bounds(_opened(source, text).iter_batches(batch_size=_BATCH, columns=flat)))
+        if not any(batch.num_rows for batch in batches):
+            raise Refused("no-rows")
+        table = pa.Table.from_batches(batches)
+        table.validate(full=True)
+        columns = [_plain(column.combine_chunks()) for column in table.columns]
+    except (pa.ArrowException, OSError, ValueError, MemoryError) as error:
         reason = str(error).splitlines()[0] if str(error) else type(error).__name__
         raise Refused("damaged-file", what="a Parquet file", reason=reason) from None
-    if table is None or table.num_rows == 0:
-        raise Refused("no-rows")
-    columns = [_plain(column.combine_chunks(), name) for name, column in zip(table.column_names, table.columns)]
     return TextTable(
         file=source.file,
         kind=kind,
@@ -68,6 +58,35 @@ def read_parquet(source: Source, kind: Kind) -> TextTable:
         ragged=(),
         dialect=Dialect(separator=None),
     )
+
+
+def _opened(source: Source, read_dictionary: list[str]) -> pq.ParquetFile:
+    return pq.ParquetFile(
+        pa.BufferReader(pa.py_buffer(source.data)),
+        read_dictionary=read_dictionary,
+        thrift_string_size_limit=_DESCRIPTION,
+        thrift_container_size_limit=_DESCRIPTION // 16,
+        page_checksum_verification=True,
+    )
+
+
+def _within_bounds(batches: Iterable[pa.RecordBatch]) -> Iterator[pa.RecordBatch]:
+    """The same batches, as long as they are not too much together."""
+    size = 0
+    dictionaries: set[int] = set()
+    for batch in batches:
+        for column in batch.columns:
+            if not pa.types.is_dictionary(column.type):
+                size += column.nbytes
+                continue
+            size += column.indices.nbytes
+            # batches share a dictionary
+            if (address := column.dictionary.buffers()[-1].address) not in dictionaries:
+                dictionaries.add(address)
+                size += column.dictionary.nbytes
+        if size > LARGEST_FILE:
+            raise _too_large()
+        yield batch
 
 
 def dates_of(column: pa.Array) -> tuple[Dates, Mask]:
@@ -102,12 +121,17 @@ def floats_of(column: pa.Array) -> tuple[Floats, Mask, Mask]:
     return values, np.isnan(values) & ~infinite, infinite
 
 
-def _plain(column: Any, name: str) -> pa.Array:
+def _too_large() -> Refused:
+    limit = in_units(LARGEST_FILE)
+    return Refused("file-too-large", size=f"more than {limit}", limit=limit, packed=" when it is unpacked")
+
+
+def _plain(column: Any) -> pa.Array:
     """Text as text, once it is known that it is not too much."""
     if pa.types.is_dictionary(column.type):
         lengths = pc.take(pc.binary_length(column.dictionary), column.indices)
         if (pc.sum(lengths).as_py() or 0) > LARGEST_FILE:
-            raise Refused("file-too-large", size="more", limit=in_units(LARGEST_FILE), packed=" when it is unpacked")
+            raise _too_large()
         column = column.dictionary_decode()
     if _is_text(column.type):
         return pc.fill_null(pc.cast(column, pa.string()), "")

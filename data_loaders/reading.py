@@ -113,7 +113,8 @@ def _columns(given: Sequence[str]) -> dict[Kind, tuple[tuple[str, str], ...]]:
             raise ReadingError("--map", f"{text!r}: there is no file {kind!r}; it is one of {', '.join(FILES)}")
         role = _role(kind, role, text)
         if role in dict(mapped[kind]):
-            raise ReadingError("--map", f"{text!r}: '{role}' of the {kind} file is already {dict(mapped[kind])[role]!r}")
+            already = dict(mapped[kind])[role]
+            raise ReadingError("--map", f"{text!r}: '{role}' of the {kind} file is already {already!r}")
         if taken := [other for other, used in mapped[kind] if used == name.strip()]:
             raise ReadingError("--map", f"{text!r}: {name.strip()!r} of the {kind} file is already its '{taken[0]}'")
         mapped[kind].append((role, name.strip()))

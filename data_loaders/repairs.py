@@ -6,9 +6,8 @@ from dataclasses import dataclass, replace
 from typing import Literal
 
 import numpy as np
-import pyarrow as pa
 
-from .csv_files import Table
+from .tables import Table
 
 RepairKind = Literal["sorted", "unit", "appended"]
 
@@ -31,15 +30,7 @@ def sort_by_date(table: Table) -> tuple[Table, Repair | None]:
         return table, None
     newest_first = bool((table.dates[1:] < table.dates[:-1]).all())
     what = "rows were newest first" if newest_first else "rows were out of order"
-    rows = pa.array(order)
-    table = replace(
-        table,
-        dates=table.dates[order],
-        lines=table.lines[order],
-        numbers={role: values[order] for role, values in table.numbers.items()},
-        missing={role: mask[order] for role, mask in table.missing.items()},
-        texts={role: column.take(rows) for role, column in table.texts.items()},
-    )
+    table = table.rows(order)
     return table, Repair(file=table.file, kind="sorted", rows=moved, what=f"{what}; sorted by date, oldest first")
 
 

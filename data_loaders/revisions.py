@@ -58,12 +58,12 @@ class Revised:
 
     def __str__(self) -> str:
         said = []
-        if self.changed == 1:
-            said.append(f"1 value revised, on {self.day} from {self.was:.10g} to {self.now:.10g}")
-        elif self.changed:
-            said.append(
-                f"{self.changed:,} values revised, the largest on {self.day} from {self.was:.10g} to {self.now:.10g}"
-            )
+        if self.was is not None and self.now is not None:
+            was, now = f"{self.was:.10g}", f"{self.now:.10g}"
+            if was == now:
+                was, now = repr(self.was), repr(self.now)
+            values, largest = ("1 value", "") if self.changed == 1 else (f"{self.changed:,} values", "the largest ")
+            said.append(f"{values} revised, {largest}on {self.day} from {was} to {now}")
         if self.appeared:
             said.append(f"{self.appeared:,} where there was none")
         if self.vanished:

@@ -15,8 +15,8 @@ SCHEMA_VERSION = 1
 
 #: What a cell may hold, without regard to case, to say that there is no value.
 MISSING_TEXTS = (
-    "", ".", "-", "--", "\u2013", "\u2014", "na", "n/a", "n.a.", "#n/a", "#na", "#n/a n/a", "<na>", "nd", "null", "(null)",
-    "none", "nil", "missing",
+    "", ".", "-", "--", "\u2013", "\u2014", "na", "n/a", "n.a.", "#n/a", "#na", "#n/a n/a", "<na>", "nd", "null",
+    "(null)", "none", "nil", "missing",
 )  # fmt: skip
 #: Text of numbers that are none: a problem in price and dividend files, a missing value in vol and rate files.
 NAN_TEXTS = ("nan", "-nan", "+nan")
@@ -33,7 +33,7 @@ RATE_PERCENT_RANGE = (-100.0, 100.0)
 #: Longest tenor a vol column may be named by, in days.
 LONGEST_TENOR = 10_000
 
-Kind = Literal["prices", "vol", "dividends", "rates"]
+Kind = Literal["prices", "vol", "dividends", "rates", "signal"]
 #: What a missing value means: a problem of this code, no value, or zero.
 Missing = Literal["missing-price", "missing-dividend", "absent", "zero"]
 Sign = Literal["positive", "not negative", "any"]
@@ -167,6 +167,17 @@ FILES: dict[Kind, FileSchema] = {
                 role="rate", meaning="annual effective rate, percent a year", exact=("rate",),
                 synonyms=_RATE_NAMES,
                 fallbacks=("close", *_CLOSE_NAMES), required=True,
+            ),
+        ),
+        sole_column=True, nan_is_missing=True,
+    ),
+    "signal": FileSchema(
+        kind="signal",
+        date=_DATE,
+        value_columns=(
+            Column(
+                role="signal", meaning="1 while the signal is on, 0 while it is off", exact=("on", "signal"),
+                synonyms=("active", "state", "flag"), fallbacks=("value",), required=True,
             ),
         ),
         sole_column=True, nan_is_missing=True,

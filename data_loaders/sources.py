@@ -32,7 +32,7 @@ LARGEST_FILE = 1 << 30
 #: Longest line, in bytes.
 LONGEST_LINE = 1 << 20
 #: A file that grows more than this many times when it is unpacked, once past the second, is a trap and no table.
-LARGEST_GROWTH, UNSUSPECTED = 200, 64 << 20
+LARGEST_GROWTH, UNSUSPECTED = 100, 64 << 20
 #: An archive may list this many files, in a directory of so many bytes.
 MOST_MEMBERS, LARGEST_DIRECTORY = 1000, 1 << 20
 #: Memory that unpacking xz may ask for (its largest usual setting takes 65 MiB).
@@ -124,16 +124,14 @@ def read_source(path: Path, kind: Kind, problems: Problems) -> Source | None:
 def _opened(path: Path) -> BinaryIO:
     """The file, open, if it is a regular one; a pipe that nobody writes to must not make us wait."""
 
-    def without_waiting(name: str, flags: int) -> int:
-        return os.open(name, flags | getattr(os, "O_NONBLOCK", 0))
-
     mode = path.stat().st_mode
     if stat.S_ISREG(mode):
-        file = path.open("rb", buffering=0, opener=without_waiting)
+        flags = os.O_RDONLY | getattr(os, "O_NONBLOCK", 0) | getattr(os, "O_BINARY", 0)
+        file = os.fdopen(os.open(path, flags), "rb")
         # what was a file a moment ago may be something else now
         mode = os.fstat(file.fileno()).st_mode
         if stat.S_ISREG(mode):
-            return file  # type: ignore[return-value]  # a raw file reads and seeks like any other
+            return file
         file.close()
     raise Refused("not-a-file", what="a folder" if stat.S_ISDIR(mode) else "a pipe, socket or device")
 
@@ -141,7 +139,7 @@ def _opened(path: Path) -> BinaryIO:
 def _whole(file: BinaryIO) -> tuple[bytearray, str]:
     """All bytes of a file and their sha256; text is watched while it comes in."""
     if (size := os.fstat(file.fileno()).st_size) > LARGEST_FILE:
-        raise Refused("file-too-large", size=in_units(size), limit=in_units(LARGEST_FILE), packed="")
+        raise _too_large(in_units(size))
     digest = hashlib.sha256()
     watch: Callable[[bytes], None] | None = None
     data = bytearray()
@@ -154,8 +152,13 @@ def _whole(file: BinaryIO) -> tuple[bytearray, str]:
         digest.update(chunk)
         data += chunk
         if len(data) > LARGEST_FILE:  # it grew while it was read
-            raise Refused("file-too-large", size="more", limit=in_units(LARGEST_FILE), packed="")
+            raise _too_large()
     return data, digest.hexdigest()
+
+
+def _too_large(size: str | None = None, packed: str = "") -> Refused:
+    limit = in_units(LARGEST_FILE)
+    return Refused("file-too-large", size=size or f"more than {limit}", limit=limit, packed=packed)
 
 
 class _Watch:
@@ -203,15 +206,23 @@ def _unpacked(raw: bytearray, packed: str) -> bytearray:
                 watch(chunk)
             data += chunk
             if len(data) > LARGEST_FILE:
-                limit = in_units(LARGEST_FILE)
-                raise Refused("file-too-large", size="more", limit=limit, packed=" when it is unpacked")
+                raise _too_large(packed=" when it is unpacked")
             if len(data) > UNSUSPECTED and len(data) > LARGEST_GROWTH * len(raw):
                 raise Refused(
                     "grows-too-much", size=in_units(len(raw)), unpacked=in_units(len(data)), limit=LARGEST_GROWTH
                 )
-    except (EOFError, OSError, lzma.LZMAError, zipfile.BadZipFile, NotImplementedError, zlib.error) as error:
-        raise Refused("damaged-file", what=f"packed with {packed}", reason=str(error) or "it ends early") from None
+    except (OSError, lzma.LZMAError, zipfile.BadZipFile, NotImplementedError, zlib.error) as error:
+        raise _damaged(packed, str(error) or "it is not whole") from None
+    except EOFError:
+        raise _damaged(packed, "it ends early") from None
+    except (ValueError, RuntimeError, LookupError, ArithmeticError, struct.error):
+        # what the standard library says where an archive points outside itself
+        raise _damaged(packed, "its parts do not fit together") from None
     return data
+
+
+def _damaged(packed: str, reason: str) -> Refused:
+    return Refused("damaged-file", what=f"a file packed with {packed}", reason=reason)
 
 
 def _chunks(raw: bytearray, packed: str) -> Iterator[bytes]:
@@ -267,7 +278,7 @@ def _zip_pieces(raw: bytearray) -> Iterator[bytes]:
             more = ", ..." if len(files) > _SHOWN_MEMBERS else ""
             raise Refused("many-members", count=len(files), names=f" ({shown}{more})" if files else "")
         if files[0].flag_bits & 1:
-            raise Refused("damaged-file", what="a zip archive", reason="it asks for a password")
+            raise _damaged("zip", "it asks for a password")
         with archive.open(files[0]) as member:
             yield from _pieces(member)
 

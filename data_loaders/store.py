@@ -30,6 +30,7 @@ from .errors import StoreError
 from .history import History, SourceFile
 from .locks import PATIENCE, only_writer
 from .names import LONGEST_NAME, SUFFIX, check_name, history_file, history_names
+from .reading import Reading
 from .repairs import Repair
 from .revisions import Changes, changes_between
 from .schema import SCHEMA_VERSION
@@ -347,8 +348,8 @@ def _from_arrow(table: pa.Table, facts: dict[str, Any], path: Path) -> History:
 
 def _source(entry: dict[str, Any]) -> SourceFile:
     dates = {name: dt.date.fromisoformat(entry[name]) for name in ("first", "last")}
-    columns = tuple((role, name) for role, name in entry["columns"])
-    return SourceFile(**{**entry, **dates, "columns": columns})
+    pairs = {name: tuple((one, two) for one, two in entry.get(name, ())) for name in ("columns", "taken")}
+    return SourceFile(**{**entry, **dates, **pairs, "reading": Reading.from_stored(entry.get("reading", {}))})
 
 
 def _iso(value: object) -> str:

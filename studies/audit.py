@@ -173,6 +173,7 @@ def _history_of(audited: Audited, source: dict[str, Any], end: str | None) -> tu
         return None, ""
     history = load_history(
         prices=found["prices"], vol=found.get("vol"), dividends=found.get("dividends"), rates=found.get("rates"),
+        signal=found.get("signal"),
         vol_unit=unit, needed_to=None if end is None else pd.Timestamp(end).date(),
     )  # fmt: skip
     return history, found["prices"].stem

@@ -37,7 +37,7 @@ SAME, DIFFERS, OTHER_DATA = "same", "differs", "other data"
 #: Of one file, as many keys that differ are told.
 KEYS_TOLD = 5
 #: Files a replay is made from.
-KINDS = ("prices", "vol", "dividends", "rates")
+KINDS = ("prices", "vol", "dividends", "rates", "signal")
 
 
 @dataclass(frozen=True, slots=True, kw_only=True)

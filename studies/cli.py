@@ -15,18 +15,38 @@ from typing import Annotated
 
 import typer
 
-from .options import Account, Append, AsJson, Dividends, First, Last, Prices, Rates, Roll, Store, Unit, Vol, VolQuote
+from .options import (
+    Account,
+    Append,
+    AsJson,
+    Columns,
+    DateFormat,
+    DecimalMark,
+    Dividends,
+    First,
+    Last,
+    Portfolio,
+    Prices,
+    Rates,
+    Roll,
+    Signal,
+    Store,
+    Symbol,
+    SymbolColumn,
+    Unit,
+    Vol,
+    VolQuote,
+)
 from .wiring import (
     history_and_source,
     overlay_of,
     replay_and_write,
     say,
     show_summary_of,
-    store_option,
     tell_history,
     with_options,
 )
-from .wiring_histories import histories, load_for, store_and_tell
+from .wiring_histories import histories
 from .wiring_next import next_roll
 from .wiring_overlays import app as overlays_app
 
@@ -59,26 +79,29 @@ def load(
     vol: Vol = None,
     dividends: Dividends = None,
     rates: Rates = None,
+    signal: Signal = None,
     vol_unit: Unit = None,
+    date_format: DateFormat = None,
+    decimal: DecimalMark = None,
+    columns: Columns = None,
+    symbol_column: SymbolColumn = None,
+    symbol: Symbol = None,
     first: First = None,
     last: Last = None,
     append: Append = False,
     store: Store = Path("histories"),
 ) -> None:
-    """Check CSV files and store them as one history. Nothing is written if anything is wrong."""
-    from data_loaders import load_history
-    from data_loaders.store import check_name
+    """Check CSV files (or Parquet, packed or not) and store them as one history, or one of each symbol.
 
-    check_name(name)
-    history = load_for(
-        lambda unit: load_history(
-            prices=prices, vol=vol, dividends=dividends, rates=rates, vol_unit=unit,
-            first_day=first.date() if first else None, last_day=last.date() if last else None,
-        ),
-        vol_unit.value if vol_unit else None, store, name, append=append,
+    Nothing is written if anything is wrong.
+    """
+    from .wiring_load import load_and_store
+
+    load_and_store(
+        name, {"prices": prices, "vol": vol, "dividends": dividends, "rates": rates, "signal": signal}, mapping=columns,
+        date_format=date_format, decimal=decimal, symbol_column=symbol_column, symbol=symbol, vol_unit=vol_unit,
+        first=first, last=last, append=append, store=store,
     )  # fmt: skip
-    store_and_tell(history, store, name, append=append)
-    say(f"Next: rollband replay {shlex.quote(name)} --put 95 --call 110" + store_option(store))
 
 
 @app.command()
@@ -107,6 +130,7 @@ def replay(
     vol: Vol = None,
     dividends: Dividends = None,
     rates: Rates = None,
+    signal: Signal = None,
     vol_unit: Unit = None,
     rate: Annotated[float | None, typer.Option("--rate", help="Constant rate, percent a year.")] = None,
     dividend_yield: Annotated[
@@ -129,6 +153,7 @@ def replay(
     ] = None,
     commission: Annotated[float | None, typer.Option("--commission", help="Money a contract.")] = None,
     multiplier: Annotated[float | None, typer.Option("--multiplier", help="Shares a contract (default 100).")] = None,
+    portfolio: Portfolio = None,
     stock_bps: Annotated[
         float | None,
         typer.Option("--stock-bps", help="Cost of stock traded when packages are resized, in basis points."),
@@ -155,13 +180,13 @@ def replay(
         roll,
     )
     agreed = with_options(
-        agreed, account=account, vol_quote=vol_quote, smile=smile,
+        agreed, account=account, vol_quote=vol_quote, smile=smile, portfolio=portfolio,
         costs={
             "half_spread_vol": half_spread_vol, "half_spread_percent": half_spread_percent, "commission": commission,
             "multiplier": multiplier, "stock_bps": stock_bps,
         },
     )  # fmt: skip
-    files = {"prices": prices, "vol": vol, "dividends": dividends, "rates": rates}
+    files = {"prices": prices, "vol": vol, "dividends": dividends, "rates": rates, "signal": signal}
     history, label, source = history_and_source(name, files, vol_unit=vol_unit, last=last, store=store)
     window = {"start": first.date().isoformat() if first else None, "end": last.date().isoformat() if last else None}
     replay_and_write(

@@ -62,6 +62,7 @@ def with_options(
     account: Account | None,
     vol_quote: VolQuote | None,
     smile: str | None,
+    portfolio: float | None,
     costs: dict[str, float | None],
 ) -> OverlayFile:
     """Options given on the command line replace what the overlay file says."""
@@ -76,6 +77,8 @@ def with_options(
     volatility: Volatility = agreed.volatility
     if account is not None:
         overlay = replace(overlay, account=account.value)
+    if portfolio is not None:
+        overlay = replace(overlay, portfolio=portfolio)
     if vol_quote is not None:
         volatility = replace(volatility, quote="at the money" if vol_quote is VolQuote.atm else "variance swap")
     if smile is not None:
@@ -117,6 +120,7 @@ def history_and_source(
         raise typer.BadParameter("say which history: a stored NAME, or --prices FILE", param_hint="NAME")
     history = load_history(
         prices=prices, vol=files.get("vol"), dividends=files.get("dividends"), rates=files.get("rates"),
+        signal=files.get("signal"),
         vol_unit=vol_unit.value if vol_unit else None, needed_to=last.date() if last else None,
     )  # fmt: skip
     typed = {kind: str(path) for kind, path in files.items() if path is not None}
@@ -181,13 +185,30 @@ def working(what: str) -> Iterator[Callable[[str], None]]:
 
 
 def tell_history(history: Any) -> None:
-    """What was read, what was changed in it, and what is worth knowing."""
+    """What was taken for what, what was read, what was changed in it, and what is worth knowing."""
+    tell_taken(history)
     for source in history.sources:
         say(f"  {source.kind}: {source.rows} rows, {source.first} to {source.last}, from {source.file}")
     for repair in history.repairs:
         say(f"  changed: {repair.what}")
+    tell_notes(history)
+
+
+def tell_taken(history: Any) -> None:
+    """How each file was read, as a short table."""
+    width = max((len(source.file) for source in history.sources if source.taken), default=0)
+    for source in history.sources:
+        for i, (word, description) in enumerate(source.taken):
+            say(f"  {source.file if i == 0 else '':{width}}  {word:8}  {description}")
+
+
+def tell_notes(history: Any) -> None:
+    """What is worth knowing and not in that table."""
+    from data_loaders.loading import is_told
+
     for note in history.notes:
-        say(f"  note: {note}")
+        if not is_told(note):
+            say(f"  note: {note}")
 
 
 def store_option(store: Path) -> str:

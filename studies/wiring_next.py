@@ -89,14 +89,14 @@ def next_roll(
         roll,
     )
     agreed = with_options(
-        agreed, account=None, vol_quote=vol_quote, smile=smile,
+        agreed, account=None, vol_quote=vol_quote, smile=smile, portfolio=None,
         costs={
             "half_spread_vol": half_spread_vol, "half_spread_percent": half_spread_percent, "commission": commission,
             "multiplier": multiplier,
         },
     )  # fmt: skip
     history, label = history_of(
-        name, dict.fromkeys(("prices", "vol", "dividends", "rates")), vol_unit=None, last=None, store=store
+        name, dict.fromkeys(("prices", "vol", "dividends", "rates", "signal")), vol_unit=None, last=None, store=store
     )
     market = Market.from_frame(
         history.frame,

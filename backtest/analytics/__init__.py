@@ -3,12 +3,14 @@
 from .attribution import Attribution, attribute
 from .comparisons import Mixes, mixes
 from .drawdowns import Drawdown, deepest_drawdown, drawdown_path
+from .greeks import Greeks, greeks_of
 from .performance import Performance, performance
 from .roll_costs import LegCosts, RollCosts, roll_costs
 
 __all__ = [
     "Attribution",
     "Drawdown",
+    "Greeks",
     "LegCosts",
     "Mixes",
     "Performance",
@@ -16,6 +18,7 @@ __all__ = [
     "attribute",
     "deepest_drawdown",
     "drawdown_path",
+    "greeks_of",
     "mixes",
     "performance",
     "roll_costs",

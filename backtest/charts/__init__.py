@@ -11,7 +11,7 @@ from .comparisons import (
     waterfall,
     yearly_bars,
 )
-from .paths import CLOSE_YEARS, band_chart, drawdown_chart, growth_chart, last_years, replay_figures
+from .paths import CLOSE_YEARS, band_chart, drawdown_chart, exposure_chart, growth_chart, last_years, replay_figures
 from .style import CALL, COST, DASHES, HOLD, MARKERS, MIX, OVERLAY, PUT, legend_above, plain, signed
 
 __all__ = [
@@ -27,6 +27,7 @@ __all__ = [
     "band_chart",
     "contribution_bars",
     "drawdown_chart",
+    "exposure_chart",
     "growth_chart",
     "interval_chart",
     "last_years",

@@ -1,4 +1,4 @@
-"""Charts of paths over time: growth of 1, drawdown, and the band of strikes around the price."""
+"""Charts of paths over time: growth of 1, drawdown, exposure, and the band of strikes around the price."""
 
 from __future__ import annotations
 
@@ -11,7 +11,7 @@ import numpy.typing as npt
 from ..analytics.drawdowns import drawdown_path
 from ..engine.leg_replay import LegReplay
 from ..engine.result import Replay
-from .style import CALL, DASHES, HOLD, MIX, OVERLAY, PUT, bare, legend_above, plain, plain_ink, time_axis
+from .style import CALL, DASHES, HOLD, MINUS, MIX, OVERLAY, PUT, bare, legend_above, plain, plain_ink, time_axis
 
 if TYPE_CHECKING:
     from matplotlib.axes import Axes
@@ -56,6 +56,25 @@ def drawdown_chart(axes: Axes, *, dates: Dates, series: Mapping[str, tuple[str, 
     axes.yaxis.set_major_formatter(lambda value, _: plain(value))
     axes.set_ylabel("percent below the former peak")
     legend_above(axes)
+    return bare(axes, keep=("left", "bottom"))
+
+
+def exposure_chart(axes: Axes, *, dates: Dates, values: Array, unit: str) -> Axes:
+    """One exposure of the overlay over time, such as its delta, with a line at zero.
+
+    Parameters
+    ----------
+    axes : matplotlib Axes
+    dates : ndarray of datetime64, shape (day,)
+    values : ndarray, shape (day,)
+        In ``unit``, which is written beside the axis; may end in NaN.
+    """
+    axes.plot(dates, values, color=OVERLAY, linewidth=1.0)
+    axes.axhline(0.0, color=plain_ink(), linewidth=0.6)
+    axes.margins(x=0.0)
+    time_axis(axes)
+    axes.yaxis.set_major_formatter(lambda value, _: f"{value:g}".replace("-", MINUS))
+    axes.set_ylabel(unit)
     return bare(axes, keep=("left", "bottom"))
 
 

@@ -205,6 +205,19 @@ def _marks(
     return mark, delta
 
 
+def held_days(plan: Plan, paths: LegPaths) -> tuple[Days, DayState]:
+    """The days on which the legs of a group hold an option after the day's trades, and what pricing needs of those.
+
+    Returns
+    -------
+    days : ndarray of int
+        Counted from the first day of the window.
+    """
+    days = np.flatnonzero(paths.roll_of_day >= 0)
+    expiry_day = paths.schedule.expiry_day[paths.roll_of_day[days]]
+    return days, day_state(plan.market, paths.group, days + plan.start, expiry_day)
+
+
 def _held_marks(daily: DayState, strike: Array, roll_of_day: Days, signs: Array) -> tuple[Array, Array]:
     """Mid and delta on days that all have an option, in blocks that fit the cache."""
     legs, days = strike.shape[0], len(roll_of_day)

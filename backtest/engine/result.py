@@ -15,10 +15,14 @@ from ..volatility.sources import Volatility
 from .exact_accounts import ExactAccount
 from .families import FamilyReplay
 from .leg_replay import LegReplay, counted, held, leg_labels, of_day
+from .legs import held_days
 from .plan import BookKey
 
 if TYPE_CHECKING:
     import pandas as pd
+
+    from ..analytics.greeks import Greeks
+    from ..pricing.day_state import DayState
 
 Array = npt.NDArray[np.float64]
 
@@ -139,6 +143,13 @@ class Replay:
         return self.shares * self.spot / self.wealth + self.leg_dollar_delta.sum(axis=0)
 
     @cached_property
+    def greeks(self) -> Greeks:
+        """Gamma, vega, theta and rho of the package and of each leg, per unit of wealth, after each day's trades."""
+        from ..analytics.greeks import greeks_of
+
+        return greeks_of(self)
+
+    @cached_property
     def leg_profit(self) -> Array:
         """Profit at mid of each leg over each day, before costs, shape ``(leg, day)``; zero on the first."""
         profit = np.zeros((len(self.legs), len(self)))
@@ -194,8 +205,17 @@ class Replay:
     def _rows(self) -> tuple[int, ...]:
         return self._family.holdings[self._member]
 
+    def held_days(self, leg: int) -> tuple[npt.NDArray[np.intp], DayState]:
+        """The days on which a leg, counted from 0, holds an option after the day's trades, and their forward, discount,
+        time to expiry and smile; each of shape ``(held day,)``.
+        """
+        return held_days(self._plan, self._leg_paths[self._key(self._rows[leg]).group])
+
+    def _key(self, number: int) -> BookKey:
+        return list(self._family.books)[number]
+
     def _leg(self, label: str, leg: Leg, number: int, count: Array) -> LegReplay:
-        key: BookKey = list(self._family.books)[number]
+        key = self._key(number)
         paths, rolls, row = self._leg_paths[key.group], self._book_rolls[number], key.row
         schedule = paths.schedule
         opened = schedule.opened - self._plan.start
@@ -225,9 +245,10 @@ class Replay:
     def to_frame(self) -> pd.DataFrame:
         """Daily paths as a pandas frame indexed by ``date`` (C14, without the mixes).
 
-        Columns: ``overlay``, ``hold`` (growth of 1), ``delta`` (dollar delta over wealth), ``cash``,
-        ``option_value``, ``shares``, ``units`` (per 1 of starting wealth), and for each leg
-        ``<leg>_strike`` and ``<leg>_mark`` in price.
+        Columns: ``overlay``, ``hold`` (growth of 1), ``delta`` (dollar delta over wealth), ``gamma``, ``vega``,
+        ``theta``, ``rho`` (money per unit of wealth, for 1% of spot, 1 vol point, 1 calendar day and 1 percentage
+        point of rate; see :class:`backtest.analytics.Greeks`), ``cash``, ``option_value``, ``shares``, ``units`` (per
+        1 of starting wealth), and for each leg ``<leg>_strike`` and ``<leg>_mark`` in price.
         """
         import pandas as pd
 
@@ -235,6 +256,7 @@ class Replay:
             "overlay": self.wealth,
             "hold": self.hold,
             "delta": self.delta,
+            **self.greeks.package(),
             "cash": self.cash,
             "option_value": self.option_value,
             "shares": self.shares,

@@ -20,8 +20,8 @@ Every step is kept inside a bracket that shrinks, and halves it where Newton lea
 
 Error: at most 25 roundings of ``s`` (two or three as a rule), plus ``uncertainty``: what the price's own rounding
 (2.2e-16 of it, and ``price_error`` if given) leaves open, that over vega and ``s``. For a price out of the money it is
-below 2.2e-16; deep in the money the time value is a small difference of large numbers, and it says how many digits are
-left.
+2.2e-16 or less, and more only towards the upper bound; deep in the money the time value is a small difference of large
+numbers, and it says how many digits are left.
 """
 
 from __future__ import annotations
@@ -131,8 +131,9 @@ def implied_stdev(
     if ok.any():
         f, k = f[ok], k[ok]
         scale = np.sqrt(f) * np.sqrt(k)
-        # log1p keeps the digits of a strike next to the forward
-        x = -np.abs(np.where(np.abs(f - k) < 0.5 * k, np.log1p((f - k) / k), np.log(f / k)))
+        apart = (f - k) / k
+        near = np.abs(apart) < 0.5  # log1p keeps the digits of a strike next to the forward
+        x = -np.abs(np.where(near, np.log1p(np.where(near, apart, 0.0)), np.log(f) - np.log(k)))
         stdev[ok] = _solve(x, time_value[ok] / scale, to_bound[ok] / scale)
         vega = np.exp(_log_density(x, stdev[ok])) * scale
         with np.errstate(divide="ignore", over="ignore"):

@@ -1,4 +1,4 @@
-"""The charts of paths: growth, drawdown, and the band over time, each with the line it is read by."""
+"""The charts of paths: growth, drawdown, the band and the exposure over time, each with the line it is read by."""
 
 from __future__ import annotations
 
@@ -43,6 +43,27 @@ def band_pictures(found: Answer) -> Iterator[Picture]:
             charts.band_chart(figure.subplots(), replay=replay, first=close)
             title = f"Price and strikes, the last {charts.CLOSE_YEARS} years"
             yield picture_of(figure, "band-close", title, "The same lines and colours as above, nearer.")
+
+
+def exposure_picture(found: Answer) -> Picture | None:
+    """Dollar delta and vega of the package over time; none where the overlay's wealth ends before the history does."""
+    replay = found.replay
+    if not np.isfinite(replay.wealth).all():
+        return None
+    delta, vega = 100 * replay.delta, 10_000 * replay.greeks.package()["vega"]
+    chosen = decimated(delta, vega)
+    with page_style():
+        figure = new_figure(3.6)
+        upper, lower = figure.subplots(2, 1, sharex=True)
+        for axes, values, unit in ((upper, delta, "delta, percent"), (lower, vega, "vega, basis points")):
+            charts.exposure_chart(axes, dates=replay.dates[chosen], values=values[chosen], unit=unit)
+        said = (
+            f"Delta is what moves with the share, in percent of wealth: from {number(float(delta.min()), 0)} to "
+            f"{number(float(delta.max()), 0)}, {number(float(delta.mean()), 0)} on average. Vega is what one more "
+            f"point on every option vol brings, in basis points of wealth: from {number(float(vega.min()), 1)} to "
+            f"{number(float(vega.max()), 1)}."
+        )
+        return picture_of(figure, "exposure", "Exposure over time", said)
 
 
 def _growth_reading(found: Answer) -> str:

@@ -148,7 +148,7 @@ def ledger(found: Answer, findings: Findings) -> Section:
 def attribution(found: Answer) -> Section:
     """Parts of the excess return with their shares of risk."""
     picture, parts = drawn.attribution_picture(found)
-    blocks = _blocks(picture, costs.attribution_table(parts) if parts else None)
+    blocks = _blocks(picture, costs.attribution_table(parts) if parts else None, paths.exposure_picture(found))
     return Section(
         anchor="attribution", title="Attribution", question="What was the return a reward for?",
         blocks=blocks or [Prose("No attribution can be had: the overlay's wealth ends before the history does.")],

@@ -69,6 +69,18 @@ def test_drawdown_is_the_fall_below_the_highest_so_far_in_percent() -> None:
     np.testing.assert_allclose(lines_by_label(axes)["overlay"], [0, 0, -50, -25], rtol=1e-15)
 
 
+def test_an_exposure_is_a_line_around_zero_in_its_unit() -> None:
+    axes = Figure().subplots()
+    dates = np.arange("2020-01-01", "2020-01-06", dtype="datetime64[D]")
+    values = np.array([12.0, -3.0, 0.0, 7.5, np.nan])
+    assert charts.exposure_chart(axes, dates=dates, values=values, unit="vega, basis points") is axes
+    line, zero = axes.lines
+    np.testing.assert_array_equal(np.asarray(line.get_ydata()), values)
+    assert list(zero.get_ydata()) == [0.0, 0.0]
+    assert axes.get_ylabel() == "vega, basis points"
+    assert [axes.yaxis.get_major_formatter()(value) for value in (-20.0, 0.0, 2.5, 0.05)] == ["−20", "0", "2.5", "0.05"]
+
+
 def test_the_band_has_a_line_per_option_a_tick_per_roll_and_a_dot_where_it_paid(two_years: Replay) -> None:
     axes = Figure().subplots()
     charts.band_chart(axes, replay=two_years)

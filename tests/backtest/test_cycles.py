@@ -98,6 +98,13 @@ def test_around_the_ends_of_the_file(month: str, shift_days: int, expected: tupl
     assert last_day(MARCH_2008, month, shift_days) == expected
 
 
+def test_a_month_before_the_file_that_ends_on_a_weekend() -> None:
+    # 31 August 2008 is a Sunday: the trading day after Friday the 29th is Monday 1 September, the file's first
+    dates = weekdays("2008-09-01", "2008-09-30")
+    assert last_day(dates, "2008-08", 1) == ("2008-09-01", 0)
+    assert last_day(dates, "2008-08", 2) == ("2008-09-02", 1)
+
+
 @pytest.mark.parametrize(("month", "shift_days"), [("2008-02", 0), ("2008-02", -5), ("2008-01", 21), ("2007-06", 0)])
 def test_before_the_file_there_is_none(month: str, shift_days: int) -> None:
     assert last_day(MARCH_2008, month, shift_days)[1] == -1
@@ -220,6 +227,15 @@ def test_a_schedule_of_days() -> None:
         "2020-06-12 2020-06-18 2020-06-12 live",
     ]
     assert found.stub.tolist() == [False, False, False]
+
+
+def test_a_schedule_of_days_with_a_shift() -> None:
+    # rows 3 and 7; the option of row 7 expires on row 13, two weekdays after row 11
+    found = leg_schedule(JUNE_2020, cycle=DaysCycle(every=4, phase=1, shift_days=2), term_months=6, start=3, end=9)
+    assert words(JUNE_2020, found) == [
+        "2020-06-04 2020-06-12 2020-06-10 sold",
+        "2020-06-10 2020-06-18 2020-06-12 live",
+    ]
 
 
 def test_a_stub_of_days_with_a_longer_term() -> None:

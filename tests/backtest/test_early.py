@@ -177,6 +177,19 @@ def test_the_new_option_is_measured_by_its_own_premium() -> None:
     assert set(found.rolls_frame()["expiry"][:4]) == {pd.Timestamp("2020-06-15")}
 
 
+def test_each_roll_by_itself() -> None:
+    """Options of two rolls, at prices that differ by four times, each measured by its own spot and premium."""
+    close = path((3, 110.0), (10, 400.0), (14, 396.0), (17, 440.0), size=21)
+    found = run(close, Early(value_above=2.0, days_left=0), right="call")
+    # doubled: 110 for a strike of 100, then 440 for one of 400; 396 is far above 110, and no reason
+    assert lines(found)[:4] == [
+        "0-3 at 100: replaced, profit taken",
+        "3-10 at 110",
+        "10-17 at 400: replaced, profit taken",
+        "17-20 at 440",
+    ]
+
+
 # ---------------------------------------------------------------- which reason, which days
 
 

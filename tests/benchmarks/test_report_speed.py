@@ -43,7 +43,7 @@ def test_where_the_time_goes(tmp_path: Path) -> None:
     inference = infer(found, seed=1, resamples=RESAMPLES)
     done(f"{RESAMPLES:,} resamples of {len(found.replay):,} days, 6 comparisons")
     page = build_report(found, findings, inference, history="demo", how_to_run="rollband")
-    done("page with 14 charts")
+    done("page with 15 charts")
     _write_pictures(found, tmp_path)
     done("three PNG files")
     report = make_report(found, resamples=100)

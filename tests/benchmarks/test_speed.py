@@ -14,6 +14,7 @@ import pytest
 from scipy.special import ndtr
 
 from backtest import Leg, Market, Overlay, PercentOfSpot, Volatility, replay, replay_many
+from backtest.analytics import greeks_of
 from backtest.engine.legs import price_groups
 from backtest.engine.plan import make_plans
 from tests.reference.slow_prices import history_from_frame
@@ -94,6 +95,16 @@ def test_marks_against_bare_black(market: Market) -> None:
     marks, black = best_times(lambda: price_groups(plan), bare, rounds=15, calls=10)
     print(f"\nmarks {marks * 1e6:.0f} us, bare Black {black * 1e6:.0f} us: {marks / black:.2f} times")
     assert marks / black <= 2.5
+
+
+def test_greeks_against_marks(market: Market) -> None:
+    """Gamma, vega, theta and rho of 20 years against the marks and deltas they belong to."""
+    (plan,) = make_plans(market, [BAND], [VOLATILITY], start=None, end=None, inception=None)
+    result = replay(market, BAND, volatility=VOLATILITY)
+    assert len(result.legs) == 2  # made now, as they would be by whatever else is asked of a replay
+    greeks, marks = best_times(lambda: greeks_of(result), lambda: price_groups(plan), rounds=15, calls=10)
+    print(f"\ngreeks {greeks * 1e6:.0f} us, marks {marks * 1e6:.0f} us: {greeks / marks:.2f} times")
+    assert greeks / marks <= 3.0
 
 
 def test_a_grid_against_single_replays(market: Market) -> None:

@@ -21,8 +21,8 @@ from data_loaders import load_history, read_history, write_history
 from data_loaders.alignment import carried_columns
 from data_loaders.cells import dates_from_text, numbers_from_text
 from data_loaders.checks import gaps, repeated, vol_unit
-from data_loaders.csv_files import Table
 from data_loaders.errors import Problems
+from data_loaders.tables import Table
 
 DAYS = st.dates(date(1800, 1, 1), date(2199, 12, 31))
 PRICES = st.floats(1e-6, 1e12)

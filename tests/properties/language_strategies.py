@@ -33,6 +33,10 @@ from backtest.cycles import ROLL_MONTHS
 
 from .strategies import TENORS, History, Scenario, costs, histories, strike_rules, volatilities, windows
 
+#: Fields of a leg that say when it rolls.
+ROLL_FIELDS = (
+    "roll", "roll_day", "every", "term_months", "term_days", "phase", "shift_days", "close_before", "gate", "early",
+)  # fmt: skip
 WITH_VOLS = tuple(columns for columns in TENORS if columns)
 
 
@@ -207,3 +211,20 @@ def language_scenarios(draw: st.DrawFn, **fields: Any) -> Scenario:
         days = history.frame.index
         window = {"inception": days[days.get_loc(pd.Timestamp(window["inception"])) + 1].date()}
     return Scenario(history=history, overlay=overlay, volatility=draw(volatilities()), window=window)
+
+
+@st.composite
+def financed_scenarios(draw: st.DrawFn, *, decide_lag: int, exact: bool = True) -> Scenario:
+    """Up to three legs of any kind and a sold one that pays for some of them, often on the same days as the first."""
+    base = draw(language_scenarios(laddered=False, decide_lag=decide_lag, steps=False, exact=exact))
+    paid = base.overlay.legs[:3]
+    some = draw(st.lists(st.integers(1, len(paid)), min_size=1, unique=True).map(tuple))
+    first = {name: getattr(paid[0], name) for name in ROLL_FIELDS}
+    seller = Leg(
+        position="short",
+        right=draw(st.sampled_from(["put", "call"])),
+        strike=Financed(draw(st.floats(0.1, 2.0)), some),
+        ratio=draw(st.sampled_from([1.0, 0.5, 1.3])),
+        **draw(st.one_of(st.just(first), cycles())),
+    )
+    return replace(base, overlay=replace(base.overlay, legs=(*paid, seller)))

@@ -217,13 +217,14 @@ def scenarios(draw: st.DrawFn, *, ratio: float | None = None) -> Scenario:
 
 def daily_outputs(found: Replay) -> dict[str, Array]:
     """Every daily path of a replay, the last axis being the day."""
-    return {
+    paths = {
         name: np.asarray(getattr(found, name))
         for name in (
             "wealth", "hold", "delta", "units", "shares", "cash", "option_value", "rate_return",
             "stock_profit", "interest", "trading_cost",
         )
     }  # fmt: skip
+    return paths | found.greeks.package()
 
 
 def leg_outputs(found: Replay) -> list[dict[str, Array]]:

@@ -15,8 +15,8 @@ from hypothesis import strategies as st
 from backtest import Delta, Leg, LegReplay, Overlay, Replay, Volatility
 from backtest.calendar import REASON_WORDS
 
-from .language_strategies import language_scenarios
-from .strategies import RICH, History, Scenario, assert_same_bits, daily_outputs, leg_outputs
+from .language_strategies import financed_scenarios, language_scenarios
+from .strategies import FEWER, RICH, History, Scenario, assert_same_bits, daily_outputs, leg_outputs
 from .test_no_look_ahead import KNOWN_AT_CLOSE, KNOWN_AT_OPEN, NAMES, changed_after, flags_at_open
 
 
@@ -91,7 +91,7 @@ def test_another_future_after_a_day_of_trades(scenario: Scenario, data: st.DataO
     assert_same_up_to(found, expected, day)
 
 
-@RICH
+@FEWER
 @given(scenario=language_scenarios(), share=st.floats(0.0, 1.0))
 def test_where_the_window_ends_changes_nothing_before(scenario: Scenario, share: float) -> None:
     expected = scenario.run()
@@ -131,6 +131,24 @@ def closes(leg: LegReplay, today: int) -> list[tuple[int, int]]:
     """When options were closed up to today, and why."""
     done = leg.done & (leg.closed <= today)
     return list(zip(leg.closed[done].tolist(), leg.schedule.reason[done].tolist(), strict=True))
+
+
+@RICH
+@given(scenario=financed_scenarios(decide_lag=1), data=st.data())
+def test_what_is_financed_the_day_before_does_not_see_todays_premiums(scenario: Scenario, data: st.DataObject) -> None:
+    """What opens beside it on the same day costs, for this purpose, what it looked like costing the day before."""
+    expected = scenario.run()
+    *paid, seller = expected.legs
+    opened = seller.opened[seller.opened < len(expected) - 1]
+    assume(opened.size)
+    beside = np.intersect1d(opened, np.concatenate([leg.opened for leg in paid]))
+    today = data.draw(st.sampled_from((beside if beside.size else opened).tolist()), label="today")
+    event("beside one that it pays for" if beside.size else "alone")
+    found = scenario.run(history=another_future(scenario.history, expected.window.start + today - 1, seed=today))
+    mine, theirs = (run.legs[-1] for run in (found, expected))
+    for name in ("strike", "strike_flags"):
+        now, then = (getattr(leg, name)[leg.opened <= today] for leg in (mine, theirs))
+        assert_same_bits(now, then, name)
 
 
 def test_the_day_before_matters() -> None:

@@ -14,12 +14,13 @@ import numpy.typing as npt
 from hypothesis import assume, given
 from hypothesis import strategies as st
 
-from backtest import Adjusted, Financed, Gate, Leg, LegReplay, Mirrored, Overlay, Replay, SignalOn, replay, replay_many
+from backtest import Adjusted, Gate, Leg, LegReplay, Mirrored, Overlay, Replay, SignalOn, replay, replay_many
 from backtest.engine.families import replay_families
 from backtest.engine.legs import PricedLegs
 
 from .language_strategies import (
     cycles,
+    financed_scenarios,
     gates,
     language_overlays,
     language_scenarios,
@@ -54,7 +55,11 @@ def same_paths(found: Replay, expected: Replay) -> None:
 
 
 @RICH
-@given(scenario=language_scenarios(laddered=False, exact=False), rungs=st.integers(2, 4), data=st.data())
+@given(
+    scenario=language_scenarios(laddered=False, exact=False) | financed_scenarios(decide_lag=0, exact=False),
+    rungs=st.integers(2, 4),
+    data=st.data(),
+)
 def test_a_ladder_without_stagger_is_the_plain_leg(scenario: Scenario, rungs: int, data: st.DataObject) -> None:
     """Whether all legs are cut, or some that name none that are: each tranche pays for its part of what it finances."""
     overlay = scenario.overlay
@@ -132,24 +137,8 @@ def live_option(leg: LegReplay, day: int) -> int | None:
     return None
 
 
-@st.composite
-def financed_scenarios(draw: st.DrawFn) -> Scenario:
-    """Up to three legs of any kind and a sold one that pays for some of them, decided at today's close."""
-    base = draw(language_scenarios(laddered=False, decide_lag=0, steps=False))
-    paid = base.overlay.legs[:3]
-    some = draw(st.lists(st.integers(1, len(paid)), min_size=1, unique=True).map(tuple))
-    seller = Leg(
-        position="short",
-        right=draw(st.sampled_from(["put", "call"])),
-        strike=Financed(draw(st.floats(0.1, 2.0)), some),
-        ratio=draw(st.sampled_from([1.0, 0.5, 1.3])),
-        **draw(cycles()),
-    )
-    return replace(base, overlay=replace(base.overlay, legs=(*paid, seller)))
-
-
 @RICH
-@given(scenario=financed_scenarios())
+@given(scenario=financed_scenarios(decide_lag=0))
 def test_a_financed_strike_nets_to_its_target_at_every_roll(scenario: Scenario) -> None:
     found = scenario.run()
     *others, seller = found.legs
@@ -248,9 +237,9 @@ def test_prices_times_a_factor_change_no_return(scenario: Scenario, factor: floa
         assert mine.opened.tolist() == theirs.opened.tolist()
         assert mine.schedule.reason.tolist() == theirs.schedule.reason.tolist()
         assert mine.strike_flags.tolist() == theirs.strike_flags.tolist()
-        np.testing.assert_allclose(mine.strike / factor, theirs.strike, rtol=1e-11)
+        np.testing.assert_allclose(mine.strike / factor, theirs.strike, rtol=TIGHT)
     days = solvent_days(expected)
-    np.testing.assert_allclose(found.wealth[days], expected.wealth[days], rtol=1e-10)
+    np.testing.assert_allclose(found.wealth[days], expected.wealth[days], rtol=TIGHT)
 
 
 # ---------------------------------------------------------------- who else is replayed

@@ -85,7 +85,7 @@ def strikes(draw: st.DrawFn, *, position: str, named: list[int]) -> Any:
         rules |= st.builds(Mirrored, st.sampled_from(named))
         if position == "short":
             several = st.lists(st.sampled_from(named), min_size=1, unique=True).map(tuple)
-            rules |= st.builds(Financed, number(1, 10) | st.floats(0.0001, 1), legs=several)
+            rules |= st.builds(Financed, number(1, 10) | st.floats(0.01, 1), legs=several)
     rule = draw(rules)
     if draw(st.booleans()):
         return rule
@@ -104,7 +104,9 @@ def legs(draw: st.DrawFn, earlier: dict[int, Leg]) -> Leg:
     """A leg that may name the ones that were made before it, by their numbers."""
     position = draw(st.sampled_from(["long", "short"]))
     ladder = draw(st.just(1) | st.integers(1, 12))
-    named = [one for one, leg in earlier.items() if leg.ladder in (1, ladder)]
+    # the legs that it names have all its tranches, or all have none
+    of_them = draw(st.sampled_from([1, ladder]))
+    named = [one for one, leg in earlier.items() if leg.ladder == of_them]
     strike = draw(strikes(position=position, named=named))
     roll = draw(st.sampled_from([*MONTHS, "days"]))
     # staggered tranches move on by a cycle at most, and no cycle moves by more than 252 days

@@ -52,7 +52,8 @@ FIGURES = {
 }  # fmt: skip
 MIXES = ["mix_same_beta", "mix_same_volatility", "mix_same_return", "mix_same_drawdown", "mix_same_delta"]
 OBJECTS = ["overlay", "hold", *MIXES, "put_only", "call_only"]
-DAILY = ["date", "overlay", "hold", *MIXES, "put_only", "call_only", "delta", "cash", "option_value", "shares", "units"]
+GREEKS = ["delta", "gamma", "vega", "theta", "rho"]
+DAILY = ["date", "overlay", "hold", *MIXES, "put_only", "call_only", *GREEKS, "cash", "option_value", "shares", "units"]
 ROLLS = [
     "leg", "right", "position", "ratio", "opened", "expiry", "closed", "spot_open", "forward", "strike", "vol",
     "premium", "cost", "units", "delta", "spot_close", "settled", "exit_cost", "profit", "flag",

@@ -16,6 +16,7 @@ import pytest
 from studies.assumptions import CAUTION
 from studies.page.build import build_report
 from studies.page.costs import steps, yearly_flows
+from studies.replay_history import daily_frame
 from studies.report import Report
 from tests.studies.page.conftest import COMMAND, HISTORY, NAME, Node, read_page, table_of
 
@@ -274,6 +275,16 @@ def test_attribution_shown_sums(tree: Node) -> None:
     assert sum(points[:-1]) == pytest.approx(points[-1], abs=0.005 * len(rows))
     assert shares[-1] == 100
     assert sum(shares[:-1]) == pytest.approx(100, abs=0.5 * len(rows))
+
+
+def test_the_exposure_is_that_of_the_daily_table(report: Report, tree: Node) -> None:
+    daily = daily_frame(report.answer)
+    (reading,) = (f.one("figcaption").words for f in tree.all("figure") if f.all("p")[0].words == "Exposure over time")
+    told = [float(one.replace("−", "-")) for one in re.findall(r"−?\d+(?:\.\d)?", reading)]
+    delta, vega = 100 * daily["delta"], 10_000 * daily["vega"]  # percent and basis points of wealth
+    assert told == [
+        round(delta.min()), round(delta.max()), round(delta.mean()), round(vega.min(), 1), round(vega.max(), 1),
+    ]  # fmt: skip
 
 
 def test_contest_readings_count_what_the_table_shows(tree: Node) -> None:

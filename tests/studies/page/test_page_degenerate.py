@@ -137,17 +137,21 @@ CASES = {
     ),
     "call only": Case(
         lambda demo: demo.loc["2007":"2008"], Overlay(legs=(CALL,)),
-        {"prices": "The puts alone there is no put", "assumed": "Sold at 110% of spot", "band": "of the sold call"},
+        {"prices": "The puts alone there is no put", "assumed": "struck at 110% of spot", "band": "of the sold call"},
     ),
     "put only": Case(
         lambda demo: demo.loc["2007":"2008"], Overlay(legs=(PUT,)),
-        {"assumed": "Bought at 95% of spot", "luck": "separate time", "band": "of the bought put."},
+        {
+            "assumed": "Buys a put, 1 per share; every quarter on the third Friday, 3 months to expiry; struck at 95%",
+            "luck": "separate time", "band": "of the bought put.",
+        },
     ),
     "eight legs": Case(
         lambda demo: demo.loc["2006":"2008"], Overlay(legs=EIGHT),
         {
             "luck": "; the put 4 ", "cautions": "An option of 12 months is priced off a single vol of 30 days",
-            "cost": "calls: premium", "assumed": "Call 4 Sold at 103% of spot, 1 month to expiry",
+            "cost": "calls: premium",
+            "assumed": "Call 4 Sells a call, 1 per share; every month on the third Friday, 1 month to expiry; struck at 103%",
         },
     ),
     "one year of data": Case(
