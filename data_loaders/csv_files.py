@@ -69,7 +69,10 @@ def read_text(source: Source, kind: Kind, reading: Reading) -> TextTable:
             split = _split(body, separator, width + 1)
             split.columns.pop()
     except pa.ArrowInvalid as error:
-        raise Refused("unreadable-csv", reason=str(error).splitlines()[0]) from None
+        reason = str(error).splitlines()[0]
+        if "block size" in reason:
+            reason = "one row, or what stands in a pair of quotes, is longer than a mebibyte"
+        raise Refused("unreadable-csv", reason=reason) from None
     # separators alone are a blank row, however many of them
     blank = {row.line for row in split.ragged if row.text is not None and not row.text.strip(f"{separator} \t\r\n")}
     filled = _filled(split.columns, len(split.lines))
@@ -105,13 +108,15 @@ def _layout(data: bytes | bytearray, kind: Kind, reading: Reading) -> tuple[Layo
     first = re.search(rb"\S", data)
     if first is None:
         raise Refused("empty-file")
-    head = bytes(data[:HEADER_BYTES])
-    if len(data) > HEADER_BYTES and not re.search(rb"[\r\n]", head[first.start() :]):
+    # however many blank lines come first
+    top = data.rfind(b"\n", 0, first.start()) + 1
+    head = bytes(data[top : top + HEADER_BYTES])
+    if len(data) > top + HEADER_BYTES and b"\n" not in head:
         raise Refused("unreadable-csv", reason=f"the header line is longer than {HEADER_BYTES:,} bytes")
     text = head.decode(errors="ignore")
-    layout = find_layout(text, kind, reading)
-    start = len(text[: layout.length].encode())
-    above = sum(len(line) for line in text.encode().splitlines(keepends=True)[: layout.first_line - 1])
+    layout = find_layout(text, kind, reading, first_line=data.count(b"\n", 0, top) + 1)
+    start = top + len(text[: layout.length].encode())
+    above = top + sum(len((line + "\n").encode()) for line in layout.above)
     if data.count(b'"', above) % 2:
         raise Refused("unclosed-quote", line=layout.first_line + _first_odd(data, above))
     return layout, start

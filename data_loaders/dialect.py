@@ -11,11 +11,11 @@ import csv
 import io
 import re
 from collections.abc import Sequence
-from dataclasses import dataclass
+from dataclasses import dataclass, replace
 
 from .numbers import MARK_NAMES
 from .reading import Decimal, Reading
-from .schema import FILES, FileSchema, Kind, Matched, match_header
+from .schema import FILES, FileSchema, Kind, match_header
 from .sources import Refused
 from .words import counted
 
@@ -221,12 +221,13 @@ def _recoded(data: bytes | bytearray, codec: str, name: str) -> bytearray:
     decoder = codecs.getincrementaldecoder(codec)()
     view = memoryview(data)
     text = bytearray()
-    try:
-        for at in range(0, len(view) or 1, _WINDOW):
-            last = at + _WINDOW >= len(view)
-            text += decoder.decode(bytes(view[at : at + _WINDOW]), last).encode()
-    except UnicodeError:
-        raise Refused("damaged-text", encoding=name, line=text.count(b"\n") + 1) from None
+    for at in range(0, len(view) or 1, _WINDOW):
+        window, last = bytes(view[at : at + _WINDOW]), at + _WINDOW >= len(view)
+        try:
+            text += decoder.decode(window, last).encode()
+        except UnicodeError as error:
+            text += window[: getattr(error, "start", 0)].decode(codec, errors="ignore").encode()
+            raise Refused("damaged-text", encoding=name, line=text.count(b"\n") + 1) from None
     return text
 
 
@@ -246,7 +247,7 @@ def _not_utf8(data: bytes | bytearray) -> int | None:
 # ---------------------------------------------------------------- header
 
 
-def find_layout(head: str, kind: Kind, reading: Reading) -> Layout:
+def find_layout(head: str, kind: Kind, reading: Reading, *, first_line: int = 1) -> Layout:
     """The separator and the header of a table, by the names that a file of its kind has.
 
     Of the first lines, read with each separator, the one that names most of what is needed is the header; the first
@@ -257,15 +258,29 @@ def find_layout(head: str, kind: Kind, reading: Reading) -> Layout:
     ----------
     head : str
         The start of the text.
+    first_line : int
+        Number of its first line in the file.
 
     Raises
     ------
     Refused
-        ``unreadable-csv``, ``no-header`` or ``rows-above-header``.
+        ``empty-file``, ``unreadable-csv``, ``no-header`` or ``rows-above-header``.
     """
+    try:
+        layout = _found_layout(head, kind, reading)
+        _refuse_rows_above(layout)
+    except Refused as refused:
+        facts = {name: at + first_line - 1 for name, at in refused.facts.items() if name in ("line", "header_line")}
+        raise Refused(refused.code, **{**refused.facts, **facts}) from None
+    return replace(layout, first_line=layout.first_line + first_line - 1, last_line=layout.last_line + first_line - 1)
+
+
+def _found_layout(head: str, kind: Kind, reading: Reading) -> Layout:
     lines = io.StringIO(head, newline="").readlines()
     whole = lines if head.endswith(("\n", "\r")) or len(lines) < 2 else lines[:-1]
-    candidates = [i for i, line in enumerate(whole[:HEADER_LINES]) if line.strip()]
+    candidates = [i for i, line in enumerate(whole) if line.strip()][:HEADER_LINES]
+    if not candidates:
+        raise Refused("empty-file")
     schema = FILES[kind]
     found: list[tuple[int, int, int, str, list[str], int]] = []
     for separator in SEPARATORS:
@@ -279,9 +294,7 @@ def find_layout(head: str, kind: Kind, reading: Reading) -> Layout:
     if not found:
         return _likeliest(lines, candidates)
     _, i, _, separator, names, count = min(found, key=lambda one: one[:3])
-    layout = _layout(lines, i, separator, names, count)
-    _refuse_rows_above(schema, layout, reading)
-    return layout
+    return _layout(lines, i, separator, names, count)
 
 
 def _fields(lines: list[str], separator: str) -> tuple[list[str], int]:
@@ -365,7 +378,7 @@ def _layout(lines: list[str], i: int, separator: str, names: list[str], count: i
     )
 
 
-def _refuse_rows_above(schema: FileSchema, layout: Layout, reading: Reading) -> None:
+def _refuse_rows_above(layout: Layout) -> None:
     """What stands above the header and has its columns, with a date and a number, would be lost."""
     for number, line in enumerate(layout.above, start=1):
         if not line.strip():
@@ -373,8 +386,3 @@ def _refuse_rows_above(schema: FileSchema, layout: Layout, reading: Reading) -> 
         fields, _ = _fields([line], layout.separator)
         if len(fields) == len(layout.header) and _is_data(fields):
             raise Refused("rows-above-header", line=number, value=line.strip(), header_line=layout.first_line)
-
-
-def matched_header(layout: Layout, kind: Kind, reading: Reading) -> Matched:
-    """The columns of a header, as the user named them or by their own names."""
-    return match_header(FILES[kind], layout.header, reading.columns)

@@ -16,7 +16,6 @@ from typing import Annotated
 import typer
 
 from .options import (
-    Account,
     Append,
     AsJson,
     Columns,
@@ -28,14 +27,32 @@ from .options import (
     Portfolio,
     Prices,
     Rates,
-    Roll,
     Signal,
     Store,
     Symbol,
     SymbolColumn,
     Unit,
     Vol,
-    VolQuote,
+)
+from .overlay_options import (
+    AccountKind,
+    BothRoll,
+    Call,
+    CallRoll,
+    CallTerm,
+    Commission,
+    DividendYield,
+    HalfSpreadPercent,
+    HalfSpreadVol,
+    Multiplier,
+    OverlayPath,
+    Put,
+    PutRoll,
+    PutTerm,
+    Quote,
+    Rate,
+    Smile,
+    StockBps,
 )
 from .wiring import (
     history_and_source,
@@ -107,57 +124,31 @@ def load(
 @app.command()
 def replay(
     name: Annotated[str | None, typer.Argument(help="A stored history; or give the file options instead.")] = None,
-    put: Annotated[float | None, typer.Option("--put", help="Buy a put at this percent of spot.")] = None,
-    call: Annotated[float | None, typer.Option("--call", help="Sell a call at this percent of spot.")] = None,
-    roll: Annotated[
-        Roll | None, typer.Option("--roll", help="How often both are replaced; a quarter if not given.")
-    ] = None,
-    put_roll: Annotated[Roll | None, typer.Option("--put-roll", help="How often the put is replaced.")] = None,
-    call_roll: Annotated[Roll | None, typer.Option("--call-roll", help="How often the call is replaced.")] = None,
-    put_term: Annotated[
-        int | None, typer.Option("--put-term", help="Months to expiry of a new put; its roll if not given.")
-    ] = None,
-    call_term: Annotated[
-        int | None, typer.Option("--call-term", help="Months to expiry of a new call; its roll if not given.")
-    ] = None,
-    overlay: Annotated[
-        Path | None,
-        typer.Option(
-            "--overlay", help="Overlay file (TOML) instead of --put and --call; ready-made: rollband overlays."
-        ),
-    ] = None,
+    put: Put = None,
+    call: Call = None,
+    roll: BothRoll = None,
+    put_roll: PutRoll = None,
+    call_roll: CallRoll = None,
+    put_term: PutTerm = None,
+    call_term: CallTerm = None,
+    overlay: OverlayPath = None,
     prices: Prices = None,
     vol: Vol = None,
     dividends: Dividends = None,
     rates: Rates = None,
     signal: Signal = None,
     vol_unit: Unit = None,
-    rate: Annotated[float | None, typer.Option("--rate", help="Constant rate, percent a year.")] = None,
-    dividend_yield: Annotated[
-        float | None, typer.Option("--dividend-yield", help="Constant dividend yield, percent a year.")
-    ] = None,
-    vol_quote: Annotated[
-        VolQuote | None,
-        typer.Option("--vol-quote", help="Read the vol series at the money, or as a variance-swap index."),
-    ] = None,
-    smile: Annotated[str | None, typer.Option("--smile", help="flat, mild, index, steep, or RHO,ETA,GAMMA.")] = None,
-    account: Annotated[
-        Account | None,
-        typer.Option("--account", help="resize: whole packages at every roll; cash: fixed shares and a cash account."),
-    ] = None,
-    half_spread_vol: Annotated[
-        float | None, typer.Option("--half-spread-vol", help="Half-spread in vol points (default 0.5).")
-    ] = None,
-    half_spread_percent: Annotated[
-        float | None, typer.Option("--half-spread-percent", help="Half-spread in percent of the option's mid.")
-    ] = None,
-    commission: Annotated[float | None, typer.Option("--commission", help="Money a contract.")] = None,
-    multiplier: Annotated[float | None, typer.Option("--multiplier", help="Shares a contract (default 100).")] = None,
+    rate: Rate = None,
+    dividend_yield: DividendYield = None,
+    vol_quote: Quote = None,
+    smile: Smile = None,
+    account: AccountKind = None,
+    half_spread_vol: HalfSpreadVol = None,
+    half_spread_percent: HalfSpreadPercent = None,
+    commission: Commission = None,
+    multiplier: Multiplier = None,
     portfolio: Portfolio = None,
-    stock_bps: Annotated[
-        float | None,
-        typer.Option("--stock-bps", help="Cost of stock traded when packages are resized, in basis points."),
-    ] = None,
+    stock_bps: StockBps = None,
     first: First = None,
     last: Last = None,
     store: Store = Path("histories"),

@@ -11,7 +11,25 @@ from typing import TYPE_CHECKING, Annotated
 
 import typer
 
-from .options import AsJson, Roll, Store, VolQuote
+from .options import AsJson, Store
+from .overlay_options import (
+    BothRoll,
+    Call,
+    CallRoll,
+    CallTerm,
+    Commission,
+    DividendYield,
+    HalfSpreadPercent,
+    HalfSpreadVol,
+    Multiplier,
+    OverlayPath,
+    Put,
+    PutRoll,
+    PutTerm,
+    Quote,
+    Rate,
+    Smile,
+)
 from .wiring import history_of, overlay_of, with_options
 
 if TYPE_CHECKING:
@@ -23,18 +41,14 @@ PICTURES = (".png", ".svg")
 
 def next_roll(
     name: Annotated[str, typer.Argument(help="A stored history.")],
-    put: Annotated[float | None, typer.Option("--put", help="Buy a put at this percent of spot.")] = None,
-    call: Annotated[float | None, typer.Option("--call", help="Sell a call at this percent of spot.")] = None,
-    roll: Annotated[
-        Roll | None, typer.Option("--roll", help="How often both are replaced; a quarter if not given.")
-    ] = None,
-    put_roll: Annotated[Roll | None, typer.Option("--put-roll", help="How often the put is replaced.")] = None,
-    call_roll: Annotated[Roll | None, typer.Option("--call-roll", help="How often the call is replaced.")] = None,
-    put_term: Annotated[int | None, typer.Option("--put-term", help="Months to expiry of a new put.")] = None,
-    call_term: Annotated[int | None, typer.Option("--call-term", help="Months to expiry of a new call.")] = None,
-    overlay: Annotated[
-        Path | None, typer.Option("--overlay", help="Overlay file (TOML) instead of --put and --call.")
-    ] = None,
+    put: Put = None,
+    call: Call = None,
+    roll: BothRoll = None,
+    put_roll: PutRoll = None,
+    call_roll: CallRoll = None,
+    put_term: PutTerm = None,
+    call_term: CallTerm = None,
+    overlay: OverlayPath = None,
     money: Annotated[
         float | None,
         typer.Option(
@@ -42,23 +56,14 @@ def next_roll(
             help="What your holding is worth, for contracts and amounts; the file's portfolio if not given.",
         ),
     ] = None,
-    rate: Annotated[float | None, typer.Option("--rate", help="Constant rate, percent a year.")] = None,
-    dividend_yield: Annotated[
-        float | None, typer.Option("--dividend-yield", help="Constant dividend yield, percent a year.")
-    ] = None,
-    vol_quote: Annotated[
-        VolQuote | None,
-        typer.Option("--vol-quote", help="Read the vol series at the money, or as a variance-swap index."),
-    ] = None,
-    smile: Annotated[str | None, typer.Option("--smile", help="flat, mild, index, steep, or RHO,ETA,GAMMA.")] = None,
-    half_spread_vol: Annotated[
-        float | None, typer.Option("--half-spread-vol", help="Half-spread in vol points (default 0.5).")
-    ] = None,
-    half_spread_percent: Annotated[
-        float | None, typer.Option("--half-spread-percent", help="Half-spread in percent of the option's mid.")
-    ] = None,
-    commission: Annotated[float | None, typer.Option("--commission", help="Money a contract.")] = None,
-    multiplier: Annotated[float | None, typer.Option("--multiplier", help="Shares a contract (default 100).")] = None,
+    rate: Rate = None,
+    dividend_yield: DividendYield = None,
+    vol_quote: Quote = None,
+    smile: Smile = None,
+    half_spread_vol: HalfSpreadVol = None,
+    half_spread_percent: HalfSpreadPercent = None,
+    commission: Commission = None,
+    multiplier: Multiplier = None,
     picture: Annotated[
         Path | None,
         typer.Option("--picture", help="Draw share and options at the first expiry: FILE.png or FILE.svg."),

@@ -33,6 +33,7 @@ from .black import SMALLEST_STDEV, black
 
 Array = npt.NDArray[np.float64]
 Count = npt.NDArray[np.int64]
+Flags = npt.NDArray[np.bool_]
 
 #: How far nodes reach to either side, in deviations to expiry.
 REACH = 4.8
@@ -41,6 +42,8 @@ EVEN_STEP, LONGEST_STEP = 1.0, 1.6
 BRANCHES = 3  # to either side
 #: More exercise dates, as parts of the first step.
 SOONER = (0.25, 0.5)
+#: Variance of a step, in squared distances of nodes, that leaves of a kink nothing that a node could miss.
+SHORT_STEP = 0.5
 #: Of the strike, where a dividend at expiry is larger than it.
 SMALLEST_STRIKE = 1e-12
 
@@ -153,22 +156,27 @@ def _roll_back(options: Contracts, times: Array, ex_index: Count) -> Array:
     paid = np.where(sign > 0.0, np.where(ex_index == steps, options.dividends, 0.0).sum(axis=1), 0.0)
     due = np.maximum(strike - paid, SMALLEST_STRIKE * strike)
     cont = black(forward, due, last_stdev, sign) + np.maximum(paid - strike, 0.0)
-    at_strike = (np.log(options.spot / due) + drift * tau) / (stdev * apart) * sign  # nodes from the middle
-    _blunt(cont, at_strike + reach + BRANCHES, due * stdev * apart, share[-1] / apart**2)
     cont *= np.exp(-rate * last)
 
     value, work = np.empty_like(cont), np.empty_like(cont)
     inner = slice(BRANCHES, -BRANCHES)
     columns = np.arange(len(tau))
+    short, early, whole = _smooth_part(options, times, due, share[-1] / apart**2, shape, moved[-3], beside[-2])
     for step in range(steps - 1, 0, -1):
         np.multiply(shape, moved[step], out=value)
         value += beside[step]
         np.subtract(value, cont, out=work)  # what exercise brings more
         node, change, next_change = _kink_correction(work, columns)
         tail = value[: BRANCHES + 1] - value[BRANCHES]
+        part = short.any() and step == steps - 1
+        if part:
+            smooth = np.where(early[short], np.maximum(value[:, short], 0.0), cont[:, short])
+            change[short] = next_change[short] = 0.0
         np.maximum(value, cont, out=value)
         value[node - 1, columns] += change
         value[node, columns] += next_change
+        if part:
+            value[:, short] -= smooth
         w = weights[:, step - 1]
         core, spare = cont[inner], work[inner]
         np.multiply(value[inner], w[0], out=core)
@@ -177,6 +185,8 @@ def _roll_back(options: Contracts, times: Array, ex_index: Count) -> Array:
             np.add(value[BRANCHES + k : upper], value[BRANCHES - k : upper - 2 * k], out=spare)
             spare *= w[k]
             core += spare
+        if part:
+            core[:, short] += whole[inner]
         cont[:BRANCHES] = cont[BRANCHES] + tail[:BRANCHES]  # deep in the money it changes as exercise does
         cont[-BRANCHES:] = cont[-BRANCHES - 1]  # far out of it, not at all
     return _at_the_middle(cont, options, apart)
@@ -235,20 +245,33 @@ def _kink_correction(gain: Array, columns: Count) -> tuple[Count, Array, Array]:
     return node, np.where(crosses, -excess, 0.0) - after, after
 
 
-def _blunt(value: Array, at: Array, slope: Array, variance: Array) -> None:
-    """Put right what sampling a kink makes of its sum, a kink that a step of this variance has rounded; in place.
+def _smooth_part(
+    options: Contracts, times: Array, due: Array, variance: Array, shape: Array, moved: Array, beside: Array
+) -> tuple[Flags, Flags, Array]:
+    """What to do where a share goes ex so soon before expiry that the last step leaves a kink between the nodes.
 
-    Poisson's formula: the sum is off by the transform at multiples of ``2 pi``. Nothing is left of it where the step
-    is an even one; where a share goes ex right before expiry it matters.
+    Of the value at that ex-date a European option is taken off, the one whose kink it has, and only what is left,
+    which is small and flat, goes through the branches; the European value is added a step earlier. A call worth
+    exercising at the strike has the kink of its exercise at the ex-date, any other option that of expiry.
+
+    Returns
+    -------
+    short, early, value : ndarray
+        Which options; whether theirs is the kink of exercise; the European values one step before, ``(node, short)``.
     """
-    node = np.clip(np.floor(at).astype(np.int64), 0, value.shape[0] - 2)
-    u = np.clip(at - node, 0.0, 1.0)
-    turns = 2.0 * np.pi * np.arange(1.0, 41.0)[:, None]
-    excess = slope * (2.0 * np.cos(turns * u) / turns**2 * np.exp(-0.5 * turns**2 * variance)).sum(axis=0)
-    columns = np.arange(value.shape[1])
-    inside = (at > 0.0) & (at < value.shape[0] - 1.0)
-    value[node, columns] += np.where(inside, excess * (1.0 - u), 0.0)
-    value[node + 1, columns] += np.where(inside, excess * u, 0.0)
+    short = variance < SHORT_STEP
+    stdev, rate, tau = options.total_stdev, options.rate, options.tau_years
+    last = tau - times[-2]
+    at_the_money = 0.4 * stdev * np.sqrt(last / tau) * due
+    early = (options.sign > 0.0) & (due + beside > at_the_money)
+    end = np.where(early, times[-2], tau)
+    some = slice(None) if short.all() else short
+    left = (end - times[-3])[some]
+    carry = (rate - options.dividend_yield)[some]
+    forward = shape[:, some] * (options.sign * moved)[some] * np.exp(carry * left)
+    strike = np.where(early, np.maximum(-beside, SMALLEST_STRIKE * options.strike), due)[some]
+    value = black(forward, strike, stdev[some] * np.sqrt(left / tau[some]), options.sign[some])
+    return short, early, value * np.exp(-rate[some] * left)
 
 
 def _at_the_middle(cont: Array, options: Contracts, apart: Array) -> Array:

@@ -33,7 +33,7 @@ CASES = [
     Case("ragged-row", {"prices": PRICES.replace(",101", ",1,01")}, "prices", line=3, value="2020-01-03,1,01",
          says=("has 3 fields and the header has 2", "decimal comma")),
     Case("ragged-row", {"prices": PRICES + "2020-01-14\n"}, "prices", line=10, value="2020-01-14", says=("has 1 field and",)),
-    Case("unreadable-csv", {"prices": b'date,close\n"' + b"1" * 700_000 + b"\n" + b"1" * 700_000 + b'",1\n'}, "prices", says=("block size",)),
+    Case("unreadable-csv", {"prices": b'date,close\n"' + (b"1" * 700_000 + b"\n") * 3 + b'",1\n'}, "prices", says=("in a pair of quotes, is longer than a mebibyte",)),
     Case("unreadable-csv", {"prices": b"d" * 70_000 + b"\n1\n"}, "prices", says=("header line is longer than 65,536 bytes",)),
     Case("missing-column", {"prices": "date,open\n2020-01-02,1\n"}, "prices", line=1,
          says=("no column for 'close' (the closing price)", "The header has 'date', 'open'", "Name it 'close'")),

@@ -213,7 +213,7 @@ OUTCOMES = [
     # ---------------- bytes, packed files
     refused('zero_bytes.csv', problems=[('binary-file', None, None)]),
     refused('broken_utf8.csv', problems=[('not-utf-8', 5, None)]),
-    refused('broken_utf16.csv', problems=[('damaged-text', 1, None)]),
+    refused('broken_utf16.csv', problems=[('damaged-text', 7, None)]),
     refused('not_windows_1252.csv', problems=[('not-utf-8', 1, None)]),
     refused('document.csv', problems=[('binary-file', None, None)]),
     whole('gzip.csv.gz', text='packed with gzip, UTF-8, columns separated by commas, decimal point'),

@@ -151,7 +151,7 @@ CASES = {
         {
             "luck": "; the put 4 ", "cautions": "An option of 12 months is priced off a single vol of 30 days",
             "cost": "calls: premium",
-            "assumed": "Call 4 Sells a call, 1 per share; every month on the third Friday, 1 month to expiry; struck at 103%",
+            "assumed": "Call 4 Sells a call, 1 per share; every month on the third Friday, 1 month to expiry; struck",
         },
     ),
     "one year of data": Case(
