@@ -116,7 +116,7 @@ def _layout(data: bytes | bytearray, kind: Kind, reading: Reading) -> tuple[Layo
     text = head.decode(errors="ignore")
     layout = find_layout(text, kind, reading, first_line=data.count(b"\n", 0, top) + 1)
     start = top + len(text[: layout.length].encode())
-    above = top + sum(len((line + "\n").encode()) for line in layout.above)
+    above = top + len(text[: layout.begins].encode())
     if data.count(b'"', above) % 2:
         raise Refused("unclosed-quote", line=layout.first_line + _first_odd(data, above))
     return layout, start

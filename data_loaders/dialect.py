@@ -141,8 +141,8 @@ class Layout:
         Lines before the header.
     first_line, last_line : int
         Lines of the header, from 1; they differ where a quoted name runs on.
-    length : int
-        Characters up to the first row.
+    begins, length : int
+        Characters before the header, and up to the first row.
     """
 
     separator: str
@@ -150,6 +150,7 @@ class Layout:
     above: tuple[str, ...]
     first_line: int
     last_line: int
+    begins: int
     length: int
 
 
@@ -374,6 +375,7 @@ def _layout(lines: list[str], i: int, separator: str, names: list[str], count: i
         above=tuple(line.rstrip("\r\n") for line in lines[:i]),
         first_line=i + 1,
         last_line=i + count,
+        begins=sum(map(len, lines[:i])),
         length=sum(map(len, lines[: i + count])),
     )
 

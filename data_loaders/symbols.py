@@ -117,7 +117,7 @@ def history_name(prefix: str, symbol: str) -> str:
     >>> history_name("us", "BRK.B"), history_name("us", "BRK/B")
     ('us-BRK.B', 'us-BRK_B-82f67012')
     >>> history_name("us", "../../etc/passwd")
-    'us-______etc_passwd-bb63b6cc'
+    'us-______etc_passwd-3754d6cb'
     """
     name = f"{prefix}-{symbol}"
     if re.fullmatch(r"[A-Z0-9](?:[A-Z0-9.-]*[A-Z0-9])?", symbol) and len(name) <= LONGEST_NAME:

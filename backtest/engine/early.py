@@ -28,9 +28,11 @@ Days = npt.NDArray[np.intp]
 
 def early_schedule(plan: Plan, group: PricingGroup, legs: Sequence[LegPaths | None]) -> Schedule:
     """The schedule of a leg with its early rules carried out."""
-    now, done = group.schedule, []
+    now, done, gate = group.schedule, [], group.key[0].gate
+    # what its gate would not let it open is not replaced either
+    lets_open = None if gate is None else gate.condition.on(plan.market)
     while True:
-        cut, reason = _first_days(plan, group, now, legs)
+        cut, reason = _first_days(plan, group, now, legs, lets_open)
         hit = cut >= 0
         done.append(
             replace(
@@ -55,7 +57,11 @@ def early_schedule(plan: Plan, group: PricingGroup, legs: Sequence[LegPaths | No
 
 
 def _first_days(
-    plan: Plan, group: PricingGroup, schedule: Schedule, legs: Sequence[LegPaths | None]
+    plan: Plan,
+    group: PricingGroup,
+    schedule: Schedule,
+    legs: Sequence[LegPaths | None],
+    lets_open: npt.NDArray[np.bool_] | None,
 ) -> tuple[Days, npt.NDArray[np.int64]]:
     """Position of the day on which each option is replaced, -1 for none, and why."""
     rules, market = group.early, plan.market
@@ -84,10 +90,8 @@ def _first_days(
     if rules.delta_below is not None:
         risen = market.spot[day] > market.spot[schedule.opened[option]]
         reason[risen & (np.abs(delta) < rules.delta_below)] = BY_DELTA
-    gate = group.key[0].gate
-    if gate is not None:
-        # what its gate would not let it open is not replaced either
-        reason[~gate.condition.on(market)[day]] = 0
+    if lets_open is not None:
+        reason[~lets_open[day]] = 0
     reason[schedule.expiry_day[option] - market.day_number[day] < rules.days_left] = 0
 
     hits = np.flatnonzero(reason)

@@ -150,8 +150,8 @@ def _price(plan: Plan, group: PricingGroup, legs: Sequence[LegPaths | None]) -> 
     roll_of_day = rolls.option_of_day(plan.start, plan.end)
     signs = np.array(group.signs)[:, np.newaxis]
 
-    strike, flags = strike_legs(plan, group, rolls, legs)
     opens = day_state(market, group, rolls.opened, rolls.expiry_day)
+    strike, flags = strike_legs(plan, group, rolls, legs, opens)
     stdev_open = opens.stdev(strike)
     mark, delta = _marks(plan, group, rolls, strike, roll_of_day, signs)
     at_open = rolls.opened - plan.start
@@ -193,11 +193,10 @@ def _marks(
     plan: Plan, group: PricingGroup, rolls: Schedule, strike: Array, roll_of_day: Days, signs: Array
 ) -> tuple[Array, Array]:
     """Mid and delta of every leg on every day; zero on days on which it is flat."""
-    held = np.flatnonzero(roll_of_day >= 0)
-    window = slice(plan.start, plan.end + 1)
-    if len(held) == len(roll_of_day):
-        daily = day_state(plan.market, group, window, rolls.expiry_day[roll_of_day])
+    if roll_of_day.min() >= 0:
+        daily = day_state(plan.market, group, slice(plan.start, plan.end + 1), rolls.expiry_day[roll_of_day])
         return _held_marks(daily, strike, roll_of_day, signs)
+    held = np.flatnonzero(roll_of_day >= 0)
     mark, delta = np.zeros((2, len(strike), len(roll_of_day)))
     if held.size:
         daily = day_state(plan.market, group, held + plan.start, rolls.expiry_day[roll_of_day[held]])

@@ -50,7 +50,11 @@ def day_state(market: Market, group: PricingGroup, day: Days | slice, expiry_day
 
 
 def strike_legs(
-    plan: Plan, group: PricingGroup, schedule: Schedule, legs: Sequence[LegPaths | None]
+    plan: Plan,
+    group: PricingGroup,
+    schedule: Schedule,
+    legs: Sequence[LegPaths | None],
+    opens: DayState | None = None,
 ) -> tuple[Array, Flags]:
     """Strikes and their flags by each leg's rule, shape ``(leg, roll)``.
 
@@ -58,9 +62,12 @@ def strike_legs(
     ----------
     legs : sequence of LegPaths
         Priced groups of the plan; those that a leg of this group names are among them.
+    opens : DayState, optional
+        Of the days of the opens, if it is known already.
     """
     decision = schedule.opened - group.lag
-    day = day_state(plan.market, group, decision, schedule.expiry_day)
+    known = opens if group.lag == 0 else None
+    day = known or day_state(plan.market, group, decision, schedule.expiry_day)
     follows = schedule.follows
     states = [
         OpenState(

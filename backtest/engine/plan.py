@@ -18,6 +18,7 @@ import numpy as np
 
 from ..calendar import Flags, Schedule, gated_schedule, leg_schedule
 from ..cycles import Cycle
+from ..gates import Condition
 from ..leg import Early, Leg, Rolling
 from ..market import Market
 from ..overlay import Costs, Overlay
@@ -193,6 +194,7 @@ class _PlanBuilder:
         self._families: dict[tuple[Cycle, str], Family] = {}
         self._checked: set[tuple[Volatility, int]] = set()
         self._opens_checked = False
+        self._conditions: dict[Condition, Flags] = {}
         # by identity of the objects, all of which the caller holds
         self._family_of: dict[tuple[int, str], Family] = {}
         self._row_of: dict[tuple[int, ...], int] = {}
@@ -273,9 +275,11 @@ class _PlanBuilder:
                 close_before=rolling.close_before,
             )
             if gate is not None:
+                if gate.condition not in self._conditions:
+                    self._conditions[gate.condition] = gate.condition.on(market)
                 schedule = gated_schedule(
                     schedule,
-                    decided(gate.condition.on(market), lag),
+                    decided(self._conditions[gate.condition], lag),
                     close_when_off=gate.when_off == "close",
                     open_at_once=gate.when_on == "at once",
                 )

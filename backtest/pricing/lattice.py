@@ -13,7 +13,7 @@ the option's life is cut into them. An exercise date is the end of every step; i
   shorter step leaves some slightly below zero, and stays stable.
 - **The last step** before expiry is Black's formula at every node (Broadie and Detemple 1996, "American option
   valuation: new bounds, approximations, and a comparison of existing methods"), so the kink of the payoff at the
-  strike is never sampled.
+  strike is not sampled. Where an ex-date makes that step too short for it, :func:`_apart` sees to it.
 - **The kink where exercise begins** is sampled, by a sum over nodes that is off by what the Euler-Maclaurin formula
   says: one way with the kink at a node, the other with it between two. This is what makes trees and lattices jump
   about as their number of steps grows. It is worked out from the values at the four nodes around and put right at the
@@ -42,8 +42,11 @@ EVEN_STEP, LONGEST_STEP = 1.0, 1.6
 BRANCHES = 3  # to either side
 #: More exercise dates, as parts of the first step.
 SOONER = (0.25, 0.5)
-#: Variance of a step, in squared distances of nodes, that leaves of a kink nothing that a node could miss.
+#: Part of an even step: a shorter last one leaves more of a kink than nodes can see.
 SHORT_STEP = 0.5
+#: Places around a node, in nodes, and from values there to means under the hats of seven nodes.
+FINE = np.arange(-4.0, 4.0625, 0.125)[:, None]
+UNDER_HATS = 0.125 * np.maximum(1.0 - np.abs(np.arange(-3.0, 4.0)[:, None] - FINE.T), 0.0)
 #: Of the strike, where a dividend at expiry is larger than it.
 SMALLEST_STRIKE = 1e-12
 
@@ -102,9 +105,15 @@ def held(contracts: Contracts, *, steps: int, together: int) -> Held:
 def _extrapolated(options: Contracts, steps: int) -> Array:
     """Value, delta and gamma without what falls like one over the number of steps: shape ``(3, option)``."""
     times, ex_index = _cuts(options, steps // 2)
+    short = options.tau_years - times[-2] < SHORT_STEP * options.tau_years / (steps // 2)
     finer = np.empty((2 * len(times) - 1, times.shape[1]))
     finer[::2], finer[1::2] = times, 0.5 * (times[1:] + times[:-1])
-    return 2.0 * _roll_back(options, finer, 2 * ex_index) - _roll_back(options, times, ex_index)
+    # a last step that is short stays whole, and the first is cut in three: then the rows are as many
+    thirds = np.array([0.0, 1.0, 2.0])[:, None] / 3.0 * times[1]
+    finer = np.where(short, np.concatenate((thirds, finer[2:-2], finer[-1:])), finer)
+    last = len(finer) - 1
+    finer_index = 2 * ex_index + (short[:, None] & (2 * ex_index < last))
+    return 2.0 * _roll_back(options, finer, finer_index, short) - _roll_back(options, times, ex_index, short)
 
 
 def _cuts(options: Contracts, steps: int) -> tuple[Array, Count]:
@@ -131,7 +140,7 @@ def _cuts(options: Contracts, steps: int) -> tuple[Array, Count]:
     return np.concatenate((times[:1], sooner, times[1:])), index + len(SOONER)
 
 
-def _roll_back(options: Contracts, times: Array, ex_index: Count) -> Array:
+def _roll_back(options: Contracts, times: Array, ex_index: Count, short: Flags) -> Array:
     """Value now if not exercised now, its delta and gamma: shape ``(3, option)``."""
     steps = len(times) - 1
     tau, rate, sign, stdev, strike = (
@@ -161,7 +170,10 @@ def _roll_back(options: Contracts, times: Array, ex_index: Count) -> Array:
     value, work = np.empty_like(cont), np.empty_like(cont)
     inner = slice(BRANCHES, -BRANCHES)
     columns = np.arange(len(tau))
-    short, early, whole = _smooth_part(options, times, due, share[-1] / apart**2, shape, moved[-3], beside[-2])
+    short = short & (due > SMALLEST_STRIKE * strike)
+    if short.any():
+        early, whole, kink, rest = _apart(options, times, due, short, apart, nodes[0, 0], moved[-3:-1], beside[-2])
+        short_columns = np.flatnonzero(short)
     for step in range(steps - 1, 0, -1):
         np.multiply(shape, moved[step], out=value)
         value += beside[step]
@@ -170,13 +182,14 @@ def _roll_back(options: Contracts, times: Array, ex_index: Count) -> Array:
         tail = value[: BRANCHES + 1] - value[BRANCHES]
         part = short.any() and step == steps - 1
         if part:
-            smooth = np.where(early[short], np.maximum(value[:, short], 0.0), cont[:, short])
+            smooth = np.where(early, np.maximum(value[:, short], 0.0), cont[:, short])
             change[short] = next_change[short] = 0.0
         np.maximum(value, cont, out=value)
         value[node - 1, columns] += change
         value[node, columns] += next_change
         if part:
             value[:, short] -= smooth
+            value[kink, short_columns] = rest
         w = weights[:, step - 1]
         core, spare = cont[inner], work[inner]
         np.multiply(value[inner], w[0], out=core)
@@ -245,33 +258,58 @@ def _kink_correction(gain: Array, columns: Count) -> tuple[Count, Array, Array]:
     return node, np.where(crosses, -excess, 0.0) - after, after
 
 
-def _smooth_part(
-    options: Contracts, times: Array, due: Array, variance: Array, shape: Array, moved: Array, beside: Array
-) -> tuple[Flags, Flags, Array]:
+def _apart(
+    options: Contracts, times: Array, due: Array, short: Flags, apart: Array, first: float, moved: Array, beside: Array
+) -> tuple[Flags, Array, Count, Array]:
     """What to do where a share goes ex so soon before expiry that the last step leaves a kink between the nodes.
 
-    Of the value at that ex-date a European option is taken off, the one whose kink it has, and only what is left,
-    which is small and flat, goes through the branches; the European value is added a step earlier. A call worth
-    exercising at the strike has the kink of its exercise at the ex-date, any other option that of expiry.
+    Of the value at that ex-date a European option is taken off, the one whose kink it has, and only the rest, which is
+    small, goes through the branches; the European value is added a step earlier. A call worth exercising at the strike
+    has the kink of its exercise at the ex-date, any other option that of expiry. The rest has its bump there, narrower
+    than the nodes are apart: what they carry is its mean around each (under a hat that ends at the next), which keeps
+    its sum and its place.
 
     Returns
     -------
-    short, early, value : ndarray
-        Which options; whether theirs is the kink of exercise; the European values one step before, ``(node, short)``.
+    early : ndarray
+        Of the ``short`` ones: whether theirs is the kink of exercise.
+    whole : ndarray
+        Their European values one step before, ``(node, short)``.
+    kink, rest : ndarray
+        Seven nodes around the kink, and the rest there, ``(7, short)``.
     """
-    short = variance < SHORT_STEP
-    stdev, rate, tau = options.total_stdev, options.rate, options.tau_years
-    last = tau - times[-2]
-    at_the_money = 0.4 * stdev * np.sqrt(last / tau) * due
-    early = (options.sign > 0.0) & (due + beside > at_the_money)
-    end = np.where(early, times[-2], tau)
-    some = slice(None) if short.all() else short
-    left = (end - times[-3])[some]
-    carry = (rate - options.dividend_yield)[some]
-    forward = shape[:, some] * (options.sign * moved)[some] * np.exp(carry * left)
-    strike = np.where(early, np.maximum(-beside, SMALLEST_STRIKE * options.strike), due)[some]
-    value = black(forward, strike, stdev[some] * np.sqrt(left / tau[some]), options.sign[some])
-    return short, early, value * np.exp(-rate[some] * left)
+    stdev, rate, tau, end, before, due, spot, sign, apart = (
+        a[short]
+        for a in (
+            options.total_stdev, options.rate, options.tau_years, times[-2], times[-3], due, options.spot,
+            options.sign, apart,
+        )
+    )  # fmt: skip
+    carry, at_exercise = rate - options.dividend_yield[short], -sign * beside[short]
+    at_the_money = 0.4 * stdev * np.sqrt((tau - end) / tau) * due
+    early = (sign > 0.0) & (due - at_exercise > at_the_money)
+    strike = np.where(early, np.maximum(at_exercise, SMALLEST_STRIKE * due), due)
+    node_move = apart * stdev * -sign
+
+    def european(at: Array, move: Array, start: Array, stop: Array, strike: Array) -> Array:
+        left = stop - start
+        forward = spot * np.exp(at * node_move) * move * np.exp(carry * left)
+        total_stdev = np.maximum(stdev * np.sqrt(left / tau), SMALLEST_STDEV)
+        return black(forward, strike, total_stdev, sign) * np.exp(-rate * left)
+
+    count = round(-2.0 * first) + 1
+    whole = european(np.arange(count)[:, None] + first, moved[0, short], before, np.where(early, end, tau), strike)
+
+    place: Array = np.log(strike / (spot * moved[1, short])) / node_move - first
+    kink = np.clip(np.rint(place), 3, count - 4).astype(np.int64) + np.arange(-3, 4)[:, None]
+    at: Array = kink[3] + first + FINE
+    exercised = sign * spot * np.exp(at * node_move) * moved[1, short] + beside[short]
+    held_on = european(at, moved[1, short], end, tau, due)
+    rest = np.maximum(exercised, held_on) - np.where(early, np.maximum(exercised, 0.0), held_on)
+    means = np.zeros(kink.shape)
+    for share_of, values in zip(UNDER_HATS.T, rest):  # not a matrix product, whose roundings depend on its size
+        means += share_of[:, None] * values
+    return early, whole, kink, means
 
 
 def _at_the_middle(cont: Array, options: Contracts, apart: Array) -> Array:

@@ -1,19 +1,24 @@
 """Any valid table written in any dialect that is read comes back identical, or is asked about; never another number.
 
-Rung: identity (hypothesis). What writes the tables (`dialect_writer`) shares nothing with what reads them.
+Rung: identity (hypothesis; what writes the tables, `dialect_writer`, shares nothing with what reads them), twin (a
+reader of numbers that goes a character at a time, `strptime`) and independent library (pandas on spreadsheet numbers).
 """
 
 from __future__ import annotations
 
 import tempfile
-from datetime import date, timedelta
+from datetime import date, datetime, timedelta
 from pathlib import Path
 from typing import Any
 
+import pandas as pd
+import pyarrow as pa
 from hypothesis import HealthCheck, given, settings
 from hypothesis import strategies as st
 
 from data_loaders import DataProblems, History, load_history, read_history, readings, write_history
+from data_loaders.dates import asked_dates, read_dates
+from data_loaders.numbers import number_cells, read_numbers
 from tests.data_loaders.dialect_writer import DATE_FORMS, Style, write_table
 
 #: Two-digit years are read as 1969 to 2068, and not later than today.
@@ -137,3 +142,91 @@ def test_days_of_the_month_up_to_12_are_asked_about_unless_either_reading_is_the
         path.write_bytes(write_table(Style(dates="day first"), days, {"Close": [1.0] * len(days)}))
         _, asked = load(path, Style(dates="day first"))
     assert asked == any(day.day != day.month for day in days)
+
+
+# ---------------------------------------------------------------- cells against plain readers
+
+
+def plain_number(text: str, mark: str) -> float | None:
+    """A number with one decimal mark and thousands in threes, read a character at a time; None if it is none."""
+    text = text.strip(" \t")
+    sign = -1.0 if text[:1] in ("-", "\u2212") else 1.0
+    body = text[1:] if text[:1] in ("-", "+", "\u2212") else text
+    other = "," if mark == "." else "."
+    groups = [group for group in (other, " ", "'", "\u2019", "\u00a0", "\u2009", "\u202f") if group in body]
+    whole, point, rest = body.partition(mark)
+    if groups:
+        if len(groups) > 1 or groups[0] in rest:
+            return None
+        first, *threes = whole.split(groups[0])
+        if not (0 < len(first) <= 3 and first[0] != "0" and all(len(three) == 3 for three in threes)):
+            return None
+        whole = first + "".join(threes)
+        if not (whole.isascii() and whole.isdigit() and (rest == "" or (rest.isascii() and rest.isdigit()))):
+            return None
+    allowed = set("0123456789eE+-" if not groups else "0123456789")
+    if not set(whole + rest) <= allowed or not any(letter.isdigit() for letter in whole + rest):
+        return None
+    try:
+        value = float(f"{whole}{'.' if point else ''}{rest}")
+    except ValueError:
+        return None
+    return sign * value if whole[:1] not in "+-" or whole == "" else None
+
+
+@settings(max_examples=300, deadline=None)
+@given(
+    cells=st.lists(st.text("0123456789.,'\u00a0 -+e", min_size=1, max_size=9), min_size=1, max_size=12),
+    mark=st.sampled_from([".", ","]),
+)
+def test_numbers_are_what_a_plain_reader_says(cells: list[str], mark: str) -> None:
+    looked = number_cells("close", pa.array(cells), percent=False, money=False)
+    read = read_numbers(looked, "point" if mark == "." else "comma")
+    for i, cell in enumerate(cells):
+        expected = plain_number(cell.strip("\u00a0 "), mark)
+        if cell.strip("\u00a0 ") in ("", "-", ".", "--"):
+            assert read.missing[i]
+        elif expected is None:
+            assert read.other[i], cell
+        elif abs(expected) == float("inf"):
+            assert read.infinite[i], cell
+        else:
+            assert read.values[i] == expected, cell  # noqa: PD011  no frame
+
+
+NUMBERED = st.builds(
+    lambda a, b, c, mark: f"{a:02d}{mark}{b:02d}{mark}{c}",
+    st.integers(0, 33), st.integers(0, 33), st.integers(1700, 2300), st.sampled_from("////.-"),
+)  # fmt: skip
+
+
+@settings(max_examples=200, deadline=None)
+@given(
+    cells=st.lists(st.one_of(NUMBERED, st.just(""), st.just("soon")), min_size=1, max_size=12), day_first=st.booleans()
+)
+def test_days_and_months_are_what_the_calendar_says(cells: list[str], day_first: bool) -> None:
+    cells = ["01/01/2020"] * 13 + cells  # the form of the column
+    read = read_dates(pa.array(cells), asked_dates("DD/MM/YYYY" if day_first else "MM/DD/YYYY"))
+    for i, cell in enumerate(cells):
+        try:
+            expected = datetime.strptime(cell, "%d/%m/%Y" if day_first else "%m/%d/%Y").date()
+        except ValueError:
+            assert read.bad[i], cell
+            continue
+        assert not read.bad[i]
+        assert read.dates[i].item() == expected
+        assert read.outside[i] == (not date(1800, 1, 1) <= expected <= date(2199, 12, 31))
+
+
+@settings(max_examples=100, deadline=None)
+@given(days=st.lists(st.dates(date(1900, 3, 1), date(2199, 12, 31)), min_size=1, max_size=20))
+def test_spreadsheet_numbers_are_what_pandas_says(days: list[date]) -> None:
+    """pandas' own way: days since 30 December 1899, or since 1 January 1904."""
+    for name, origin in (("SERIAL", "1899-12-30"), ("SERIAL-1904", "1904-01-01")):
+        numbers = [(pd.Timestamp(day) - pd.Timestamp(origin)).days for day in days]
+        if min(numbers) < 0:
+            continue
+        read = read_dates(pa.array([str(number) for number in numbers]), asked_dates(name))
+        expected = pd.to_datetime(numbers, unit="D", origin=origin)
+        assert not read.bad.any()
+        assert read.dates.tolist() == [stamp.date() for stamp in expected]
