@@ -17,7 +17,8 @@ Mask = npt.NDArray[np.bool_]
 Lines = npt.NDArray[np.int64]
 
 _DATE_PATTERN = r"^\d{4}-\d{2}-\d{2}([T ]00:00(:00(\.0+)?)?)?$"
-_NUMBER_PATTERN = r"^[+-]?(\d+(\.\d*)?|\.\d+)([eE][+-]?\d+)?$"
+#: Plain numbers.
+NUMBER_PATTERN = r"^[+-]?(\d+(\.\d*)?|\.\d+)([eE][+-]?\d+)?$"
 
 
 def dates_from_text(column: pa.Array) -> tuple[Dates, Mask, Mask]:
@@ -74,7 +75,7 @@ def numbers_from_text(column: pa.Array) -> tuple[Floats, Mask, Mask, Mask, Mask]
         Cells that say there is no value, that say ``nan``, that are infinite or too large, that are no number.
     """
     text = pc.utf8_trim_whitespace(column)
-    plain = to_numpy(pc.match_substring_regex(text, _NUMBER_PATTERN))
+    plain = to_numpy(pc.match_substring_regex(text, NUMBER_PATTERN))
     numeric = pc.utf8_ltrim(text, characters="+")
     if not plain.all():
         numeric = pc.if_else(pa.array(plain), numeric, pa.scalar(None, pa.string()))

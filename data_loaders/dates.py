@@ -208,9 +208,10 @@ def read_dates(column: pa.Array, asked: AskedDates | None = None) -> DatesRead:
     if shape is None:
         return _read(text, ISO)
     if shape.family == "numbers" and shape.order == "ymd" and shape.years == 4:
-        strict = replace(shape, loose=False)
-        is_loose = 2 * _count(text, strict.pattern) < _count(text, shape.pattern)
-        shape = replace(shape, loose=is_loose)
+        mark = re.escape(shape.mark)
+        padded = _count(text, rf"^\d{{4}}{mark}(?:0\d{mark}\d\d|\d\d{mark}0\d)(?:\D|$)")
+        single = _count(text, rf"^\d{{4}}{mark}(?:\d{mark}\d|\d\d{mark}\d(?:\D|$))")
+        shape = replace(shape, loose=single > padded)
     shape = replace(shape, timed=_mostly_timed(text, shape))
     if shape.family == "serial":
         return _serial(text, shape)

@@ -14,7 +14,7 @@ import numpy as np
 import pyarrow as pa
 import pyarrow.compute as pc
 
-from .cells import Floats, Mask, numbers_from_text, to_numpy
+from .cells import NUMBER_PATTERN, Floats, Mask, numbers_from_text, to_numpy
 from .reading import Decimal
 
 #: Marks that may part thousands, besides the one of point and comma that is no decimal mark.
@@ -47,43 +47,6 @@ _PATTERNS: Mapping[Decimal, str] = {"point": _pattern(r"\.", ","), "comma": _pat
 
 
 @dataclass(frozen=True, slots=True, kw_only=True, eq=False)
-class NumberCells:
-    """The cells of one number column before it is settled what they are.
-
-    Attributes
-    ----------
-    text, bare : pyarrow array of string
-        As the file has them, trimmed; and without signs of percent and money.
-    percent : bool ndarray
-        Cells that had a percent sign.
-    currency : pyarrow array of string
-        The sign of money of each cell, empty if it has none.
-    plain : bool
-        Every cell is a plain number (digits, point, exponent) or says that there is none.
-    """
-
-    role: str
-    text: pa.Array
-    bare: pa.Array
-    percent: Mask
-    currency: pa.Array | None
-    plain: bool
-
-
-@dataclass(frozen=True, slots=True, kw_only=True)
-class DecimalMark:
-    """The decimal mark of a file.
-
-    ``mark`` is None where no cell has one, and where two readings are possible: then ``unclear`` names a column and
-    a row. ``settled_by`` names the column and row of a cell that only this mark can read.
-    """
-
-    mark: Decimal | None
-    settled_by: tuple[str, int] | None = None
-    unclear: tuple[str, int] | None = None
-
-
-@dataclass(frozen=True, slots=True, kw_only=True, eq=False)
 class NumbersRead:
     """A column of numbers.
 
@@ -108,13 +71,54 @@ class NumbersRead:
     thousands: tuple[str, ...]
 
 
+@dataclass(frozen=True, slots=True, kw_only=True, eq=False)
+class NumberCells:
+    """The cells of one number column before it is settled what they are.
+
+    Attributes
+    ----------
+    text, bare : pyarrow array of string
+        As the file has them, trimmed; and without signs of percent and money.
+    percent : bool ndarray
+        Cells that had a percent sign.
+    currency : pyarrow array of string
+        The sign of money of each cell, empty if it has none.
+    plain : NumbersRead or None
+        What they are with a decimal point, where every cell is a plain number (digits, point, exponent) or says that
+        there is none.
+    """
+
+    role: str
+    text: pa.Array
+    bare: pa.Array
+    percent: Mask
+    currency: pa.Array | None
+    plain: NumbersRead | None
+
+
+@dataclass(frozen=True, slots=True, kw_only=True)
+class DecimalMark:
+    """The decimal mark of a file.
+
+    ``mark`` is None where no cell has one, and where two readings are possible: then ``unclear`` names a column and
+    a row. ``settled_by`` names the column and row of a cell that only this mark can read.
+    """
+
+    mark: Decimal | None
+    settled_by: tuple[str, int] | None = None
+    unclear: tuple[str, int] | None = None
+
+
 def number_cells(role: str, column: pa.Array, *, percent: bool, money: bool) -> NumberCells:
     """Look at a column of text; `percent` and `money` say which signs may stand at its numbers."""
     text = pc.utf8_trim_whitespace(column)
     none = np.zeros(len(text), dtype=np.bool_)
-    _, _, _, _, other = numbers_from_text(text)
+    values, missing, nan, infinite, other = numbers_from_text(text)
     if not other.any():
-        return NumberCells(role=role, text=text, bare=text, percent=none, currency=None, plain=True)
+        plain = NumbersRead(
+            values=values, missing=missing, nan=nan, infinite=infinite, other=other, doubtful=none, thousands=()
+        )
+        return NumberCells(role=role, text=text, bare=text, percent=none, currency=None, plain=plain)
     bare = pc.replace_substring(text, "\u2212", "-")
     signs = none
     if percent:
@@ -129,7 +133,7 @@ def number_cells(role: str, column: pa.Array, *, percent: bool, money: bool) -> 
         currency = pc.if_else(pc.equal(before, ""), after, before)
         bare = pc.replace_substring_regex(bare, rf"^([+-]?){_GAP}[{_CURRENCIES}]{_GAP}([+-]?[\d.,])", r"\1\2")
         bare = pc.replace_substring_regex(bare, rf"(\d){_GAP}[{_CURRENCIES}]$", r"\1")
-    return NumberCells(role=role, text=text, bare=bare, percent=signs, currency=currency, plain=False)
+    return NumberCells(role=role, text=text, bare=bare, percent=signs, currency=currency, plain=None)
 
 
 def decimal_mark(columns: Sequence[NumberCells], *, usual: Decimal | None) -> DecimalMark:
@@ -141,14 +145,14 @@ def decimal_mark(columns: Sequence[NumberCells], *, usual: Decimal | None) -> De
         Taken for numbers such as ``1.234`` that nothing in the file settles. A file with commas between its columns
         has the point: a decimal comma would have had to be quoted. A quoted ``1,234`` stays unclear there too.
     """
-    with_comma = [to_numpy(pc.match_substring(cells.bare, ",")) for cells in columns]
-    if usual == "point" and all(cells.plain for cells in columns):
+    if usual == "point" and all(cells.plain is not None for cells in columns):
         return DecimalMark(mark="point" if columns else None)
     votes: dict[Decimal, int] = {"point": 0, "comma": 0}
     firsts: dict[Decimal, tuple[str, int]] = {}
     open_cells: list[tuple[str, int]] = []
     open_commas: list[tuple[str, int]] = []
-    for cells, has_comma in zip(columns, with_comma):
+    for cells in columns:
+        has_comma = to_numpy(pc.match_substring(cells.bare, ","))
         reads = {mark: to_numpy(pc.match_substring_regex(cells.bare, pattern)) for mark, pattern in _PATTERNS.items()}
         for mark in _PATTERNS:
             only = reads[mark] & ~reads["comma" if mark == "point" else "point"]
@@ -176,25 +180,20 @@ def decimal_mark(columns: Sequence[NumberCells], *, usual: Decimal | None) -> De
 
 def read_numbers(cells: NumberCells, mark: Decimal) -> NumbersRead:
     """All cells of a column with one decimal mark."""
-    none = np.zeros(len(cells.text), dtype=np.bool_)
-    if cells.plain and mark == "point":
-        values, missing, nan, infinite, other = numbers_from_text(cells.text)
-        return NumbersRead(
-            values=values, missing=missing, nan=nan, infinite=infinite, other=other, doubtful=none, thousands=()
-        )
+    if cells.plain is not None and mark == "point":
+        return cells.plain
     thousands_mark = "," if mark == "point" else "."
     good = to_numpy(pc.match_substring_regex(cells.bare, _PATTERNS[mark]))
     clean = pc.replace_substring_regex(cells.bare, f"[{thousands_mark}{''.join(_SPACES)}]", "")
     clean = pc.replace_substring(clean, ",", ".") if mark == "comma" else clean
-    # what is no number stays as the file has it: it may be 'n/a', or text to complain of
-    values, missing, nan, infinite, other = numbers_from_text(pc.if_else(pa.array(good), clean, cells.text))
-    unread = ~good & np.isfinite(values)
-    values[unread] = np.nan
+    # what is no number stays as the file has it: it may be 'n/a', or text to complain of; but 12.5 is none beside 12,75
+    stays = pc.if_else(pc.match_substring_regex(cells.text, NUMBER_PATTERN), "other mark", cells.text)
+    values, missing, nan, infinite, other = numbers_from_text(pc.if_else(pa.array(good), clean, stays))
     found = tuple(
         one for one in (thousands_mark, *_SPACES) if to_numpy(pc.match_substring(cells.bare, one))[good].any()
     )
     return NumbersRead(
-        values=values, missing=missing, nan=nan, infinite=infinite, other=other | unread,
+        values=values, missing=missing, nan=nan, infinite=infinite, other=other,
         doubtful=good & _doubtful(cells.bare, thousands_mark), thousands=found,
     )  # fmt: skip
 

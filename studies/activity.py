@@ -22,6 +22,8 @@ def activity_of(found: Replay) -> dict[str, Any]:
     """
     made: dict[str, dict[str, Any]] = {}
     for leg in found.legs:
+        if leg.leg.reference:
+            continue
         reason = leg.schedule.reason
         flags = [word for bits in leg.strike_flags.tolist() for word in flag_words(bits)]
         told = {
@@ -51,8 +53,10 @@ def activity_words(told: dict[str, Any]) -> dict[str, str]:
     if "contracts" in told:
         said["contracts"] = _each(
             told["contracts"],
-            lambda one: f"{one['fewest']:,} to {one['most']:,} held, up to {one['largest_rounding']:.2%} fewer options "
-            "than without rounding",
+            lambda one: (
+                f"{one['fewest']:,} to {one['most']:,} held, up to {one['largest_rounding']:.2%} fewer options "
+                "than without rounding"
+            ),
         )
     return said
 

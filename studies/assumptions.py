@@ -21,6 +21,8 @@ CAUTION = (
     "adviser before you trade."
 )
 
+#: More borrowed money than this share of wealth is remarked on.
+MOST_BORROWED = 0.25
 #: The first year of a history knows only part of a year of dividends.
 DIVIDEND_WINDOW_DAYS = 365
 
@@ -118,6 +120,30 @@ def warnings_of_settings(market: Market, overlay: Overlay, volatility: Volatilit
     return said
 
 
+def _holding_warnings(found: Replay) -> list[str]:
+    """What is not held at all, and what is held on borrowed money."""
+    said = []
+    legs = [leg for leg in found.legs if leg.leg.held_ratio > 0.0]
+    if not legs:
+        said.append("no leg is held: the overlay is the hold, whatever the verdict makes of differences of nothing")
+    for leg in legs:
+        none = int(np.count_nonzero(leg.count == 0.0))
+        if none:
+            said.append(
+                f"the portfolio is too small for one contract of the {leg.label.replace('_', ' ')} on {none} of "
+                f"{len(found)} days: its premiums and payoffs on these days were nobody's"
+            )
+    # the first day's cash lacks the costs that its wealth is counted before
+    debt = -found.cash[1:] / found.wealth[1:]
+    if debt.size and np.nanmax(debt, initial=0.0) > MOST_BORROWED:
+        day = int(np.nanargmax(debt))
+        said.append(
+            f"cash falls to minus {debt[day]:.0%} of wealth (on {found.dates[day + 1]}): it stands on borrowed "
+            "money, which a broker may not lend"
+        )
+    return said
+
+
 def warnings_of(found: Replay) -> list[str]:
     """Plain sentences about what may mislead."""
     market = found.market
@@ -144,6 +170,7 @@ def warnings_of(found: Replay) -> list[str]:
             said.append(
                 f"{below} of {len(leg.premium)} sold options ({leg.label}) brought less than they cost to trade"
             )
+    said += _holding_warnings(found)
     if (crossed := _crossed_days(found)) > 0:
         said.append(f"on {crossed} of {len(found)} days the bought put's strike lies above the sold call's")
     if not np.isfinite(found.wealth).all():

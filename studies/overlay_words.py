@@ -38,8 +38,8 @@ def option_cost_words(costs: Costs) -> str:
     spreads += [f"{costs.half_spread_percent:g}% of mid"] if costs.half_spread_percent else []
     spreads += [f"{costs.half_spread_min:g} in price"] if costs.half_spread_min else []
     said = f"costs a half-spread of {spreads[0] if len(spreads) == 1 else 'the largest of ' + ', '.join(spreads)}"
-    said += f" and {costs.commission:g} a contract" if costs.commission else ""
-    return said + (f", {costs.settlement_fee:g} a contract when exercised" if costs.settlement_fee else "")
+    said += f"; {costs.commission:g} a contract besides" if costs.commission else ""
+    return said + (f"; {costs.settlement_fee:g} a contract when exercised" if costs.settlement_fee else "")
 
 
 def _account(overlay: Overlay) -> str:

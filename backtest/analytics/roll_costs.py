@@ -74,8 +74,9 @@ MONEY_FIELDS = (
 
 
 def roll_costs(replay: Replay) -> RollCosts:
-    """Add up what each leg's rolls cost and brought."""
-    return RollCosts(years=years_between(replay.dates), legs=tuple(_leg_costs(replay, leg) for leg in replay.legs))
+    """Add up what each leg's rolls cost and brought; a leg that is never held only lends its strikes, and has none."""
+    held_legs = [leg for leg in replay.legs if not leg.leg.reference]
+    return RollCosts(years=years_between(replay.dates), legs=tuple(_leg_costs(replay, leg) for leg in held_legs))
 
 
 def payoffs_at_close(replay: Replay, leg: LegReplay) -> npt.NDArray[np.float64]:

@@ -35,8 +35,8 @@ extrapolated from 200 and 400 steps, by 0.9.
 ===========================================  ===================  ===================
 method                                       no dividends         one to four
 ===========================================  ===================  ===================
-lattice, 32 steps                            0.02    5.2     67   0.14    7.9    106
-**lattice, 64 steps, the one used**          0.01    1.8     19   0.05    3.4     58
+lattice, 32 steps                            0.02    5.2     67   0.14    6.6     58
+**lattice, 64 steps, the one used**          0.01    1.8     19   0.05    2.3     19
 lattice, 128 steps                           0.00    0.9      9   0.01    0.8      5
 Leisen-Reimer, 101 steps                     0.39   29.3    258   4.31   66.1    559
 Leisen-Reimer, 51 and 101, extrapolated      0.20   12.0    229   1.78   80.6    648

@@ -44,9 +44,16 @@ BRANCHES = 3  # to either side
 SOONER = (0.25, 0.5)
 #: Part of an even step: a shorter last one leaves more of a kink than nodes can see.
 SHORT_STEP = 0.5
-#: Places around a node, in nodes, and from values there to means under the hats of seven nodes.
-FINE = np.arange(-4.0, 4.0625, 0.125)[:, None]
-UNDER_HATS = 0.125 * np.maximum(1.0 - np.abs(np.arange(-3.0, 4.0)[:, None] - FINE.T), 0.0)
+#: Nodes around one, places around it in nodes, and from values there to those that the nodes carry: cubic interpolation
+#: turned around, so that a sum over the nodes keeps the moments up to the third. A place reaches two nodes either side.
+AROUND = np.arange(-6, 7)[:, None]
+FINE = np.arange(-8.0, 8.0625, 0.125)[:, None]
+_AWAY = np.abs(AROUND - FINE.T)
+CARRIED = 0.125 * np.where(
+    _AWAY < 1.0,
+    (1.0 - _AWAY**2) * (2.0 - _AWAY) / 2.0,
+    np.where(_AWAY < 2.0, (1.0 - _AWAY) * (2.0 - _AWAY) * (3.0 - _AWAY) / 6.0, 0.0),
+)
 #: Of the strike, where a dividend at expiry is larger than it.
 SMALLEST_STRIKE = 1e-12
 
@@ -172,7 +179,7 @@ def _roll_back(options: Contracts, times: Array, ex_index: Count, short: Flags) 
     columns = np.arange(len(tau))
     short = short & (due > SMALLEST_STRIKE * strike)
     if short.any():
-        early, whole, kink, rest = _apart(options, times, due, short, apart, nodes[0, 0], moved[-3:-1], beside[-2])
+        whole, kink, rest = _apart(options, times, due, short, apart, nodes[0, 0], moved[-3:-1], beside[-2])
         short_columns = np.flatnonzero(short)
     for step in range(steps - 1, 0, -1):
         np.multiply(shape, moved[step], out=value)
@@ -182,14 +189,15 @@ def _roll_back(options: Contracts, times: Array, ex_index: Count, short: Flags) 
         tail = value[: BRANCHES + 1] - value[BRANCHES]
         part = short.any() and step == steps - 1
         if part:
-            smooth = np.where(early, np.maximum(value[:, short], 0.0), cont[:, short])
-            change[short] = next_change[short] = 0.0
+            european = cont[:, short]
         np.maximum(value, cont, out=value)
         value[node - 1, columns] += change
         value[node, columns] += next_change
         if part:
-            value[:, short] -= smooth
-            value[kink, short_columns] = rest
+            value[:, short] -= european
+            # where exercise begins farther from the strike than four nodes, the nodes there see to it as ever
+            seen_to = (np.abs(node[short] - kink[6]) <= 4) | (np.abs(AROUND) <= 2)
+            value[kink, short_columns] = np.where(seen_to, rest, value[kink, short_columns])
         w = weights[:, step - 1]
         core, spare = cont[inner], work[inner]
         np.multiply(value[inner], w[0], out=core)
@@ -260,56 +268,49 @@ def _kink_correction(gain: Array, columns: Count) -> tuple[Count, Array, Array]:
 
 def _apart(
     options: Contracts, times: Array, due: Array, short: Flags, apart: Array, first: float, moved: Array, beside: Array
-) -> tuple[Flags, Array, Count, Array]:
+) -> tuple[Array, Count, Array]:
     """What to do where a share goes ex so soon before expiry that the last step leaves a kink between the nodes.
 
-    Of the value at that ex-date a European option is taken off, the one whose kink it has, and only the rest, which is
-    small, goes through the branches; the European value is added a step earlier. A call worth exercising at the strike
-    has the kink of its exercise at the ex-date, any other option that of expiry. The rest has its bump there, narrower
-    than the nodes are apart: what they carry is its mean around each (under a hat that ends at the next), which keeps
-    its sum and its place.
+    Of the value at that ex-date the European one is taken off, and only the rest, what exercise then brings more, goes
+    through the branches; the European value is added a step earlier. The rest bends at the strike within less than the
+    nodes are apart: what they carry there comes from many places between them (``CARRIED``).
 
     Returns
     -------
-    early : ndarray
-        Of the ``short`` ones: whether theirs is the kink of exercise.
     whole : ndarray
-        Their European values one step before, ``(node, short)``.
+        European values one step before, ``(node, short)``.
     kink, rest : ndarray
-        Seven nodes around the kink, and the rest there, ``(7, short)``.
+        Nodes around the strike, and the rest there, ``(13, short)``.
     """
-    stdev, rate, tau, end, before, due, spot, sign, apart = (
+    stdev, rate, tau, end, before, strike, spot, sign, distance = (
         a[short]
         for a in (
             options.total_stdev, options.rate, options.tau_years, times[-2], times[-3], due, options.spot,
             options.sign, apart,
         )
     )  # fmt: skip
-    carry, at_exercise = rate - options.dividend_yield[short], -sign * beside[short]
-    at_the_money = 0.4 * stdev * np.sqrt((tau - end) / tau) * due
-    early = (sign > 0.0) & (due - at_exercise > at_the_money)
-    strike = np.where(early, np.maximum(at_exercise, SMALLEST_STRIKE * due), due)
-    node_move = apart * stdev * -sign
+    carry = rate - options.dividend_yield[short]
+    node_move = distance * stdev * -sign
 
-    def european(at: Array, move: Array, start: Array, stop: Array, strike: Array) -> Array:
-        left = stop - start
+    def european(at: Array, move: Array, start: Array) -> Array:
+        left = tau - start
         forward = spot * np.exp(at * node_move) * move * np.exp(carry * left)
         total_stdev = np.maximum(stdev * np.sqrt(left / tau), SMALLEST_STDEV)
         return black(forward, strike, total_stdev, sign) * np.exp(-rate * left)
 
     count = round(-2.0 * first) + 1
-    whole = european(np.arange(count)[:, None] + first, moved[0, short], before, np.where(early, end, tau), strike)
+    nodes: Array = np.arange(float(count))[:, None] + first
+    whole = european(nodes, moved[0, short], before)
 
     place: Array = np.log(strike / (spot * moved[1, short])) / node_move - first
-    kink = np.clip(np.rint(place), 3, count - 4).astype(np.int64) + np.arange(-3, 4)[:, None]
-    at: Array = kink[3] + first + FINE
+    kink = np.clip(np.rint(place), 6, count - 7).astype(np.int64) + AROUND
+    at: Array = kink[6] + first + FINE
     exercised = sign * spot * np.exp(at * node_move) * moved[1, short] + beside[short]
-    held_on = european(at, moved[1, short], end, tau, due)
-    rest = np.maximum(exercised, held_on) - np.where(early, np.maximum(exercised, 0.0), held_on)
-    means = np.zeros(kink.shape)
-    for share_of, values in zip(UNDER_HATS.T, rest):  # not a matrix product, whose roundings depend on its size
-        means += share_of[:, None] * values
-    return early, whole, kink, means
+    rest = np.maximum(exercised - european(at, moved[1, short], end), 0.0)
+    carried = np.zeros(kink.shape)
+    for parts, values in zip(CARRIED.T, rest):  # not a matrix product, whose roundings depend on its size
+        carried += parts[:, None] * values
+    return whole, kink, carried
 
 
 def _at_the_middle(cont: Array, options: Contracts, apart: Array) -> Array:

@@ -13,12 +13,14 @@ import numpy.typing as npt
 import pytest
 
 from backtest.pricing.american import CashDividends, american, american_value_and_delta
+from backtest.pricing.black import european
+from tests.reference.slow_american import call_with_one_dividend
 
 Array = npt.NDArray[np.float64]
 
 
 def a_year_of_days(days: int = 250) -> tuple[dict[str, Any], Array, Array]:
-    """One call to its expiry, the numbers of its days and of four ex-dates, one of them before and one after."""
+    """One call to its expiry, the numbers of its days, and five ex-dates, two of them around expiry."""
     rng = np.random.default_rng(61)
     today = np.arange(1000.0, 1000.0 + days)
     return (
@@ -28,17 +30,17 @@ def a_year_of_days(days: int = 250) -> tuple[dict[str, Any], Array, Array]:
             "total_stdev": 0.25 * np.sqrt((1000.0 + days - today) / 365.0), "sign": 1.0,
         },
         today,
-        np.array([990.0, 1070.0, 1160.0, 1251.0]),
+        np.array([990.0, 1070.0, 1160.0, 1248.0, 1251.0]),
     )  # fmt: skip
 
 
 def test_every_day_is_priced_by_itself() -> None:
     """A year of daily marks in one call, and each day alone: the same to the last bit."""
     option, today, ex_days = a_year_of_days()
-    amounts = np.array([0.9, 1.1, 1.2, 1.3])
+    amounts = np.array([0.9, 1.1, 1.2, 1.3, 1.4])
     known = CashDividends.on_days(ex_days=ex_days, amounts=amounts, today=today)
     value, delta = american_value_and_delta(**option, dividends=known)
-    for day in (0, 69, 70, 159, 160, 249):
+    for day in (0, 69, 70, 159, 160, 247, 248, 249):
         alone = {name: a[day] if np.ndim(a) else a for name, a in option.items()}
         one = american(**alone, dividends=CashDividends(years=known.years[day], amounts=amounts))
         assert (float(one.value), float(one.delta)) == (value[day], delta[day])
@@ -48,7 +50,7 @@ def test_every_day_is_priced_by_itself() -> None:
 def test_what_becomes_known_later_changes_no_earlier_day() -> None:
     """Amounts a day: a special dividend announced on the 100th day, for a date before expiry (C4)."""
     option, today, ex_days = a_year_of_days()
-    before = np.tile([0.9, 1.1, 1.2, 1.3], (250, 1))
+    before = np.tile([0.9, 1.1, 1.2, 1.3, 1.4], (250, 1))
     after = np.concatenate((before, np.where(today < 1100.0, 0.0, 5.0)[:, None]), axis=1)
     ex_after = np.append(ex_days, 1200.0)
     marks = [
@@ -107,6 +109,55 @@ def test_order_of_dividends() -> None:
             )
         ]
         assert ways[0] == ways[1]
+
+
+# ---------------------------------------------------------------- close to expiry
+
+
+def european_value(option: dict[str, Any]) -> Array:
+    named = {name: value for name, value in option.items() if name != "total_stdev"}
+    return european(**named, vol_annual=option["total_stdev"] / np.sqrt(option["tau_years"])).value
+
+
+def test_a_call_on_a_share_that_goes_ex_on_the_day_of_expiry() -> None:
+    """Exercised before the drop of 0.8 it is a European call of 100 - 0.8, at spots all along the nodes."""
+    spots = np.linspace(85.0, 115.0, 61)
+    option = {"spot": spots, "strike": 100.0, "tau_years": 0.7, "rate": 0.04, "dividend_yield": 0.0,
+              "total_stdev": np.full(61, 0.25 * 0.7**0.5), "sign": 1.0}  # fmt: skip
+    known = CashDividends(years=np.array([0.7]), amounts=np.array([0.8]))
+    escrowed = spots - 0.8 * np.exp(-0.04 * 0.7)
+    expected = european_value({**option, "spot": escrowed, "strike": 100.0 - 0.8})
+    np.testing.assert_allclose(american(**option, dividends=known).value, expected, rtol=0, atol=2e-4)
+
+
+@pytest.mark.parametrize("days_before", [0.001, 1.0, 3.0, 6.0])
+def test_a_share_that_goes_ex_right_before_expiry(days_before: float) -> None:
+    """Kinks between the nodes, at spots all along them.
+
+    A put at a rate of 1e-6 is a European one but for 100 times that. A call is exact by its integral, with dividends
+    about as large as what a day's vol is worth at the money, 100 x 0.3 x 0.4 / sqrt(365) = 0.63, and large
+    ones, which take the price at which exercise begins a few nodes away from the strike.
+    """
+    spots, ex = np.linspace(85.0, 115.0, 61), 1.0 - days_before / 365.0
+    option = {"spot": spots, "strike": 100.0, "tau_years": 1.0, "rate": 1e-6, "dividend_yield": 0.0,
+              "total_stdev": np.full(61, 0.3), "sign": -1.0}  # fmt: skip
+    known = CashDividends(years=np.array([ex]), amounts=np.array([1.0]))
+    expected = european_value({**option, "spot": spots - 1.0})
+    np.testing.assert_allclose(american(**option, dividends=known).value, expected, rtol=0, atol=4e-4)
+    spots = spots[::4]
+    for cash in (0.05, 0.63, 1.0, 3.0, 10.0, 13.0):
+        known = CashDividends(years=np.array([ex]), amounts=np.array([cash]))
+        option = {**option, "spot": spots, "total_stdev": 0.3, "rate": 0.03, "sign": 1.0}
+        expected = np.array([call_with_one_dividend(s, 100.0, 1.0, 0.03, 0.3, ex, cash) for s in spots])
+        np.testing.assert_allclose(american(**option, dividends=known).value, expected, rtol=0, atol=2e-3)
+
+
+def test_a_little_interest_is_enough_for_a_put() -> None:
+    # 100 exp(-.0005) - 40 is less than 60 now
+    option = {"spot": 40.0, "strike": 100.0, "tau_years": 1.0, "dividend_yield": 0.0, "total_stdev": 0.1, "sign": -1.0}
+    assert float(american(**option, rate=0.0005).value) == 60.0
+    assert float(american(**option, rate=0.0005).held) < 60.0
+    assert float(american(**option, rate=-0.0005).value) == pytest.approx(100.0 * np.exp(0.0005) - 40.0, rel=1e-12)
 
 
 # ---------------------------------------------------------------- limits

@@ -68,7 +68,8 @@ def test_there_and_back() -> None:
 
 def exact_price(forward: float, strike: float, stdev: float) -> float:
     """Undiscounted price of the option out of the money, as the integral of vega: nothing is subtracted."""
-    x = abs(np.log1p((forward - strike) / strike))
+    gap = (forward - strike) / strike
+    x = abs(np.log1p(gap) if abs(gap) < 0.5 else np.log(forward / strike))
 
     def slope(t: float) -> float:  # t = ln(s)
         s = np.exp(t)
