@@ -3,29 +3,24 @@
 from __future__ import annotations
 
 import datetime as dt
-import re
-from collections.abc import Iterator, Mapping
-from dataclasses import dataclass, replace
+from collections.abc import Mapping
+from dataclasses import replace
 from pathlib import Path
 
 import numpy as np
 import pandas as pd
 import pyarrow.compute as pc
 
-from . import alignment, checks, repairs
+from . import alignment, checks
 from .cells import Dates, Floats, Mask, to_numpy
 from .errors import Problems
 from .history import History, SourceFile
+from .preparing import Prepared, in_span, prepared
 from .reading import PLAIN, Reading
 from .repairs import Repair
-from .schema import FILES, Kind, normal_name, tenor_days
-from .tables import Table, columns_of, read_table
+from .schema import FILES, Kind
+from .tables import Table, read_table
 from .words import counted
-
-#: A rates file that never reaches this many percent may hold decimals; it is remarked on.
-SMALL_RATE_PERCENT = 0.25
-#: Notes on how a file was read begin so, after its name.
-_TOLD = re.compile(r": (?:column .* was taken as the|not used: column|[\d,]+ (?:blank row|line|repeated header)s? )")
 
 
 def load_history(
@@ -81,7 +76,7 @@ def load_history(
     )
     loading = _Loading(problems)
     for kind, table in tables.items():
-        loading.take(_prepared(table, said[kind], problems, vol_unit, first_day, last_day))
+        loading.take(prepared(table, said[kind], problems, vol_unit, first_day, last_day))
     return loading.history(first_day, last_day, needed_to)
 
 
@@ -116,7 +111,7 @@ def load_histories(
     )
     problems.raise_if_any()
     shared = {
-        kind: _prepared(table, said[kind], problems, vol_unit, first_day, last_day)
+        kind: prepared(table, said[kind], problems, vol_unit, first_day, last_day)
         for kind, table in tables.items()
         if table.symbols is None
     }
@@ -133,7 +128,7 @@ def load_histories(
             reading = replace(said[kind], symbol=symbol)
             if (part := parts[kind].get(symbol)) is None:
                 part = _without_rows(table, reading, problems)
-            loading.take(_prepared(part, reading, problems, vol_unit, first_day, last_day))
+            loading.take(prepared(part, reading, problems, vol_unit, first_day, last_day))
         history = loading.history_or_none(first_day, last_day, None)
         if history is not None:
             histories[symbol] = history
@@ -183,114 +178,6 @@ def _without_rows(table: Table, reading: Reading, problems: Problems) -> Table:
     return table.rows(slice(0, 0))
 
 
-# ---------------------------------------------------------------- one file
-
-
-@dataclass(frozen=True, slots=True, kw_only=True, eq=False)
-class _Prepared:
-    """A table judged, sorted and in our units; what was done to it and what is worth knowing."""
-
-    table: Table
-    source: SourceFile | None
-    repairs: tuple[Repair, ...]
-    notes: tuple[str, ...]
-
-
-def _prepared(
-    table: Table, reading: Reading, problems: Problems, vol_unit: checks.Unit | None, first_day: dt.date | None,
-    last_day: dt.date | None,
-) -> _Prepared:  # fmt: skip
-    """Judge a table; sort it and turn its unit into ours."""
-    if not len(table.dates):
-        return _Prepared(table=table, source=None, repairs=(), notes=())
-    rows = _in_span(table.dates, first_day, last_day) if table.kind == "prices" else None
-    checks.judge(table, problems, rows=rows)
-    unit: str | None = "percent" if table.kind == "rates" else None
-    notes: list[str] = []
-    if table.kind == "vol":
-        if table.percent and vol_unit == "decimal":
-            problems.add("percent-unit", file=table.file, kind=table.kind)
-        unit = checks.judge_vol(table, problems, "percent" if table.percent else vol_unit)
-        notes += _unit_note(table, vol_unit)
-    source = SourceFile(
-        kind=table.kind,
-        file=table.file,
-        sha256=table.sha256,
-        rows=len(table.dates),
-        first=table.dates.min().item(),
-        last=table.dates.max().item(),
-        columns=tuple(table.names.items()),
-        unit=unit,
-        taken=table.told(),
-        reading=reading,
-    )
-    notes += _file_notes(table)
-    done: list[Repair] = []
-    table, sorting = repairs.sort_by_date(table)
-    if sorting is not None:
-        done.append(sorting)
-    if unit == "percent":
-        table, turned = repairs.percent_to_decimal(table, table.kind)
-        done.append(turned)
-    return _Prepared(table=table, source=source, repairs=tuple(done), notes=tuple(notes))
-
-
-def _file_notes(table: Table) -> Iterator[str]:
-    """What was taken for what, and what was left out."""
-
-    def note(text: str) -> str:
-        return f"{table.file}: {text}."
-
-    for role, name in table.names.items():
-        if role == table.guessed:
-            yield note(f"its only other column, {name!r}, was taken as the {role}")
-        elif normal_name(name) != role and tenor_days(name) is None:
-            yield note(f"column {name!r} was taken as the {role}")
-    if ignored := [repr(name) for name in table.ignored if name.strip()]:
-        yield note(f"not used: column{'s' if len(ignored) > 1 else ''} {', '.join(ignored)}")
-    if table.blank_rows:
-        yield note(f"{counted(table.blank_rows, 'blank row')} left out")
-    dialect = table.dialect
-    for lines, where in ((dialect.above, "above the header"), (dialect.below, "below the last row")):
-        if lines:
-            yield note(f"{counted(len(lines), 'line')} {where} left out")
-    if dialect.comments:
-        yield note(f"{counted(len(dialect.comments), 'line')} of comment left out")
-    if dialect.repeated_headers:
-        yield note(f"{counted(dialect.repeated_headers, 'repeated header')} left out")
-    for role, column in columns_of(FILES[table.kind], table):
-        if column.missing == "absent" and (count := int(np.count_nonzero(table.missing[role]))):
-            yield note(f"column {table.names[role]!r} has no value in {counted(count, 'row')}")
-    if table.kind == "rates" and "rate" in table.numbers:
-        largest = np.abs(table.numbers["rate"][np.isfinite(table.numbers["rate"])]).max(initial=0.0)
-        if 0 < largest < SMALL_RATE_PERCENT and not table.percent:
-            yield note(
-                f"the largest rate is {largest:g} and was read as {largest:g} percent a year; "
-                "if the file holds decimals, multiply them by 100"
-            )
-
-
-def is_told(note: str) -> bool:
-    """Whether a note only repeats what the source's ``taken`` says.
-
-    >>> is_told("p.csv: column 'Last' was taken as the close."), is_told("p.csv: column 'Open' has no value in 2 rows.")
-    (True, False)
-    """
-    return _TOLD.search(note) is not None
-
-
-def _unit_note(table: Table, vol_unit: checks.Unit | None) -> list[str]:
-    """The unit asked for is taken, but not in silence where the values speak against it."""
-    values = np.concatenate([*table.numbers.values(), np.empty(0)])
-    looks = checks.vol_unit(values)
-    if vol_unit is None or looks in (None, vol_unit):
-        return []
-    return [
-        f"{table.file}: the vols were read as {vol_unit}, as asked, but look like {looks} "
-        f"(median {np.median(values[values > 0]):g})."
-    ]
-
-
 # ---------------------------------------------------------------- one history
 
 
@@ -310,13 +197,13 @@ class _Loading:
         self.repairs: list[Repair] = []
         self.notes: list[str] = []
 
-    def take(self, prepared: _Prepared) -> None:
+    def take(self, ready: Prepared) -> None:
         """One file more."""
-        self.tables[prepared.table.kind] = prepared.table
-        if prepared.source is not None:
-            self.sources.append(prepared.source)
-        self.repairs += prepared.repairs
-        self.notes += prepared.notes
+        self.tables[ready.table.kind] = ready.table
+        if ready.source is not None:
+            self.sources.append(ready.source)
+        self.repairs += ready.repairs
+        self.notes += ready.notes
 
     def history(self, first_day: dt.date | None, last_day: dt.date | None, needed_to: dt.date | None) -> History:
         """Everything put together, if nothing is wrong."""
@@ -350,7 +237,7 @@ class _Loading:
         if table is None:
             return None
         days = np.unique(table.dates)
-        kept: Dates = days[_in_span(days, first_day, last_day)]
+        kept: Dates = days[in_span(days, first_day, last_day)]
         if len(kept):
             return kept
         self.problems.add(
@@ -382,12 +269,3 @@ def _complete(columns: dict[str, Floats], count: int) -> Mask:
         if alignment.is_carried(name):
             complete &= np.isfinite(values)
     return complete
-
-
-def _in_span(dates: Dates, first_day: dt.date | None, last_day: dt.date | None) -> Mask:
-    inside = np.ones(len(dates), dtype=np.bool_)
-    if first_day is not None:
-        inside &= dates >= np.datetime64(first_day, "D")
-    if last_day is not None:
-        inside &= dates <= np.datetime64(last_day, "D")
-    return inside

@@ -204,7 +204,7 @@ def tell_taken(history: Any) -> None:
 
 def tell_notes(history: Any) -> None:
     """What is worth knowing and not in that table."""
-    from data_loaders.loading import is_told
+    from data_loaders.preparing import is_told
 
     for note in history.notes:
         if not is_told(note):

@@ -91,6 +91,8 @@ DIALECT_CASES = [
          says=("not a date of the form DD/MM/YYYY (for example 20/03/2008)",)),
     Case("bad-date", {"prices": "date,close\n3-Jan-20,1\n6-Jän-20,1\n7-Jan-20,1\n"}, "prices", line=3, column="date", value="6-Jän-20",
          says=("of the form DD-MON-YY (for example 20-MAR-08)",)),
+    Case("ragged-row", {"prices": "date,close\n3 Jan 2020,1\n6 Jan 2020,2\n7 Ja"}, "prices", line=4, value="7 Ja", says=("has 1 field and",)),
+    Case("not-a-number", {"prices": 'date,close,note\r2020-01-02,1,"two\rlines"\r2020-01-03,x,\r'}, "prices", line=4, column="close", value="x"),
     Case("bad-date", {"prices": "date,close\n61,1\n60,1\n"}, "prices", line=3, column="date", value="60", options=said(date_formats=["SERIAL"]),
          says=("of the form SERIAL (for example 39527)",)),
     Case("two-digit-year", {"prices": "date,close\n30/12/99,1\n29/12/68,1\n"}, "prices", line=3, column="date", value="29/12/68",

@@ -251,8 +251,8 @@ tax_percent = 25
 cost_bps = 5
 """
     cost = (
-        "a half-spread of the largest of 0.5 vol points, 2% of mid, 0.05 in price and 1.25 a contract, 3 a contract when "
-        "exercised"
+        "a half-spread of the largest of 0.5 vol points, 2% of mid, 0.05 in price; 1.25 a contract besides; 3 a contract "
+        "when exercised"
     )
     runs_out = "what is live when that ends runs out, it opens again at its next roll"
     assert overlay_lines(parse_overlay(text)) == [
