@@ -23,7 +23,7 @@ Array = npt.NDArray[np.float64]
 Options = dict[str, Any]
 
 STRIKE = 100.0
-TYPICAL, WORST = 4e-6 * STRIKE, 1e-4 * STRIKE
+TYPICAL, WORST = 3e-6 * STRIKE, 1e-4 * STRIKE
 EXAMPLES = settings(max_examples=60, deadline=None, derandomize=True, database=None)
 
 
@@ -142,7 +142,7 @@ def test_calls_with_one_dividend_exactly() -> None:
         expected.append(call_with_one_dividend(s, STRIKE, tau, r, vol, ex, cash))
     error = np.array(found) - np.array(expected)
     assert np.abs(error).max() < 0.2 * WORST
-    assert (error**2).mean() ** 0.5 < 0.2 * TYPICAL
+    assert (error**2).mean() ** 0.5 < 0.3 * TYPICAL
 
 
 @pytest.mark.parametrize("sign", [1.0, -1.0], ids=["call", "put"])
