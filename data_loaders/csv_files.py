@@ -22,6 +22,7 @@ from .sources import Refused, Source
 _RAGGED_CHARACTERS = 500
 #: Of such rows at the end of a file, the text of so many is kept: they may be notes.
 _LAST_RAGGED = 100
+_QUOTED_POINTS = re.compile(rb'"\s*[-+]?[1-9]\d{0,2}\.\d{3}\s*"')
 
 
 @dataclass(frozen=True, slots=True)
@@ -99,6 +100,7 @@ def read_text(source: Source, kind: Kind, reading: Reading) -> TextTable:
             separator=separator,
             above=tuple(line for line in layout.above if line.strip()),
             blank_rows=int(np.count_nonzero(~filled)) + len(blank),
+            points_in_quotes=b'"' in data and _QUOTED_POINTS.search(data, start) is not None,
         ),
     )
 

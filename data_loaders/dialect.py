@@ -57,6 +57,8 @@ class Dialect:
     above, below, comments : tuple of str
         Lines left out above the header, below the last row, and between rows.
     repeated_headers, blank_rows : int
+    points_in_quotes : bool
+        Numbers such as ``"1.234"`` stand in quotes.
     two_digit_years, timed : bool
     """
 
@@ -75,6 +77,7 @@ class Dialect:
     comments: tuple[str, ...] = ()
     repeated_headers: int = 0
     blank_rows: int = 0
+    points_in_quotes: bool = False
 
     def told(self) -> tuple[tuple[str, str], ...]:
         """What was found, as pairs of a word and a description.

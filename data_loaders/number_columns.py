@@ -96,7 +96,8 @@ def _stored(column: pa.Array) -> NumbersRead:
 def _mark(table: Table, cells: list[NumberCells], reading: Reading) -> DecimalMark:
     if reading.decimal is not None:
         return DecimalMark(mark=reading.decimal)
-    return decimal_mark(cells, usual="point" if table.dialect.separator == "," else None)
+    dialect = table.dialect
+    return decimal_mark(cells, usual="point" if dialect.separator == "," and not dialect.points_in_quotes else None)
 
 
 def _is_usual(table: Table, found: DecimalMark) -> bool:

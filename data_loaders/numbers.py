@@ -25,6 +25,11 @@ _CURRENCIES = "$€£¥₹"
 #: Spaces that may stand between a number and its sign of percent or money.
 _GAP = "[ \u00a0\u2009\u202f]*"
 
+#: A number that is another one with the other decimal mark: one group of three digits, or the digits of a fraction.
+_OPEN = _SIGN + r"[1-9]\d{{0,2}}{mark}\d{{3}}$"
+#: Cells looked at before all are.
+_FIRST = 1000
+
 #: Marks for thousands as a person calls them.
 MARK_NAMES = {
     ",": "comma", ".": "point", " ": "space", "\u00a0": "no-break space", "\u2009": "thin space",
@@ -142,40 +147,46 @@ def decimal_mark(columns: Sequence[NumberCells], *, usual: Decimal | None) -> De
     Parameters
     ----------
     usual : {"point", "comma"} or None
-        Taken for numbers such as ``1.234`` that nothing in the file settles. A file with commas between its columns
-        has the point: a decimal comma would have had to be quoted. A quoted ``1,234`` stays unclear there too.
+        Taken for numbers such as ``1.234`` that nothing in the file settles, unless whole numbers of three digits stand
+        in the same column: ``987`` and ``1.234`` look like thousands. A file with commas between its columns has the
+        point: a decimal comma would have had to be quoted. A quoted ``1,234`` stays unclear there too.
     """
     if usual == "point" and all(cells.plain is not None for cells in columns):
-        return DecimalMark(mark="point" if columns else None)
+        for cells in columns:
+            # nearly always the first number tells
+            if _reads(cells.bare[:_FIRST])["point"].any():
+                return DecimalMark(mark="point")
     votes: dict[Decimal, int] = {"point": 0, "comma": 0}
     firsts: dict[Decimal, tuple[str, int]] = {}
     open_cells: list[tuple[str, int]] = []
-    open_commas: list[tuple[str, int]] = []
     for cells in columns:
-        has_comma = to_numpy(pc.match_substring(cells.bare, ","))
-        reads = {mark: to_numpy(pc.match_substring_regex(cells.bare, pattern)) for mark, pattern in _PATTERNS.items()}
+        only = _reads(cells.bare)
         for mark in _PATTERNS:
-            only = reads[mark] & ~reads["comma" if mark == "point" else "point"]
-            votes[mark] += int(np.count_nonzero(only))
-            if only.any():
-                firsts.setdefault(mark, (cells.role, int(np.argmax(only))))
-        marked = has_comma | to_numpy(pc.match_substring(cells.bare, "."))
-        both = reads["point"] & reads["comma"] & marked
-        if both.any():
-            open_cells.append((cells.role, int(np.argmax(both))))
-        if (both & has_comma).any():
-            open_commas.append((cells.role, int(np.argmax(both & has_comma))))
+            votes[mark] += int(np.count_nonzero(only[mark]))
+            if only[mark].any():
+                firsts.setdefault(mark, (cells.role, int(np.argmax(only[mark]))))
+        points = to_numpy(pc.match_substring_regex(cells.bare, _OPEN.format(mark=r"\.")))
+        commas = to_numpy(pc.match_substring_regex(cells.bare, _OPEN.format(mark=",")))
+        whole = to_numpy(pc.match_substring_regex(cells.bare, rf"{_SIGN}\d{{3,}}$"))
+        unsettled = commas | points if usual is None or whole.any() else commas
+        if unsettled.any():
+            open_cells.append((cells.role, int(np.argmax(unsettled))))
     if votes["point"] != votes["comma"]:
         winner: Decimal = "point" if votes["point"] > votes["comma"] else "comma"
         return DecimalMark(mark=winner, settled_by=firsts[winner])
     if votes["point"]:
         # as many say the one as the other: whichever is taken, the others are no numbers
         return DecimalMark(mark="point", settled_by=firsts["point"])
-    if open_commas:
-        return DecimalMark(mark=None, unclear=open_commas[0])
     if open_cells:
-        return DecimalMark(mark=usual, unclear=None if usual else open_cells[0])
-    return DecimalMark(mark=None)
+        return DecimalMark(mark=None, unclear=open_cells[0])
+    has_point = any(to_numpy(pc.match_substring_regex(cells.bare, r"\d\.|\.\d")).any() for cells in columns)
+    return DecimalMark(mark=usual if has_point else None)
+
+
+def _reads(bare: pa.Array) -> dict[Decimal, Mask]:
+    """Cells that only one of the marks can read."""
+    reads = {mark: to_numpy(pc.match_substring_regex(bare, pattern)) for mark, pattern in _PATTERNS.items()}
+    return {"point": reads["point"] & ~reads["comma"], "comma": reads["comma"] & ~reads["point"]}
 
 
 def read_numbers(cells: NumberCells, mark: Decimal) -> NumbersRead:

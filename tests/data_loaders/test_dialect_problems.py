@@ -10,6 +10,7 @@ import json
 import subprocess
 import sys
 import zipfile
+from datetime import date
 from pathlib import Path
 
 import numpy as np
@@ -17,7 +18,7 @@ import pyarrow as pa
 import pyarrow.parquet as pq
 import pytest
 
-from data_loaders import DataProblems, ReadingError, load_histories, load_history, readings, sources
+from data_loaders import DataProblems, ReadingError, dates, load_histories, load_history, readings, sources
 from tests.data_loaders.dialect_cases import DIALECT_CASES, LONG
 from tests.data_loaders.problem_case import PRICES, Case, check, problems_of, write
 
@@ -155,3 +156,33 @@ def test_options_that_make_no_sense(options: dict[str, list[str]], option: str, 
 def test_a_column_of_symbols_without_a_symbol_is_for_many_histories(tmp_path: Path) -> None:
     with pytest.raises(ValueError, match="a column of symbols without a symbol is for load_histories"):
         load_history(**write(tmp_path, {"prices": PRICES}), readings=readings(symbol_column="ticker"))
+
+
+def test_a_column_is_the_one_that_is_spelt_so(tmp_path: Path) -> None:
+    paths = write(tmp_path, {"prices": "date,x,X\n2020-01-02,1,2\n"})
+    assert load_history(**paths, readings=readings(columns=["close=X"])).frame["close"].tolist() == [2]
+    assert load_history(**paths, readings=readings(columns=["close=x"])).frame["close"].tolist() == [1]
+
+
+# ---------------------------------------------------------------- days that are still to come
+
+
+def test_years_still_to_come_settle_what_a_two_digit_year_is(tmp_path: Path, monkeypatch: pytest.MonkeyPatch) -> None:
+    paths = write(tmp_path, {"prices": "date,close\n30/01/20,1\n31/01/20,2\n"})
+    # on that day 30/01/20 could not yet be 20 January 2030
+    monkeypatch.setattr(dates, "_today", lambda: date(2026, 1, 1))
+    history = load_history(**paths)
+    assert [str(day.date()) for day in history.frame.index] == ["2020-01-30", "2020-01-31"]
+    assert dict(history.sources[0].taken)["dates"].startswith("DD/MM/YY, settled by '30/01/20'")
+    monkeypatch.setattr(dates, "_today", lambda: date(2040, 1, 1))
+    (problem,) = problems_of(tmp_path, {"prices": paths["prices"].read_bytes()})
+    assert problem.code == "date-form-unclear"
+
+
+def test_a_date_that_has_no_name(tmp_path: Path) -> None:
+    days = pa.array([18263, 2_000_000_000], pa.int32()).cast(pa.date32())
+    pq.write_table(pa.table({"date": days, "close": [1.0, 2.0]}), tmp_path / "prices.csv")
+    with pytest.raises(DataProblems) as caught:
+        load_history(prices=tmp_path / "prices.csv")
+    (problem,) = caught.value.problems
+    assert (problem.code, problem.line) == ("date-out-of-range", 2)

@@ -16,7 +16,17 @@ import pyarrow as pa
 import pyarrow.parquet as pq
 import pytest
 
-from data_loaders import History, StoreError, check_name, history_names, load_history, read_history, write_history
+from data_loaders import (
+    History,
+    Reading,
+    StoreError,
+    check_name,
+    history_names,
+    load_history,
+    read_history,
+    readings,
+    write_history,
+)
 
 
 @pytest.fixture
@@ -187,3 +197,24 @@ def test_other_schema_version(history: History, tmp_path: Path) -> None:
 def test_nan_survives(history: History, tmp_path: Path) -> None:
     write_history(history, tmp_path, "spx")
     np.testing.assert_array_equal(read_history(tmp_path, "spx").frame["open"], [1, np.nan, 3])
+
+
+def test_what_was_said_and_found_of_a_file_survives_and_may_be_missing(tmp_path: Path) -> None:
+    (tmp_path / "p.csv").write_text("Tag;Kurs\n13.01.2020;1.000,5\n")
+    said = readings(columns=["date=Tag", "close=Kurs"], decimals=["comma"])
+    history = load_history(prices=tmp_path / "p.csv", readings=said)
+    path = write_history(history, tmp_path, "dax")
+    (source,) = read_history(tmp_path, "dax").sources
+    assert source.reading == Reading(columns=(("date", "Tag"), ("close", "Kurs")), decimal="comma")
+    assert source.taken == history.sources[0].taken
+    assert (
+        dict(source.taken)["text"] == "UTF-8, columns separated by semicolons, decimal comma, point between thousands"
+    )
+    # histories stored before files of other dialects were read
+    table = pq.read_table(path)
+    facts = json.loads(table.schema.metadata[b"rollband.history"])
+    for entry in facts["sources"]:
+        del entry["reading"], entry["taken"]
+    pq.write_table(table.replace_schema_metadata({b"rollband.history": json.dumps(facts).encode()}), path)
+    (source,) = read_history(tmp_path, "dax").sources
+    assert (source.reading, source.taken) == (Reading(), ())

@@ -17,7 +17,7 @@ import pytest
 from hypothesis import given, settings
 from hypothesis import strategies as st
 
-from data_loaders import load_history, read_history, write_history
+from data_loaders import DataProblems, Reading, load_history, read_history, write_history
 from data_loaders.alignment import carried_columns
 from data_loaders.cells import dates_from_text, numbers_from_text
 from data_loaders.checks import gaps, repeated, vol_unit
@@ -43,7 +43,13 @@ def test_valid_tables_read_back_identical(data: st.DataObject) -> None:
             writer.writerow(data.draw(st.sampled_from([str.lower, str.upper, str.title]))(name) for name in columns)
             rows = {"date": days, **table}
             writer.writerows([rows[name][i] for name in columns] for i in range(len(days)))
-        history = load_history(prices=path)
+        try:
+            history = load_history(prices=path)
+        except DataProblems as problems:
+            # a file of nothing but 1.125 in quotes, say, may mean thousands
+            if set(problems.totals) != {"decimal-unclear"}:
+                raise
+            history = load_history(prices=path, readings={"prices": Reading(decimal="point")})
         order = np.argsort(np.array(days, dtype="datetime64[D]"))
         assert history.frame.index.to_numpy().astype("datetime64[D]").tolist() == sorted(days)
         assert set(history.frame.columns) == set(names)

@@ -300,7 +300,7 @@ HOSTILE: dict[str, tuple[tuple[str, ...], Any, str]] = {
     "window": (("settings", "to"), "1970-01-01", "asks for what cannot be replayed: "),
     "name outside": (("source", "history"), "../../demo", "cannot be used: '../../demo' is no name of a stored history"),  # noqa: E501
     "store": (("source", "store"), "a\0b", "cannot be used: store is 'a\\x00b', no path"),
-    "files": (("source",), {"files": {"vol": "v.csv"}}, "cannot be used: source.files takes prices, vol, dividends, rates, and prices at least"),  # noqa: E501
+    "files": (("source",), {"files": {"vol": "v.csv"}}, "cannot be used: source.files takes prices, vol, dividends, rates, signal, and prices at least"),  # noqa: E501
     "path": (("source",), {"files": {"prices": 3}}, "cannot be used: source.files.prices is 3, no path"),
     "unit": (("source",), {"files": {"prices": "p.csv"}, "vol_unit": 3}, "cannot be used: source.vol_unit is 3"),
 }  # fmt: skip

@@ -160,8 +160,10 @@ def test_the_manifest_makes_the_folder_again(make: Callable[[str], Made], years:
 
 def test_options_of_the_command_line_leave_it_as_it_is() -> None:
     agreed = parse_overlay(CASES["band, all asked"])
-    changed = with_options(agreed, account=Account.cash, vol_quote=None, smile="flat", costs={"stock_bps": 2.0})
-    assert changed.overlay.account == "cash"
+    changed = with_options(
+        agreed, account=Account.cash, vol_quote=None, smile="flat", portfolio=2e6, costs={"stock_bps": 2.0}
+    )
+    assert (changed.overlay.account, changed.overlay.portfolio) == ("cash", 2e6)
     assert (changed.counterparty, changed.sale) == (agreed.counterparty, agreed.sale)
 
 
