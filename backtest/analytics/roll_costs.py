@@ -82,11 +82,15 @@ def roll_costs(replay: Replay) -> RollCosts:
 def payoffs_at_close(replay: Replay, leg: LegReplay) -> npt.NDArray[np.float64]:
     """Intrinsic value of each finished option of a leg on the day it was closed, in price, shape ``(finished roll,)``.
 
-    For one that settled this is what it paid; one sold before expiry was worth more, but protected by no more.
+    For one that settled this is what it paid; one sold before expiry was worth more, but protected by no more. Where no
+    whole contract was held nothing was paid to anybody: zero.
     """
     done = leg.done
     intrinsic = np.maximum(leg.leg.sign * (replay.spot[leg.closed[done]] - leg.strike[done]), 0.0)
-    return np.where(leg.schedule.settles[done], leg.close_value[done], intrinsic)
+    paid = np.where(leg.schedule.settles[done], leg.close_value[done], intrinsic)
+    if replay.overlay.portfolio is None:
+        return paid
+    return np.where(leg.count[leg.closed[done] - 1] == 0.0, 0.0, paid)
 
 
 def _leg_costs(replay: Replay, leg: LegReplay) -> LegCosts:

@@ -17,6 +17,8 @@ from .state import ABOVE_ALL, BELOW_ALL, OpenState, StrikeRule
 Array = npt.NDArray[np.float64]
 Flags = npt.NDArray[np.int64]
 
+#: Two strikes as near as this, relative, are the same.
+STRIKE_TOLERANCE = 1e-12
 #: What happened to a strike on its way from the rule, as bits; an option may have several.
 NOT_BELOW, NOT_ABOVE, NO_SOLUTION, RATCHET, KEPT, LIFTED = 1, 2, 4, 8, 16, 32
 FLAG_WORDS = {
@@ -46,7 +48,8 @@ class Adjusted:
     not_below_leg : int, optional
         Never below the strike live in that leg (numbered from 1): a call that would sit under a live put is lifted.
     strike_step : float, optional
-        Rounded to the nearest multiple of this, ties away from spot.
+        Rounded to the nearest multiple of this, ties away from spot; to the next above where the nearest would lie
+        under the leg of ``not_below_leg``.
 
     Examples
     --------
@@ -147,6 +150,10 @@ def _limit(limits: Adjusted, raw: Array, state: OpenState, rolls: slice, flags: 
         strike, flags = np.where(lifted, other, strike), flags | np.where(lifted, LIFTED, 0)
     if limits.strike_step is not None:
         strike = round_to_step(strike, limits.strike_step, spot)
+        if limits.not_below_leg is not None:
+            # a listed strike under the other leg's would undo what it was lifted for
+            under = strike < other * (1.0 - STRIKE_TOLERANCE)
+            strike, flags = np.where(under, strike + limits.strike_step, strike), flags | np.where(under, LIFTED, 0)
     return strike, flags
 
 

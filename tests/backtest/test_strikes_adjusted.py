@@ -237,7 +237,9 @@ def test_listed_steps(strike: float, step: float, spot: float, listed: float) ->
             {"not_below": 80, "not_below_leg": 2}, 101.0, "lowest strike; lifted over the put", id="bound, leg"
         ),
         pytest.param({"not_above": 85, "not_below_leg": 2}, 101.0, "lifted over the put", id="the leg above the bound"),
-        pytest.param({"not_below_leg": 2, "strike_step": 5}, 100.0, "lifted over the put", id="the step after the leg"),
+        pytest.param(
+            {"not_below_leg": 2, "strike_step": 5}, 105.0, "lifted over the put", id="the next step above the leg"
+        ),
         pytest.param({"ratchet": True, "strike_step": 10}, 90.0, "ratchet", id="the step after the ratchet"),
         pytest.param({"not_below": 83, "strike_step": 10}, 90.0, "lowest strike", id="the step after the bound"),
     ],

@@ -165,6 +165,9 @@ def adjust(agreed: Strike, rule: Any, wanted: Wanted, replaced: Strike | None) -
         agreed.flags.add("lifted over the put")
     if rule.strike_step is not None:
         agreed.strike = nearest_listed(agreed.strike, rule.strike_step, spot)
+        if other is not None and agreed.strike < other.strike * (1.0 - 1e-12):
+            agreed.strike += rule.strike_step  # the nearest would lie under the put again
+            agreed.flags.add("lifted over the put")
 
 
 def nearest_listed(strike: float, step: float, spot: float) -> float:

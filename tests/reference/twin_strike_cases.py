@@ -157,6 +157,11 @@ WRAPPERS = [
         costs=DEAR,
     ),
     case(
+        "a listed call not below the put",
+        put(strike=PercentOfSpot(100)),
+        call(strike=Adjusted(rule=PercentOfSpot(101), not_below_leg=1, strike_step=50.0)),
+    ),
+    case(
         "strike steps as wide as the band",
         put(strike=Adjusted(rule=PercentOfSpot(100), strike_step=300.0), roll="month"),
         call(strike=Adjusted(rule=PercentOfForward(100), strike_step=0.5)),

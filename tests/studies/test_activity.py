@@ -19,8 +19,9 @@ from backtest import (
     Replay,
     replay,
 )
+from backtest.analytics.roll_costs import payoffs_at_close
 from studies.activity import activity_of, activity_words
-from studies.assumptions import assumptions_of
+from studies.assumptions import assumptions_of, warnings_of
 
 DAYS = pd.bdate_range("2015-01-01", "2018-12-31", name="date")
 RNG = np.random.default_rng(11)
@@ -90,3 +91,12 @@ def test_contracts_and_what_rounding_left_out(account: str) -> None:
     wanted = found.rolls_frame()["units"] * 0.5 * 130_000.0 / 100.0
     assert told["largest_rounding"] == pytest.approx((1.0 - held / wanted).max(), abs=1e-12)
     assert "whole contracts of 100" in assumptions_of(found)["account"]
+
+
+def test_a_put_of_which_no_contract_was_held_paid_nobody() -> None:
+    put = Leg(**PUT)  # type: ignore[arg-type]
+    whole, none = played(put), played(put, portfolio=5_000.0)
+    assert payoffs_at_close(whole, whole.legs[0]).max() > 0.0
+    assert none.leg_count.max() == 0.0
+    assert payoffs_at_close(none, none.legs[0]).tolist() == [0.0] * int(none.legs[0].done.sum())
+    assert any("too small for one contract of the put on" in said for said in warnings_of(none))
